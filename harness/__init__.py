@@ -1,0 +1,1 @@
+"""The test harness around the simulated plant."""

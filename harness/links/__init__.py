@@ -1,0 +1,1 @@
+"""Links to the outside: registers and codecs, Modbus, OPC UA."""
