@@ -11,7 +11,7 @@ import hashlib
 import os
 import sys
 from pathlib import Path
-from typing import TYPE_CHECKING, TypeVar
+from typing import TYPE_CHECKING, TypeVar, cast
 
 import numba
 
@@ -43,7 +43,8 @@ def _source_digest() -> str:
     return digest.hexdigest()[:16]
 
 
-numba.config.CACHE_DIR = str(_user_cache() / f"kernels-{_source_digest()}")
+# The configuration module is filled at run time, so that its names are unknown to the type checker.
+setattr(numba.config, "CACHE_DIR", str(_user_cache() / f"kernels-{_source_digest()}"))  # noqa: B010
 
 
 def kernel(function: _Function) -> _Function:
@@ -62,5 +63,4 @@ def kernel(function: _Function) -> _Function:
     callable
         The same function, compiled.
     """
-    compiled: _Function = numba.njit(cache=True, fastmath=False, nogil=True)(function)
-    return compiled
+    return cast("_Function", numba.njit(cache=True, fastmath=False, nogil=True)(function))
