@@ -20,7 +20,7 @@ if TYPE_CHECKING:
 
 _Function = TypeVar("_Function", bound="Callable[..., object]")
 
-_KERNEL_FOLDERS = ("plants", "harness/controllers", "harness/engine")
+_KERNEL_FOLDERS = ("plants", "harness/controllers", "harness/engine", "harness/analysis")
 
 
 def _user_cache() -> Path:

@@ -1,0 +1,189 @@
+"""Names of every place in the state, parameter and table arrays of a plant.
+
+One float64 array holds all that changes, one float64 array all that does not, one int64 array
+the connections. The first entries of the table are the counts and offsets that a kernel needs
+to find its way; the harness appends its own places behind the plant's.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+# Header of the table: counts and seed.
+N_VESSELS = 0
+N_VALVES = 1
+N_ORIFICES = 2
+N_OVERFLOWS = 3
+N_TRANSMITTERS = 4
+N_LOOPS = 5
+SEED = 6
+# Header of the table: offsets into the state.
+AT_TOTALS = 8
+AT_COMMAND = 9
+AT_RAMP = 10
+AT_TRAVEL = 11
+AT_FLOW = 12
+AT_DAMPED = 13
+AT_TRUE = 14
+AT_CURRENT = 15
+AT_QUALITY = 16
+AT_FORCED = 17
+PLANT_STATE = 18  # length of the plant's part of the state
+# Header of the table: offsets into the parameters.
+AT_VESSEL_PARAMETERS = 20
+AT_VALVE_PARAMETERS = 21
+AT_ORIFICE_PARAMETERS = 22
+AT_OVERFLOW_PARAMETERS = 23
+AT_TRANSMITTER_PARAMETERS = 24
+PLANT_PARAMETERS = 25
+# Header of the table: offsets into the table itself.
+AT_VALVE_LINKS = 28
+AT_ORIFICE_LINKS = 29
+AT_OVERFLOW_LINKS = 30
+AT_TRANSMITTER_LINKS = 31
+PLANT_TABLE = 32
+# Header of the table: left to the harness, see its engine.
+HARNESS_HEADER = 36
+HEADER = 48
+
+# Totals, integrated with the volumes [m3].
+TOTAL_IN = 0
+TOTAL_OUT = 1
+TOTAL_SPILLED = 2
+N_TOTALS = 3
+
+# Parameters of the plant as a whole.
+TICK = 0  # [s]
+N_PLANT_PARAMETERS = 4
+
+# Parameters of a vessel.
+AREA = 0  # [m2]
+VESSEL_STRIDE = 2
+
+# Parameters of a valve.
+KV = 0  # [m3/h at 1 bar]
+RANGEABILITY = 1  # [-]
+LINE_KV = 2  # [m3/h at 1 bar]; 0 for no line
+STROKE_TIME = 3  # [s]
+LAG = 4  # [s]
+PRESSURE_DROP = 5  # [Pa]
+DENSITY = 6  # [kg/m3]
+HALF_DECAY = 7  # exp(-tick / 2 / lag) [-]
+VALVE_STRIDE = 8
+
+# Parameters of an orifice.
+ORIFICE_COEFFICIENT = 0  # [m2.5/s]
+ORIFICE_STRIDE = 1
+
+# Parameters of an overflow.
+WEIR_COEFFICIENT = 0  # [m1.5/s]
+CREST = 1  # [m]
+CAUGHT_FRACTION = 2  # [-]
+OVERFLOW_STRIDE = 3
+
+# Parameters of a transmitter.
+SCALE = 0  # [fraction of span per m or m3/s]
+OFFSET = 1  # [fraction of span]
+DAMPING = 2  # [s]
+NOISE = 3  # [fraction of span]
+RESOLUTION = 4  # [fraction of span]
+WEIGHT_DECAY = 5  # weights for a whole tick, see transmitter.damping_weights [-]
+WEIGHT_START = 6
+WEIGHT_MIDDLE = 7
+WEIGHT_END = 8
+TRANSMITTER_STRIDE = 9
+
+# Table of a valve, an orifice, an overflow, a transmitter.
+VALVE_DESTINATION = 0
+VALVE_CHARACTERISTIC = 1
+VALVE_LINKS = 2
+ORIGIN = 0
+DESTINATION = 1  # -1 leaves the rig
+PATH_LINKS = 2
+KIND = 0
+SUBJECT = 1
+STREAM = 2
+TRANSMITTER_LINKS = 3
+
+MEASURES_LEVEL = 0
+MEASURES_VALVE_FLOW = 1
+MEASURES_ORIFICE_FLOW = 2
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Counts:
+    """How many parts of each kind a plant has.
+
+    Parameters
+    ----------
+    vessels, valves, orifices, overflows, transmitters : int
+        Numbers of parts [-].
+    """
+
+    vessels: int
+    valves: int
+    orifices: int
+    overflows: int
+    transmitters: int
+
+    def state_offsets(self) -> dict[int, int]:
+        """Return the entries of the table's header that point into the state."""
+        order = (
+            (AT_TOTALS, self.vessels),
+            (AT_COMMAND, N_TOTALS),
+            (AT_RAMP, self.valves),
+            (AT_TRAVEL, self.valves),
+            (AT_FLOW, self.valves),
+            (AT_DAMPED, self.valves),
+            (AT_TRUE, self.transmitters),
+            (AT_CURRENT, self.transmitters),
+            (AT_QUALITY, self.transmitters),
+            (AT_FORCED, self.transmitters),
+            (PLANT_STATE, self.transmitters),
+        )
+        return _running(order, 0)
+
+    def parameter_offsets(self) -> dict[int, int]:
+        """Return the entries of the table's header that point into the parameters."""
+        order = (
+            (AT_VESSEL_PARAMETERS, 0),
+            (AT_VALVE_PARAMETERS, self.vessels * VESSEL_STRIDE),
+            (AT_ORIFICE_PARAMETERS, self.valves * VALVE_STRIDE),
+            (AT_OVERFLOW_PARAMETERS, self.orifices * ORIFICE_STRIDE),
+            (AT_TRANSMITTER_PARAMETERS, self.overflows * OVERFLOW_STRIDE),
+            (PLANT_PARAMETERS, self.transmitters * TRANSMITTER_STRIDE),
+        )
+        return _running(order, N_PLANT_PARAMETERS)
+
+    def table_offsets(self) -> dict[int, int]:
+        """Return the entries of the table's header that point into the table."""
+        order = (
+            (AT_VALVE_LINKS, 0),
+            (AT_ORIFICE_LINKS, self.valves * VALVE_LINKS),
+            (AT_OVERFLOW_LINKS, self.orifices * PATH_LINKS),
+            (AT_TRANSMITTER_LINKS, self.overflows * PATH_LINKS),
+            (PLANT_TABLE, self.transmitters * TRANSMITTER_LINKS),
+        )
+        return _running(order, HEADER)
+
+    def work_size(self) -> int:
+        """Return the length of the scratch array of the stepper."""
+        integrated = self.vessels + N_TOTALS
+        return (
+            5 * integrated
+            + self.vessels
+            + 3 * self.valves
+            + self.transmitters
+            + self.vessels
+            + self.state_offsets()[PLANT_STATE]
+        )
+
+
+def _running(order: tuple[tuple[int, int], ...], start: int) -> dict[int, int]:
+    """Return each place's offset, given the length of what stands before it."""
+    offsets = {}
+    at = start
+    for place, length_before in order:
+        at += length_before
+        offsets[place] = at
+    return offsets
