@@ -40,7 +40,7 @@ def block_scan(
     bad : bool
         Whether the process variable's quality is bad.
     mode : int
-        MANUAL or AUTOMATIC.
+        MANUAL or AUTOMATIC [-].
     manual_output : float
         Output in manual [-].
     gain : float
@@ -56,7 +56,7 @@ def block_scan(
     integral, output : float
         State: integral part and last output [-].
     held : int
-        State: 1 after a scan with a bad input.
+        State: 1 after a scan with a bad input [-].
 
     Returns
     -------
@@ -65,7 +65,7 @@ def block_scan(
     integral : float
         New integral part [-].
     held : int
-        New hold flag.
+        New hold flag [-].
     """
     if bad and mode == AUTOMATIC:
         return output, integral, 1

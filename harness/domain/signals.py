@@ -102,7 +102,7 @@ class Exchange:
     peer : str
         ``host:port`` of the other end, or the session's name.
     connection : int
-        Number of the connection, unique within the link and the run.
+        Number of the connection, unique within the link and the run [-].
     function : str
         ``"FC16"``, ``"Write"``, ...
     address : str

@@ -104,7 +104,8 @@ class PhaseCurves:
     setpoint, measured, transmitted, predicted_linear, predicted_nonlinear : ndarray, shape (n,)
         Process variable and setpoint, in the unit of the process variable.
     design_target : ndarray, shape (n,), or None
-        The transfer function asked for; shown, never scored.
+        The transfer function asked for, in the unit of the process variable; shown, never
+        scored.
     output, output_predicted : ndarray, shape (n,)
         Controller output, measured and of the nonlinear prediction [-].
     load : ndarray, shape (n,)
