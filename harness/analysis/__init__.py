@@ -1,0 +1,1 @@
+"""Prediction, metrics and verdicts."""
