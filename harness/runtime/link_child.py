@@ -1,0 +1,248 @@
+"""The inside of the link process: one event loop with every link of the rig."""
+
+from __future__ import annotations
+
+import asyncio
+import signal
+import threading
+from contextlib import AsyncExitStack, suppress
+from dataclasses import dataclass
+from typing import TYPE_CHECKING, Protocol
+
+from harness.domain.rig import ModbusServerLink, OpcUaServerLink
+from harness.errors import DryrigError
+from harness.runtime.clock import NS_PER_S, PacedClock
+from harness.runtime.image import ImageReader
+from harness.runtime.news import NewsBox
+
+if TYPE_CHECKING:
+    from collections.abc import Sequence
+    from multiprocessing.connection import Connection
+
+    from harness.domain.signals import Point
+    from harness.links.port import ImageSource
+
+_QUIET_S = 0.010  # reads are condensed for this long [s]
+_LAST_WORDS_S = 4.0  # longest wait for the last news to go out [s]
+# Between two looks at the image for a new tick: often enough to be a small part of any tick,
+# seldom enough to cost nothing when the ticks stand still.
+_SHORTEST_PAUSE_S = 0.002
+_LONGEST_PAUSE_S = 0.020
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class LinkSetup:
+    """What the link process is started with.
+
+    Parameters
+    ----------
+    links : tuple of ModbusServerLink or OpcUaServerLink
+        The links to open.
+    points : tuple of Point
+        The points of the rig, in the order of the image.
+    rig_name : str
+        Name of the rig.
+    image : str
+        Name of the shared image.
+    """
+
+    links: tuple[ModbusServerLink | OpcUaServerLink, ...]
+    points: tuple[Point, ...]
+    rig_name: str
+    image: str
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class LinksOpen:
+    """First message up: every link is open.
+
+    Parameters
+    ----------
+    addresses : dict of str to tuple of str and int
+        Host and port that each link has, by its name.
+    """
+
+    addresses: dict[str, tuple[str, int]]
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class LinksFailed:
+    """Last message up: the links cannot be opened or kept.
+
+    Parameters
+    ----------
+    text : str
+        Why.
+    """
+
+    text: str
+
+
+class LinkServer(Protocol):
+    """What the link process asks of a server."""
+
+    @property
+    def address(self) -> tuple[str, int]:
+        """Return host and port of the listening socket."""
+        ...
+
+    async def start(self) -> None:
+        """Open the link; raises LinkError."""
+        ...
+
+    async def stop(self) -> None:
+        """Close the link."""
+        ...
+
+
+class PublishingServer(LinkServer, Protocol):
+    """A server that has to be told of a new image."""
+
+    async def publish(self) -> None:
+        """Show the latest image."""
+        ...
+
+
+def run_links(setup: LinkSetup, up: Connection, down: Connection) -> None:
+    """Serve the links until the parent says so or is gone; the body of the process.
+
+    Parameters
+    ----------
+    setup : LinkSetup
+        What to serve.
+    up : Connection
+        Pipe to the parent: `LinksOpen` or `LinksFailed`, then `LinkNews`.
+    down : Connection
+        Pipe from the parent; anything on it, and its end, asks to stop.
+    """
+    # Ctrl-C goes to every process of a terminal; the parent decides when the links close.
+    signal.signal(signal.SIGINT, signal.SIG_IGN)
+    if hasattr(signal, "SIGBREAK"):
+        signal.signal(signal.SIGBREAK, signal.SIG_IGN)
+    try:
+        asyncio.run(_serve(setup, up, down))
+    except DryrigError as error:
+        _tell(up, LinksFailed(text=str(error)))
+    except BaseException as error:
+        _tell(up, LinksFailed(text=f"link process: {error!r}; this is a defect of the program"))
+        raise
+
+
+def _tell(up: Connection, message: object) -> None:
+    try:
+        up.send(message)
+    except OSError:  # the parent is gone, nobody is there to read it
+        return
+
+
+async def _serve(setup: LinkSetup, up: Connection, down: Connection) -> None:
+    clock = PacedClock()
+    image = ImageReader(setup.image)
+    box = NewsBox(clock.now_ns)
+    stop = asyncio.Event()
+    async with AsyncExitStack() as closing:
+        closing.callback(image.close)
+        sender = threading.Thread(target=_send, args=(box, image, up), daemon=True)
+        closing.push_async_callback(_finish, box, sender)
+        servers: dict[str, LinkServer] = {}
+        publishers: list[PublishingServer] = []
+        for link in setup.links:
+            server = _make(link, setup, image, box, clock, publishers)
+            closing.push_async_callback(server.stop)
+            await server.start()
+            servers[link.name] = server
+        _tell(up, LinksOpen(addresses={name: each.address for name, each in servers.items()}))
+        sender.start()
+        _listen(down, stop)
+        await _until_stopped(stop, publishers, image, clock)
+
+
+async def _finish(box: NewsBox, sender: threading.Thread) -> None:
+    """Send what is left in the box, after the servers have closed."""
+    box.close()
+    if sender.is_alive():
+        await asyncio.to_thread(sender.join, _LAST_WORDS_S)
+
+
+def _make(
+    link: ModbusServerLink | OpcUaServerLink,
+    setup: LinkSetup,
+    image: ImageReader,
+    box: NewsBox,
+    clock: PacedClock,
+    publishers: list[PublishingServer],
+) -> LinkServer:
+    """Make the server of a link; the libraries are loaded only where a link needs them."""
+    match link:
+        case ModbusServerLink():
+            from harness.links.modbus.server import ModbusServer  # noqa: PLC0415
+
+            return ModbusServer(link, setup.points, image, box, clock.now_ns)
+        case OpcUaServerLink():
+            from harness.links.opcua.server import OpcUaServer  # noqa: PLC0415
+
+            server = OpcUaServer(link, setup.points, image, box, clock.now_ns, setup.rig_name)
+            publishers.append(server)
+            return server
+
+
+def _listen(down: Connection, stop: asyncio.Event) -> None:
+    """Set the event when the parent asks to stop, or is gone."""
+    loop = asyncio.get_running_loop()
+
+    def wait_for_word() -> None:
+        with suppress(EOFError, OSError):  # the parent's end of the pipe closes with it
+            down.recv_bytes()
+        if not loop.is_closed():
+            loop.call_soon_threadsafe(stop.set)
+
+    threading.Thread(target=wait_for_word, daemon=True).start()
+
+
+def _send(box: NewsBox, image: ImageReader, up: Connection) -> None:
+    """Send news on until the box is closed; the body of a thread, which alone may block."""
+    messages = 0
+    while (news := box.wait(_QUIET_S)) is not None:
+        messages += 1
+        image.tell_news(
+            messages
+        )  # before it is sent: a long message passes only while it is read
+        try:
+            up.send(news)
+        except OSError:  # the parent is gone; the other pipe says so as well
+            return
+
+
+async def _until_stopped(
+    stop: asyncio.Event,
+    publishers: Sequence[PublishingServer],
+    image: ImageSource,
+    clock: PacedClock,
+) -> None:
+    async with asyncio.TaskGroup() as tasks:
+        publishing = (
+            tasks.create_task(_publish(publishers, image, clock)) if publishers else None
+        )
+        await stop.wait()
+        if publishing is not None:
+            publishing.cancel()
+
+
+async def _publish(
+    publishers: Sequence[PublishingServer], image: ImageSource, clock: PacedClock
+) -> None:
+    """Show each new image on the servers that must be told; images in between are skipped."""
+    shown = -1
+    changed_ns = clock.now_ns()
+    while True:
+        tick = image.tick()
+        now_ns = clock.now_ns()
+        since_s = (now_ns - changed_ns) / NS_PER_S
+        if tick == shown:
+            pause = since_s / 8
+        else:
+            shown, changed_ns = tick, now_ns
+            for publisher in publishers:
+                await publisher.publish()
+            pause = since_s * 3 / 4
+        await asyncio.sleep(min(max(pause, _SHORTEST_PAUSE_S), _LONGEST_PAUSE_S))
