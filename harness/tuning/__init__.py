@@ -1,0 +1,1 @@
+"""Models from traces, settings from models: identification, reduction, synthesis, margins."""

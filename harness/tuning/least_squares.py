@@ -1,0 +1,279 @@
+"""Output-error least squares over the shape of a lag model; gain, level and drift drop out.
+
+What enters the output linearly is solved for at every trial of the shape (variable projection:
+G. H. Golub and V. Pereyra, SIAM J. Numer. Anal. 10:413, 1973; the Jacobian is L. Kaufman's
+simplification, BIT 15:49, 1975).
+"""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+from typing import TYPE_CHECKING
+
+import numpy as np
+
+from harness.domain.models import LagModel
+from harness.tuning.response import held_step, unit_response
+
+if TYPE_CHECKING:
+    from collections.abc import Callable
+
+    from numpy.typing import NDArray
+
+    Array = NDArray[np.float64]
+    Shape = tuple[float, float, float]  # first lag, second lag, dead time [s]
+
+_DIFFERENCE = 1e-6  # relative step of a forward difference; the response is exact to 1e-14
+_ITERATIONS = 60
+_LARGEST_DAMPING = 1e10
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Problem:
+    """A record to fit.
+
+    Parameters
+    ----------
+    change : ndarray, shape (n + 1,)
+        Input as deviation from its first value, the last one repeated [fraction of output].
+    output : ndarray, shape (n,)
+        Output, nuisance terms projected out [fraction of PV span].
+    nuisance : ndarray, shape (m, n)
+        Orthonormal rows: constant level, and drift where it is fitted [-].
+    tick : float
+        Spacing of the rows [s].
+    advance : float
+        Extra delay by which the model is computed and then read one row later, so that an
+        average over a block is matched at the middle of the block; 0 for single samples [s].
+    """
+
+    change: Array
+    output: Array
+    nuisance: Array
+    tick: float
+    advance: float
+
+    def response(self, shape: Shape) -> Array:
+        """Return the unit-gain response of a shape, nuisance terms projected out."""
+        model = LagModel(gain=1.0, time_constants=shape[:2], dead_time=shape[2] + self.advance)
+        raw = unit_response(held_step(model, self.tick), self.change)
+        raw = raw[1:] if self.advance > 0.0 else raw[:-1]
+        return raw - (self.nuisance @ raw) @ self.nuisance
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Frame:
+    """Coordinates of the shape for one search, each within its bounds.
+
+    Parameters
+    ----------
+    shape : callable
+        From coordinates to first lag, second lag and dead time.
+    low, high : ndarray, shape (k,)
+        Bounds; equal bounds fix a coordinate.
+    gain : float or None
+        Gain held fixed, or None to solve for it.
+    """
+
+    shape: Callable[[Array], Shape]
+    low: Array
+    high: Array
+    gain: float | None = None
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Solution:
+    """Where a search ended.
+
+    Parameters
+    ----------
+    coordinates : ndarray, shape (k,)
+        Coordinates in the frame.
+    shape : tuple of float
+        First lag, second lag, dead time [s].
+    gain : float
+        Gain [fraction of PV span per fraction of output].
+    residuals : ndarray, shape (n,)
+        Measured minus model [fraction of PV span].
+    cost : float
+        Sum of the squares of the residuals.
+    deviations : ndarray, shape (k,)
+        Standard deviations of the coordinates from the Jacobian, at unit noise.
+    """
+
+    coordinates: Array
+    shape: Shape
+    gain: float
+    residuals: Array
+    cost: float
+    deviations: Array
+
+
+def unit_frame(order: int, longest: float) -> Frame:
+    """Return the frame in which the well-determined sum comes first.
+
+    Coordinates: total lag, dead time over total lag, and 4 tau1 tau2 / (tau1 + tau2)^2. The
+    last is smooth where the two lags meet, which the lags themselves are not.
+
+    Parameters
+    ----------
+    order : int
+        1 or 2 lags [-].
+    longest : float
+        Longest total lag looked at [s].
+
+    Returns
+    -------
+    Frame
+        Frame.
+    """
+    return Frame(
+        shape=lambda x: split(x[0] * (1.0 - x[1]), x[2], x[0] * x[1]),
+        low=np.array([1e-6 * longest, 0.0, 0.0]),
+        high=np.array([longest, 0.999, 1.0 if order > 1 else 0.0]),
+    )
+
+
+def split(lags: float, evenness: float, dead_time: float) -> Shape:
+    """Return two lags from their sum and evenness, and the dead time.
+
+    Parameters
+    ----------
+    lags : float
+        tau1 + tau2 [s].
+    evenness : float
+        4 tau1 tau2 / (tau1 + tau2)^2, 0 for a single lag and 1 for equal ones [-].
+    dead_time : float
+        Dead time [s].
+
+    Returns
+    -------
+    tuple of float
+        First lag, second lag, dead time [s].
+    """
+    root = math.sqrt(max(1.0 - evenness, 0.0))
+    return 0.5 * lags * (1.0 + root), 0.5 * lags * evenness / (1.0 + root), dead_time
+
+
+def evenness_of(shape: Shape) -> float:
+    """Return 4 tau1 tau2 / (tau1 + tau2)^2 of a shape [-].
+
+    Parameters
+    ----------
+    shape : tuple of float
+        First lag, second lag, dead time [s].
+
+    Returns
+    -------
+    float
+        Evenness [-].
+    """
+    total = shape[0] + shape[1]
+    return 4.0 * shape[0] * shape[1] / total**2 if total > 0.0 else 0.0
+
+
+def search(problem: Problem, frame: Frame, start: Array, tolerance: float) -> Solution:
+    """Minimise the squared residuals by damped Gauss-Newton steps within bounds.
+
+    Parameters
+    ----------
+    problem : Problem
+        Record.
+    frame : Frame
+        Coordinates and bounds.
+    start : ndarray, shape (k,)
+        Start; moved inside the bounds if it is not.
+    tolerance : float
+        A step that can win less than this share of the cost is the last [-].
+
+    Returns
+    -------
+    Solution
+        The minimum found.
+    """
+    x = np.clip(np.asarray(start, dtype=np.float64), frame.low, frame.high)
+    gain, residuals, unit = _evaluate(problem, frame, x)
+    cost, damping = float(residuals @ residuals), 1e-3
+    normal = np.eye(x.size)
+    for _ in range(_ITERATIONS):
+        jacobian = _jacobian(problem, frame, x, gain, unit)
+        gradient, normal = jacobian @ residuals, jacobian @ jacobian.T
+        free = _free(frame, x, gradient)
+        if not free.any() or cost == 0.0:
+            break
+        trial_cost, promised = cost, 0.0
+        while damping < _LARGEST_DAMPING:
+            step = _step(normal, gradient, free, damping)
+            trial = np.clip(x + step, frame.low, frame.high)
+            moved = trial - x
+            promised = float(2.0 * gradient @ moved - moved @ normal @ moved)
+            if promised <= 0.1 * tolerance * cost:
+                break
+            trial_gain, trial_residuals, trial_unit = _evaluate(problem, frame, trial)
+            trial_cost = float(trial_residuals @ trial_residuals)
+            if trial_cost < cost:
+                x, gain, residuals, unit = trial, trial_gain, trial_residuals, trial_unit
+                damping = max(0.1 * damping, 1e-12)
+                break
+            damping *= 10.0
+        if cost - trial_cost <= tolerance * cost:
+            cost = min(cost, trial_cost)
+            break
+        cost = trial_cost
+    return Solution(
+        coordinates=x,
+        shape=_plain(frame.shape(x)),
+        gain=gain,
+        residuals=residuals,
+        cost=cost,
+        deviations=np.sqrt(np.maximum(np.diag(np.linalg.pinv(normal)), 0.0)),
+    )
+
+
+def _evaluate(problem: Problem, frame: Frame, x: Array) -> tuple[float, Array, Array]:
+    """Return gain, residuals and projected unit response at one point."""
+    unit = problem.response(frame.shape(x))
+    energy = float(unit @ unit)
+    gain = frame.gain
+    if gain is None:
+        gain = float(unit @ problem.output) / energy if energy > 0.0 else 0.0
+    return gain, problem.output - gain * unit, unit
+
+
+def _jacobian(problem: Problem, frame: Frame, x: Array, gain: float, unit: Array) -> Array:
+    """Return the derivative of the model by each coordinate, the gain's part projected out."""
+    rows = np.zeros((x.size, unit.size))
+    energy = float(unit @ unit)
+    for i in range(x.size):
+        width = frame.high[i] - frame.low[i]
+        if width <= 0.0:
+            continue
+        size = _DIFFERENCE * min(max(abs(x[i]), 1e-3 * width), width)
+        size = size if x[i] + size <= frame.high[i] else -size
+        moved = x.copy()
+        moved[i] += size
+        rows[i] = gain * (problem.response(frame.shape(moved)) - unit) / (moved[i] - x[i])
+    if frame.gain is None and energy > 0.0:
+        rows -= np.outer(rows @ unit / energy, unit)
+    return rows
+
+
+def _plain(shape: Shape) -> Shape:
+    """Return a shape of Python floats."""
+    return float(shape[0]), float(shape[1]), float(shape[2])
+
+
+def _free(frame: Frame, x: Array, gradient: Array) -> NDArray[np.bool_]:
+    """Return which coordinates may move: not fixed, and not pressed against a bound."""
+    pressed = ((x <= frame.low) & (gradient < 0.0)) | ((x >= frame.high) & (gradient > 0.0))
+    return (frame.high > frame.low) & ~pressed
+
+
+def _step(normal: Array, gradient: Array, free: NDArray[np.bool_], damping: float) -> Array:
+    """Return the damped step of the free coordinates."""
+    step = np.zeros(gradient.size)
+    some = normal[np.ix_(free, free)]
+    scale = np.diag(some) + 1e-300
+    step[free] = np.linalg.solve(some + damping * np.diag(scale), gradient[free])
+    return step
