@@ -1,0 +1,307 @@
+"""Sessions of the OPC UA server: who may come in, what they may do, and who hears of it."""
+
+from __future__ import annotations
+
+import asyncio
+import itertools
+import secrets
+import uuid
+from dataclasses import dataclass, field
+from typing import TYPE_CHECKING, Any
+
+from asyncua import ua
+from asyncua.common.utils import ServiceError
+from asyncua.crypto.permission_rules import User, UserRole
+from asyncua.server.internal_server import InternalServer
+from asyncua.server.internal_session import InternalSession, SessionState
+from asyncua.server.user_managers import UserManager
+from asyncua.ua.attribute_ids import AttributeIds
+from asyncua.ua.status_codes import StatusCodes
+
+from harness.domain.signals import Exchange
+from harness.links.opcua.terms import GOOD, node_id, status, status_name
+
+if TYPE_CHECKING:
+    from collections.abc import Callable, Iterable, Iterator, Sequence
+
+    from harness.links.opcua.board import Board
+    from harness.links.port import ExchangeSink
+
+_NOBODY = User(role=UserRole.Anonymous)
+_TOKEN_BYTES = 32  # 256 random bits, as the standard asks of a nonce (OPC 10000-4, 5.7.2)
+_SHORTEST_PUBLISHING_MS = 10.0  # the shortest tick of a rig; 0 would send a tick in pieces
+_TEXT_LENGTH = 400  # of a refusal, so that no peer fills the record [characters]
+
+
+class LoopbackUsers(UserManager):
+    """Let anonymous clients in, and nobody by name: the server listens on loopback only.
+
+    The library's own user manager gives every right to a user called admin, whatever the
+    password.
+    """
+
+    def get_user(
+        self,
+        iserver: InternalServer,
+        username: str | None = None,
+        password: str | None = None,
+        certificate: Any = None,
+    ) -> User | None:
+        """Return an ordinary user for an anonymous client, and None, a refusal, for others."""
+        if username is None and password is None and not certificate:
+            return User(role=UserRole.User, name="anonymous")
+        return None
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Desk:
+    """What all sessions of one link share.
+
+    Parameters
+    ----------
+    link : str
+        Name of the link.
+    board : Board
+        The values shown.
+    sink : ExchangeSink
+        Who hears of what clients do.
+    now_ns : callable
+        Returns the time for arrival stamps [ns].
+    connections : iterator of int
+        Numbers for connections, each once.
+    """
+
+    link: str
+    board: Board
+    sink: ExchangeSink
+    now_ns: Callable[[], int]
+    connections: Iterator[int] = field(default_factory=lambda: itertools.count(1))
+
+
+class RigSession(InternalSession):
+    """A client's session: it judges writes item by item and tells the sink.
+
+    Only requests that touch the rig's points count as activity, and those that ask for the
+    next notification: client libraries read the server's state by themselves to keep a session
+    alive, also when the controller above them has stopped.
+    """
+
+    def __init__(self, desk: Desk, iserver: InternalServer, peer: str, user: User) -> None:
+        super().__init__(iserver, iserver.aspace, iserver.subscription_service, peer, user=user)
+        # The library counts its ids up from a known number, so that any peer could guess the
+        # token and take a session over. It is registered under the random one only.
+        self.session_id = node_id(uuid.uuid4(), 1)
+        self.auth_token = node_id(secrets.token_bytes(_TOKEN_BYTES), 0)
+        self.external = True
+        iserver.register_external_session(self)
+        self._desk = desk
+        self._connection = next(desk.connections)
+        self._image_tick = -1
+
+    def activate_session(
+        self, params: ua.ActivateSessionParameters, peer_certificate: bytes | None
+    ) -> ua.ActivateSessionResult:
+        """Let the client in, or say who was refused."""
+        first = self.state is SessionState.Created
+        try:
+            result = super().activate_session(params, peer_certificate)
+        except (ServiceError, ua.uaerrors.UaStatusCodeError) as error:
+            self._refuse(f"log-in refused: {status_name(error.code)}")
+            raise
+        for subscription in self._own_subscriptions():  # taken over on a new connection
+            subscription.pub_result_callback = self._noting(subscription.pub_result_callback)
+        if first:
+            self._desk.sink.connection(self._desk.link, self._connection, self.name, True)
+        return result
+
+    async def close_session(self, delete_subs: bool = True) -> None:
+        """Close the session and tell the sink once."""
+        was_active = self.state is SessionState.Activated
+        await super().close_session(delete_subs)
+        if was_active:
+            self._desk.sink.connection(self._desk.link, self._connection, self.name, False)
+
+    async def read(self, params: ua.ReadParameters) -> list[ua.DataValue]:
+        """Answer a Read and remember which tick the client saw."""
+        arrival_ns = self._desk.now_ns()
+        results = await super().read(params)
+        if any(
+            item.AttributeId == AttributeIds.Value and self._desk.board.shows(item.NodeId)
+            for item in params.NodesToRead
+        ):
+            self._image_tick = self._desk.board.tick
+            self._note_activity(arrival_ns)
+        return results
+
+    async def write(self, params: ua.WriteParameters) -> list[ua.StatusCode]:
+        """Judge each item by itself, pass the good ones on together, and answer for each."""
+        arrival_ns = self._desk.now_ns()
+        judged = [(item, self._desk.board.judge(item)) for item in params.NodesToWrite]
+        taken = [item for item, code in judged if code == GOOD]
+        if taken:
+            self._desk.sink.writes([self._exchange(item, arrival_ns) for item in taken])
+            self._note_activity(arrival_ns)
+        for item in taken:
+            await self._desk.board.take(item)
+        refused = [
+            f"{item.NodeId.to_string()} = {_text(item)}: {status_name(code)}"
+            for item, code in judged
+            if code != GOOD
+        ]
+        if refused:
+            self._refuse(f"Write refused: {'; '.join(refused)}")
+        return [status(code) for _, code in judged]
+
+    def publish(
+        self, acks: Iterable[ua.SubscriptionAcknowledgement] | None = None
+    ) -> tuple[int, list[ua.StatusCode]]:
+        """Take a client's request for the next notification, which shows that it is there."""
+        answer = super().publish(acks)
+        self._note_activity(self._desk.now_ns())
+        return answer
+
+    async def create_subscription(
+        self,
+        params: ua.CreateSubscriptionParameters,
+        callback: Callable[..., Any],
+        request_callback: Callable[..., Any] | None = None,
+    ) -> ua.CreateSubscriptionResult:
+        """Create a subscription that is never faster than the shortest tick."""
+        # Written this way round, NaN ends at the shortest interval too.
+        params.RequestedPublishingInterval = max(
+            _SHORTEST_PUBLISHING_MS, params.RequestedPublishingInterval
+        )
+        return await super().create_subscription(
+            params, self._noting(callback), request_callback
+        )
+
+    async def transfer_subscriptions(  # type: ignore[override]  # the library's server side differs from its interface in the same way
+        self, params: ua.TransferSubscriptionsParameters, callback: Callable[..., Any]
+    ) -> list[ua.TransferResult]:
+        """Take over subscriptions of an earlier session."""
+        return await super().transfer_subscriptions(params, self._noting(callback))
+
+    async def create_monitored_items(
+        self, params: ua.CreateMonitoredItemsParameters
+    ) -> list[ua.MonitoredItemCreateResult]:
+        """Create items; refuse those with a deadband.
+
+        The library's deadband fails on a value without a number, so that a client would not
+        hear of a failed sensor, and it compares with the last sample instead of the last one
+        sent.
+        """
+        plain = [item for item in params.ItemsToCreate if not _has_deadband(item)]
+        wanted, params.ItemsToCreate = params.ItemsToCreate, plain
+        results = iter(await super().create_monitored_items(params))
+        return [
+            ua.MonitoredItemCreateResult(StatusCode=_filter_refused())
+            if _has_deadband(item)
+            else next(results)
+            for item in wanted
+        ]
+
+    async def modify_monitored_items(
+        self, params: ua.ModifyMonitoredItemsParameters
+    ) -> list[ua.MonitoredItemModifyResult]:
+        """Modify items; refuse a deadband as at creation."""
+        plain = [item for item in params.ItemsToModify if not _has_deadband(item)]
+        wanted, params.ItemsToModify = params.ItemsToModify, plain
+        results = iter(await super().modify_monitored_items(params))
+        return [
+            ua.MonitoredItemModifyResult(StatusCode=_filter_refused())
+            if _has_deadband(item)
+            else next(results)
+            for item in wanted
+        ]
+
+    def _own_subscriptions(self) -> Sequence[Any]:
+        everyone = self.subscription_service.subscriptions.values()
+        return [one for one in everyone if one.session_id == self.session_id]
+
+    def _noting(self, deliver: Callable[..., Any]) -> Callable[..., Any]:
+        """Return the same delivery, which also notes the tick that the client gets to see."""
+
+        async def deliver_and_note(result: ua.PublishResult, *rest: Any) -> None:
+            if result.NotificationMessage.NotificationData:
+                self._image_tick = self._desk.board.tick
+            await deliver(result, *rest)
+
+        return deliver_and_note
+
+    def _exchange(self, item: ua.WriteValue, arrival_ns: int) -> Exchange:
+        value = item.Value.Value.Value
+        return Exchange(
+            link=self._desk.link,
+            arrival_ns=arrival_ns,
+            peer=self.name,
+            connection=self._connection,
+            function="Write",
+            address=item.NodeId.to_string(),
+            point=self._desk.board.plan(item.NodeId).name,
+            value=float(value),
+            raw=repr(value),
+            image_tick=self._image_tick,
+        )
+
+    def _note_activity(self, arrival_ns: int) -> None:
+        self._desk.sink.activity(
+            self._desk.link, self._connection, self.name, self._image_tick, arrival_ns
+        )
+
+    def _refuse(self, text: str) -> None:
+        self._desk.sink.refused(
+            self._desk.link, self._connection, self.name, text[:_TEXT_LENGTH]
+        )
+
+
+class RigInternalServer(InternalServer):
+    """The library's server core, with our users and our sessions."""
+
+    def __init__(self) -> None:
+        super().__init__(user_manager=LoopbackUsers())
+        self.allow_remote_admin = False
+        self._desk: Desk | None = None
+
+    def open_desk(self, desk: Desk) -> None:
+        """Say what sessions share; to be called before the server listens."""
+        self._desk = desk
+
+    def create_session(
+        self, name: object, user: User = _NOBODY, external: bool = False
+    ) -> InternalSession:
+        """Return a session for a new client; ``name`` is the address of its socket."""
+        if self._desk is None:
+            raise ServiceError(StatusCodes.BadServerHalted)
+        return RigSession(self._desk, self, _peer_text(name), user)
+
+    async def stop(self) -> None:
+        """Stop at once: the library would let its clock sleep its second out."""
+        if self.time_task is not None:
+            self.time_task.cancel()
+            await asyncio.wait((self.time_task,))
+            self.time_task = None
+        await super().stop()
+
+
+def _peer_text(name: object) -> str:
+    match name:
+        case (str(host), int(port), *_):
+            return f"[{host}]:{port}" if ":" in host else f"{host}:{port}"
+        case _:
+            return str(name)
+
+
+def _has_deadband(item: ua.MonitoredItemCreateRequest | ua.MonitoredItemModifyRequest) -> bool:
+    wanted = item.RequestedParameters.Filter
+    return (
+        isinstance(wanted, ua.DataChangeFilter) and wanted.DeadbandType != ua.DeadbandType.None_
+    )
+
+
+def _filter_refused() -> ua.StatusCode:
+    return status(StatusCodes.BadMonitoredItemFilterUnsupported)
+
+
+def _text(item: ua.WriteValue) -> str:
+    variant = item.Value.Value
+    return "nothing" if variant is None else f"{variant.VariantType.name} {variant.Value!r}"

@@ -1,0 +1,58 @@
+"""The library's words that several modules here need, with types that a checker accepts.
+
+The library annotates its own number types where it takes any number, so that each plain
+``NodeId(884)`` would be an error; the casts for it are all in this module.
+"""
+
+from __future__ import annotations
+
+from typing import TYPE_CHECKING, cast
+
+from asyncua import ua
+from asyncua.ua.status_codes import StatusCodes
+
+from harness.links.opcua.mapping import NodeType
+
+if TYPE_CHECKING:
+    import uuid
+    from datetime import datetime
+
+_VARIANT_TYPES = {
+    NodeType.DOUBLE: ua.VariantType.Double,
+    NodeType.INT32: ua.VariantType.Int32,
+    NodeType.INT64: ua.VariantType.Int64,
+}
+
+GOOD: int = StatusCodes.Good
+
+
+def variant_type(data_type: NodeType) -> ua.VariantType:
+    """Return the library's name of a node's data type."""
+    return _VARIANT_TYPES[data_type]
+
+
+def status(code: int) -> ua.StatusCode:
+    """Return a status code of that number."""
+    return ua.StatusCode(cast("ua.UInt32", code))
+
+
+def status_name(code: int) -> str:
+    """Return the standard's name of a status code, e.g. ``"BadOutOfRange"``."""
+    return status(code).name
+
+
+def node_id(identifier: int | str | bytes | uuid.UUID, namespace: int = 0) -> ua.NodeId:
+    """Return a node id; its type follows from the identifier's."""
+    return ua.NodeId(cast("ua.Int32", identifier), cast("ua.Int16", namespace))
+
+
+def data_value(
+    variant: ua.Variant, code: ua.StatusCode, source_stamp: datetime, server_stamp: datetime
+) -> ua.DataValue:
+    """Return a value with its status and both stamps, which must be aware of their zone."""
+    return ua.DataValue(
+        variant,
+        StatusCode=code,
+        SourceTimestamp=cast("ua.DateTime", source_stamp),
+        ServerTimestamp=cast("ua.DateTime", server_stamp),
+    )
