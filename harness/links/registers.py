@@ -111,6 +111,9 @@ class RegisterBank:
         self._bits = _Cells(items, bits=True)
         self._overlays: dict[int, _Overlay] = {}
         self.tick = _NEVER
+        # Replies to reads of the present content, by request: clients that poll flat out ask
+        # the same again and again between two ticks. Emptied whenever the content changes.
+        self.replies: dict[bytes, bytes] = {}
 
     def load(self, snapshot: Snapshot) -> None:
         """Take an image; the same tick again costs nothing.
@@ -129,6 +132,7 @@ class RegisterBank:
             self._show(index, values[point], currents[point], qualities[point])
         self.tick = snapshot.tick
         self._lay_over()
+        self.replies.clear()
 
     def read_registers(self, address: int, count: int) -> bytes:
         """Return registers as bytes in wire order.
@@ -323,6 +327,7 @@ class RegisterBank:
             tick=self.tick, value=value, item=index, raw=raw
         )
         self._show_written(self._point_of[index])
+        self.replies.clear()
         text = raw.decode() if item.encoding is Encoding.BIT else raw.hex().upper()
         return Written(point=item.point, address=item.address, value=value, raw=text)
 

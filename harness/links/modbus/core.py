@@ -46,6 +46,7 @@ _ECHO = (
     5  # function code, address, and value or quantity: what a write is answered with [bytes]
 )
 _BROADCAST, _ANY_UNIT = 0, 255  # for a server that is itself addressed (TCP/IP V1.0b, 4.4.2)
+_REPLIES_MAX = 256  # kept between two ticks; more would be a scanner, not a controller
 _TEXTS_MAX = 256  # different refusals told of for one connection; only a scanner has more
 
 
@@ -179,7 +180,11 @@ class ServerSession:
             bank = self._bank
             if self._image.tick() != bank.tick:
                 bank.load(self._image.read())
-            reply = handler(pdu)
+            reply = bank.replies.get(pdu)
+            if reply is None:
+                reply = handler(pdu)
+            else:
+                self.image_tick = bank.tick
         except (requests.RefusalError, PeerError, LinkError) as error:
             return self._refuse(function, _code_of(error), error)
         self._sink.activity(
@@ -197,15 +202,20 @@ class ServerSession:
 
     def _read_bits(self, pdu: bytes) -> bytes:
         address, count = requests.read_request(pdu, READ_BITS_MAX)
-        packed = self._bank.read_bits(address, count)
-        self.image_tick = self._bank.tick
-        return bytes((pdu[0], len(packed))) + packed
+        return self._show(pdu, self._bank.read_bits(address, count))
 
     def _read_registers(self, pdu: bytes) -> bytes:
         address, count = requests.read_request(pdu, READ_REGISTERS_MAX)
-        data = self._bank.read_registers(address, count)
-        self.image_tick = self._bank.tick
-        return bytes((pdu[0], len(data))) + data
+        return self._show(pdu, self._bank.read_registers(address, count))
+
+    def _show(self, pdu: bytes, content: bytes) -> bytes:
+        """Return the reply to a read, and keep it for as long as the content stands."""
+        bank = self._bank
+        reply = bytes((pdu[0], len(content))) + content
+        self.image_tick = bank.tick
+        if len(bank.replies) < _REPLIES_MAX:
+            bank.replies[pdu] = reply
+        return reply
 
     def _write_coil(self, pdu: bytes) -> bytes:
         address, value = requests.two_fields(pdu)
