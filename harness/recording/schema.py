@@ -65,11 +65,19 @@ def create_statements(columns: Sequence[Column]) -> tuple[str, ...]:
     )
 
 
-def insert_row_statement(columns: Sequence[Column]) -> str:
-    """Return the statement that inserts one tick's row."""
-    # The only variable part is the number of question marks.
-    marks = ", ".join("?" * (len(KEY_COLUMNS) + len(columns)))
-    return f"INSERT INTO trace VALUES ({marks})"  # noqa: S608  nothing but question marks
+def insert_rows_statement(columns: Sequence[Column], rows: int) -> str:
+    """Return the statement that inserts the rows of so many ticks at once.
+
+    Parameters
+    ----------
+    columns : sequence of Column
+        Columns of the trace.
+    rows : int
+        Rows of one execution [-].
+    """
+    one = "(" + ", ".join("?" * (len(KEY_COLUMNS) + len(columns))) + ")"
+    marks = ", ".join([one] * rows)
+    return f"INSERT INTO trace VALUES {marks}"  # noqa: S608  nothing but question marks
 
 
 def _check_names(columns: Sequence[Column]) -> None:

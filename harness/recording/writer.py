@@ -16,7 +16,7 @@ from harness.recording.schema import (
     create_statements,
     data_text,
     header_text,
-    insert_row_statement,
+    insert_rows_statement,
 )
 
 if TYPE_CHECKING:
@@ -30,6 +30,7 @@ if TYPE_CHECKING:
 
 COMMIT_EVERY_NS = 400_000_000  # [ns]; well inside the promised second, and measured as free
 ROWS_AT_ONCE = 1000  # fastest of 100 to 10,000 on 25 columns, and a commit is never far away
+ROWS_A_STATEMENT = 20  # a third faster than one row a statement; 50 gave no more
 PAGE_SIZE = 16_384  # [bytes]; a quarter faster than SQLite's 4,096 for rows of 25 columns
 INSERT_EXCHANGE = (
     "INSERT INTO exchanges (tick, link, arrival_ns, peer, connection, function, address, point,"
@@ -54,7 +55,11 @@ class Recorder:
     ) -> None:
         self._connection = connection
         self._columns = len(header.columns)
-        self._insert_row = insert_row_statement(header.columns)
+        limit = connection.getlimit(sqlite3.SQLITE_LIMIT_VARIABLE_NUMBER)
+        width = len(KEY_COLUMNS) + self._columns
+        self._grouped = max(1, min(ROWS_A_STATEMENT, limit // width))
+        self._insert_group = insert_rows_statement(header.columns, self._grouped)
+        self._insert_one = insert_rows_statement(header.columns, 1)
         self._folder = folder
         self._now_ns = now_ns
         self._committed_ns = now_ns()
@@ -131,8 +136,11 @@ class Recorder:
         for start in range(0, count, ROWS_AT_ONCE):
             part = block[start : start + ROWS_AT_ONCE]
             late = None if lateness is None else lateness[start : start + ROWS_AT_ONCE]
-            rows = _keyed(segment, first_tick + start, part, late)
-            self._insert_many(self._insert_row, rows.tolist())
+            keyed = _keyed(segment, first_tick + start, part, late)
+            grouped = keyed.shape[0] // self._grouped * self._grouped
+            groups = keyed[:grouped].reshape(-1, self._grouped * keyed.shape[1])
+            self._insert_many(self._insert_group, groups.tolist())
+            self._insert_many(self._insert_one, keyed[grouped:].tolist())
 
     def event(self, event: Event) -> None:
         """Take an event.
@@ -223,6 +231,8 @@ class Recorder:
 
     def _insert_many(self, statement: str, rows: Sequence[Sequence[object]]) -> None:
         self._require_open()
+        if not rows:
+            return
         try:
             self._begin()
             self._connection.executemany(statement, rows)
