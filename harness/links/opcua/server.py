@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import ipaddress
-import logging
 import socket
 from contextlib import suppress
 from datetime import UTC, datetime
@@ -15,6 +14,7 @@ from asyncua.server.server import Server
 
 from harness.errors import LinkError
 from harness.links.opcua.board import Board
+from harness.links.opcua.library import quieten
 from harness.links.opcua.mapping import plan_address_space
 from harness.links.opcua.nodes import build_nodes
 from harness.links.opcua.session import Desk, RigInternalServer
@@ -31,22 +31,10 @@ _PRODUCT_URI = "urn:dryrig"
 _MAX_CONNECTIONS = 64
 _MAX_SUBSCRIPTIONS = 256
 _MAX_QUEUE = 1000  # notifications kept for one item of a client that does not fetch them
-_PEER_FAULTS = ("sending service fault response", "Rejected active session")  # log messages
 
 
 def _utc_now() -> datetime:
     return datetime.now(UTC)  # noqa: TID251  a stamp for the wire; it never steers
-
-
-def _tells_no_peer_fault(record: logging.LogRecord) -> bool:
-    return not str(record.msg).startswith(_PEER_FAULTS)
-
-
-def _quieten_library() -> None:
-    """Let the library log its own faults only; what peers do wrong goes to the sink."""
-    logging.getLogger("asyncua").setLevel(logging.ERROR)
-    for module in ("uaprocessor", "internal_session"):
-        logging.getLogger(f"asyncua.server.{module}").addFilter(_tells_no_peer_fault)
 
 
 class OpcUaServer:
@@ -114,7 +102,7 @@ class OpcUaServer:
             raise LinkError(f"{self._subject}: already open; stop it before starting it again")
         host = self._loopback_host()
         self._probe(host)
-        _quieten_library()
+        quieten()
         core = RigInternalServer()
         server = Server(iserver=core)
         try:

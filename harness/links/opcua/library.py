@@ -1,4 +1,4 @@
-"""The library's words that several modules here need, with types that a checker accepts.
+"""What several modules here need of the OPC UA library, with types that a checker accepts.
 
 The library annotates its own number types where it takes any number, so that each plain
 ``NodeId(884)`` would be an error; the casts for it are all in this module.
@@ -6,6 +6,7 @@ The library annotates its own number types where it takes any number, so that ea
 
 from __future__ import annotations
 
+import logging
 from typing import TYPE_CHECKING, cast
 
 from asyncua import ua
@@ -24,6 +25,24 @@ _VARIANT_TYPES = {
 }
 
 GOOD: int = StatusCodes.Good
+
+_PEER_FAULTS = ("sending service fault response", "Rejected active session")  # log messages
+
+
+def quieten() -> None:
+    """Let the library log its own faults only.
+
+    What a client does wrong goes to the server's sink; what a server does wrong, or that it is
+    gone, is raised to whoever called the client. The library would log both as errors besides.
+    """
+    logging.getLogger("asyncua").setLevel(logging.ERROR)
+    logging.getLogger("asyncua.client").setLevel(logging.CRITICAL)
+    for module in ("uaprocessor", "internal_session"):
+        logging.getLogger(f"asyncua.server.{module}").addFilter(_tells_no_peer_fault)
+
+
+def _tells_no_peer_fault(record: logging.LogRecord) -> bool:
+    return not str(record.msg).startswith(_PEER_FAULTS)
 
 
 def variant_type(data_type: NodeType) -> ua.VariantType:
