@@ -7,7 +7,8 @@ import signal
 import threading
 from contextlib import AsyncExitStack, suppress
 from dataclasses import dataclass
-from typing import TYPE_CHECKING, Protocol
+from typing import TYPE_CHECKING, Protocol, runtime_checkable
+from urllib.parse import urlsplit
 
 from harness.domain.rig import ModbusServerLink, OpcUaServerLink
 from harness.errors import DryrigError
@@ -16,7 +17,7 @@ from harness.runtime.image import ImageReader
 from harness.runtime.news import NewsBox
 
 if TYPE_CHECKING:
-    from collections.abc import Sequence
+    from collections.abc import Callable, Sequence
     from multiprocessing.connection import Connection
 
     from harness.domain.signals import Point
@@ -81,11 +82,6 @@ class LinksFailed:
 class LinkServer(Protocol):
     """What the link process asks of a server."""
 
-    @property
-    def address(self) -> tuple[str, int]:
-        """Return host and port of the listening socket."""
-        ...
-
     async def start(self) -> None:
         """Open the link; raises LinkError."""
         ...
@@ -95,6 +91,7 @@ class LinkServer(Protocol):
         ...
 
 
+@runtime_checkable
 class PublishingServer(LinkServer, Protocol):
     """A server that has to be told of a new image."""
 
@@ -144,14 +141,16 @@ async def _serve(setup: LinkSetup, up: Connection, down: Connection) -> None:
         closing.callback(image.close)
         sender = threading.Thread(target=_send, args=(box, image, up), daemon=True)
         closing.push_async_callback(_finish, box, sender)
-        servers: dict[str, LinkServer] = {}
+        addresses: dict[str, tuple[str, int]] = {}
         publishers: list[PublishingServer] = []
         for link in setup.links:
-            server = _make(link, setup, image, box, clock, publishers)
+            server, address = _make(link, setup, image, box, clock)
             closing.push_async_callback(server.stop)
             await server.start()
-            servers[link.name] = server
-        _tell(up, LinksOpen(addresses={name: each.address for name, each in servers.items()}))
+            addresses[link.name] = address()
+            if isinstance(server, PublishingServer):
+                publishers.append(server)
+        _tell(up, LinksOpen(addresses=addresses))
         sender.start()
         _listen(down, stop)
         await _until_stopped(stop, publishers, image, clock)
@@ -170,20 +169,27 @@ def _make(
     image: ImageReader,
     box: NewsBox,
     clock: PacedClock,
-    publishers: list[PublishingServer],
-) -> LinkServer:
-    """Make the server of a link; the libraries are loaded only where a link needs them."""
+) -> tuple[LinkServer, Callable[[], tuple[str, int]]]:
+    """Make the server of a link, and what tells its address once it is open.
+
+    The libraries are loaded only where a link needs them.
+    """
     match link:
         case ModbusServerLink():
             from harness.links.modbus.server import ModbusServer  # noqa: PLC0415
 
-            return ModbusServer(link, setup.points, image, box, clock.now_ns)
+            modbus = ModbusServer(link, setup.points, image, box, clock.now_ns)
+            return modbus, lambda: modbus.address
         case OpcUaServerLink():
             from harness.links.opcua.server import OpcUaServer  # noqa: PLC0415
 
-            server = OpcUaServer(link, setup.points, image, box, clock.now_ns, setup.rig_name)
-            publishers.append(server)
-            return server
+            opcua = OpcUaServer(link, setup.points, image, box, clock.now_ns, setup.rig_name)
+            return opcua, lambda: _address_in(opcua.endpoint)
+
+
+def _address_in(url: str) -> tuple[str, int]:
+    parts = urlsplit(url)
+    return parts.hostname or "", parts.port or 0
 
 
 def _listen(down: Connection, stop: asyncio.Event) -> None:
