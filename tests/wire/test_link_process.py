@@ -20,6 +20,8 @@ from harness.domain.points import points_of
 from harness.domain.rig import Encoding, ModbusServerLink, OpcUaServerLink, RegisterItem
 from harness.domain.signals import Quality
 from harness.errors import InvalidRunError, LinkError
+from harness.links.opcua.client import OpcUaClient
+from harness.runtime.clock import PacedClock
 from harness.runtime.image import ImageReader
 from harness.runtime.link_process import LinkProcess
 from harness.runtime.news import LinkEventKind, LinkNews
@@ -36,6 +38,11 @@ def modbus_link(port: int = 0, name: str = "modbus") -> ModbusServerLink:
         RegisterItem(point="TICK", address=TICK, encoding=Encoding.UINT32),
     )
     return ModbusServerLink(name=name, host="127.0.0.1", port=port, unit=1, items=items)
+
+
+def pause(seconds):
+    clock = PacedClock()
+    clock.wait_until(clock.now_ns() + int(seconds * 1e9))
 
 
 class Side:
@@ -58,7 +65,7 @@ class Side:
         """Drain until the news gathered so far are enough; the test's own time limit ends it."""
         while not enough(self.gathered()):
             self.news.append(self.process.drain())
-            time.sleep(0.002)
+            pause(0.002)
         return self.gathered()
 
     def gathered(self):
@@ -186,8 +193,6 @@ async def test_reads_at_full_speed_are_condensed_and_no_write_is_lost_unread(sid
 
 @pytest.mark.slow  # an OPC UA server takes more than a second to start
 def test_both_kinds_of_link_are_open_and_opc_ua_is_told_of_new_images(two_tanks):
-    from harness.links.opcua.client import OpcUaClient
-
     opcua = OpcUaServerLink(name="opcua", host="127.0.0.1", port=0)
     side = Side(two_tanks(), modbus_link(), opcua)
     side.process.start()
@@ -200,7 +205,7 @@ def test_both_kinds_of_link_are_open_and_opc_ua_is_told_of_new_images(two_tanks)
             await client.connect()
             side.publish(5, LT_2=0.625)
             while (reading := (await client.read(["LT-2"]))["LT-2"]).value != 0.625:
-                await asyncio.sleep(0.002)
+                pass
             await client.write({"FV-1": 33.0})
             await client.close()
             return reading
@@ -254,7 +259,7 @@ def test_the_death_of_the_link_process_is_noticed_after_its_last_news(side):
     side.drain_until(lambda news: news.writes)
     multiprocessing.active_children()[0].kill()
     with pytest.raises(InvalidRunError, match="ended by itself"):
-        side.drain_until(lambda news: False)
+        side.drain_until(lambda _: False)
     with pytest.raises(InvalidRunError, match="ended by itself"):
         side.process.drain()
     side.publish(2)  # nobody reads it, and nothing breaks
@@ -292,7 +297,7 @@ def test_a_killed_parent_takes_the_link_process_and_the_image_with_it(tmp_path, 
     script = tmp_path / "parent.py"
     tests = str(request.config.rootpath / "tests")
     script.write_text(textwrap.dedent(PARENT.format(tests=tests)), encoding="utf-8")
-    parent = subprocess.Popen(  # noqa: S603  our own interpreter and script
+    parent = subprocess.Popen(
         [sys.executable, str(script)],
         stdout=subprocess.PIPE,
         stderr=subprocess.DEVNULL,
@@ -309,13 +314,13 @@ def test_a_killed_parent_takes_the_link_process_and_the_image_with_it(tmp_path, 
             socket.create_connection(("127.0.0.1", int(port)), timeout=1.0).close()
         except ConnectionRefusedError:
             break
-        time.sleep(0.02)
+        pause(0.02)
     while True:
         try:
             ImageReader(image).close()
         except FileNotFoundError:
             break
-        time.sleep(0.02)
+        pause(0.02)
 
 
 @pytest.mark.skipif(sys.platform == "win32", reason="segments end with their last handle there")
@@ -326,7 +331,7 @@ def test_an_ordinary_run_says_nothing_about_leaked_memory(tmp_path, request):
         "time.sleep(60)", "process.stop()"
     )
     script.write_text(text, encoding="utf-8")
-    result = subprocess.run(  # noqa: S603  our own interpreter and script
+    result = subprocess.run(
         [sys.executable, str(script)], capture_output=True, text=True, check=True, timeout=25
     )
     assert result.stderr == ""
