@@ -1,0 +1,74 @@
+"""The tables of a trial file, as pydantic models: keys, types and each key's own bounds."""
+
+from __future__ import annotations
+
+from typing import Annotated, Literal
+
+from pydantic import Field
+
+from harness.config.quantities import Change, NonNegativeTime, OpenPercentage, PositiveTime
+from harness.config.rig_tables import Table, Tag
+
+_Part = Annotated[float, Field(gt=0.0, lt=1.0)]
+
+
+class TrialTable(Table):
+    """``[trial]``."""
+
+    name: Annotated[str, Field(min_length=1)]
+    description: str = ""
+    law: Literal["P", "PI"]
+    closed_loop_time: PositiveTime
+    models: Literal["identified", "linearised", "given"]
+    settings: Literal["computed", "as found"]
+
+
+class ModelTable(Table):
+    """``[given.output]`` and ``[given.load]``."""
+
+    gain: float
+    time_constants: Annotated[list[PositiveTime], Field(min_length=1, max_length=2)]
+    dead_time: NonNegativeTime
+
+
+class GivenTable(Table):
+    """``[given]``."""
+
+    output: ModelTable
+    load: ModelTable
+
+
+class AsFoundTable(Table):
+    """``[as_found]``."""
+
+    gain: Annotated[float, Field(gt=0.0, le=1000.0)]
+    integral_time: PositiveTime | None = None
+    action: Literal["direct", "reverse"]
+
+
+class PhaseTable(Table):
+    """``[[phase]]``."""
+
+    name: Annotated[str, Field(min_length=1)]
+    loop: Tag
+    kind: Literal["settle", "output_step", "load_step", "setpoint_step"]
+    mode: Literal["manual", "automatic"]
+    change: Change = 0.0
+    time_limit: PositiveTime
+
+
+class SteadyTable(Table):
+    """``[steady]``."""
+
+    dwell: Annotated[float, Field(gt=0.0, le=100.0)] = 5.0
+    remaining: OpenPercentage = 0.01
+    confidence: _Part = 0.95
+    thinning: _Part = 0.04
+
+
+class TolerancesTable(Table):
+    """``[tolerances]``."""
+
+    relative: OpenPercentage = 0.10
+    overshoot: OpenPercentage = 0.02
+    offset: OpenPercentage = 0.005
