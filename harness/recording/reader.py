@@ -5,7 +5,7 @@ from __future__ import annotations
 import sqlite3
 from contextlib import contextmanager
 from dataclasses import dataclass
-from typing import TYPE_CHECKING, Self
+from typing import TYPE_CHECKING, Any, Self
 
 import numpy as np
 
@@ -120,7 +120,7 @@ class RunFolder:
         RecordError
             If a column is not in the record, or the file is garbled.
         """
-        known = [column.name for column in self.columns]
+        known = _names(self.columns)
         chosen = known if names is None else list(names)
         for name in chosen:
             if name not in known:
@@ -141,6 +141,20 @@ class RunFolder:
             )
             table = _filled(table, rows)
         return {name: np.ascontiguousarray(table[:, i]) for i, name in enumerate(wanted)}
+
+    def rows(self) -> Iterator[tuple[Any, ...]]:
+        """Yield the rows one by one: segment, tick, lateness, and the header's columns.
+
+        Raises
+        ------
+        RecordError
+            If the file is garbled.
+        """
+        listed = ", ".join(quoted(name) for name in (*KEY_COLUMNS, *_names(self.columns)))
+        with self._reading() as connection:
+            yield from connection.execute(
+                f"SELECT {listed} FROM trace ORDER BY segment, tick"  # noqa: S608  quoted names
+            )
 
     def events(self) -> tuple[Event, ...]:
         """Return the events in the order in which they were recorded.
@@ -264,6 +278,10 @@ def _filled(table: NDArray[np.float64], rows: sqlite3.Cursor) -> NDArray[np.floa
         table[start:end] = np.array(batch[: end - start], dtype=np.float64)
         start = end
     return table[:start]
+
+
+def _names(columns: tuple[Column, ...]) -> list[str]:
+    return [column.name for column in columns]
 
 
 def _exchange(row: tuple[object, ...]) -> Exchange:
