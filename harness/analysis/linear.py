@@ -174,7 +174,7 @@ def _split_dead_time(model: LagModel, tick: float) -> tuple[int, float]:
 
 
 def _sequence(name: str, values: NDArray[np.float64], rows: int) -> NDArray[np.float64]:
-    sequence = np.ascontiguousarray(values, dtype=np.float64)
+    sequence = np.array(values, dtype=np.float64)  # a copy: a read-only view compiles anew
     if sequence.shape != (rows,):
         raise UsageError(
             f"prediction: {name} has shape {sequence.shape}; one value per tick, ({rows},), is needed"
