@@ -109,6 +109,7 @@ class OpcUaServer:
             await self._prepare(server, core, host)
             await server.start()
         except BaseException as error:
+            self._board = None
             await server.stop()  # else the port stays taken
             if isinstance(error, OSError):
                 raise self._port_error(error) from error

@@ -292,10 +292,9 @@ def _peer_text(name: object) -> str:
 
 
 def _has_deadband(item: ua.MonitoredItemCreateRequest | ua.MonitoredItemModifyRequest) -> bool:
-    wanted = item.RequestedParameters.Filter
-    return (
-        isinstance(wanted, ua.DataChangeFilter) and wanted.DeadbandType != ua.DeadbandType.None_
-    )
+    # Not by isinstance: a filter that came over the wire is of another class of the same name.
+    kind = getattr(item.RequestedParameters.Filter, "DeadbandType", ua.DeadbandType.None_)
+    return bool(kind != ua.DeadbandType.None_)
 
 
 def _filter_refused() -> ua.StatusCode:
