@@ -11,7 +11,7 @@ import numpy as np
 from harness.domain.models import FittedModel, LagModel
 from harness.errors import DataError
 from harness.tuning.least_squares import Problem, Solution, search, unit_frame
-from harness.tuning.limits import effective_samples, profile_limits
+from harness.tuning.limits import effective_samples, parameter_count, profile_limits
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
@@ -21,6 +21,7 @@ if TYPE_CHECKING:
 _FEWEST_ROWS = 20
 _MOST_ROWS = 5000  # longer records are averaged in blocks
 _TOLERANCE = 1e-10  # of the cost, for the search of the best fit
+_COARSE_TOLERANCE = 1e-3  # of the cost, to tell which start leads to the best fit
 _FINISHED = 3.0  # total lags after the first step; two equal lags are then at 98 %
 _DISTINCT = 25.0  # gain in fit over noise, in variances: five standard deviations
 _CRITERION = "Schwarz's criterion (BIC) with the effective number of samples of the second-order residuals"
@@ -91,7 +92,7 @@ def fit(
         raise DataError(f"fit: order {order} is not offered; give 1 or 2")
     problem = _problem(inputs, outputs, tick, drift)
     solution = _solve(problem, order)
-    samples = _effective(problem, solution)
+    samples = _effective(problem, solution, order)
     _check_solution(problem, solution, samples)
     return _fitted(problem, solution, order, confidence, samples)
 
@@ -132,15 +133,16 @@ def fit_best(
     """
     problem = _problem(inputs, outputs, tick, drift)
     solutions = {order: _solve(problem, order) for order in (1, 2)}
-    samples = _effective(problem, solutions[2])
+    samples = _effective(problem, solutions[2], 2)
     fits, criterion = {}, {}
     for order, solution in solutions.items():
-        own = _effective(problem, solution)
+        own = _effective(problem, solution, order)
         _check_solution(problem, solution, own)
         fits[order] = _fitted(problem, solution, order, confidence, own)
-        free = order + 2 + problem.nuisance.shape[0]
         mean_square = max(solution.cost / solution.residuals.size, np.finfo(float).tiny)
-        criterion[order] = samples * math.log(mean_square) + free * math.log(samples)
+        criterion[order] = samples * math.log(mean_square) + parameter_count(
+            problem, order
+        ) * math.log(samples)
     best = fits[min(criterion, key=lambda order: criterion[order])]
     return OrderChoice(
         best=best,
@@ -216,13 +218,15 @@ def _solve(problem: Problem, order: int) -> Solution:
         return -(float(unit @ problem.output) ** 2) / energy if energy > 0.0 else 0.0
 
     starts = sorted(points, key=cost)[:3]
-    found = [search(problem, frame, start, _TOLERANCE) for start in starts]
-    return min(found, key=lambda solution: solution.cost)
+    found = [search(problem, frame, start, _COARSE_TOLERANCE) for start in starts]
+    best = min(found, key=lambda solution: solution.cost)
+    return search(problem, frame, best.coordinates, _TOLERANCE)
 
 
-def _effective(problem: Problem, solution: Solution) -> float:
+def _effective(problem: Problem, solution: Solution, order: int) -> float:
     """Return the effective number of samples of a fit."""
-    return effective_samples(solution.residuals, int(sum(solution.shape) / problem.tick))
+    rows_per_lag = int(sum(solution.shape) / problem.tick)
+    return effective_samples(solution.residuals, rows_per_lag, parameter_count(problem, order))
 
 
 def _check_solution(problem: Problem, solution: Solution, samples: float) -> None:

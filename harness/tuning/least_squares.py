@@ -98,8 +98,6 @@ class Solution:
         Measured minus model [fraction of PV span].
     cost : float
         Sum of the squares of the residuals.
-    deviations : ndarray, shape (k,)
-        Standard deviations of the coordinates from the Jacobian, at unit noise.
     """
 
     coordinates: Array
@@ -107,7 +105,6 @@ class Solution:
     gain: float
     residuals: Array
     cost: float
-    deviations: Array
 
 
 def unit_frame(order: int, longest: float) -> Frame:
@@ -195,7 +192,6 @@ def search(problem: Problem, frame: Frame, start: Array, tolerance: float) -> So
     x = np.clip(np.asarray(start, dtype=np.float64), frame.low, frame.high)
     gain, residuals, unit = _evaluate(problem, frame, x)
     cost, damping = float(residuals @ residuals), 1e-3
-    normal = np.eye(x.size)
     for _ in range(_ITERATIONS):
         jacobian = _jacobian(problem, frame, x, gain, unit)
         gradient, normal = jacobian @ residuals, jacobian @ jacobian.T
@@ -227,8 +223,34 @@ def search(problem: Problem, frame: Frame, start: Array, tolerance: float) -> So
         gain=gain,
         residuals=residuals,
         cost=cost,
-        deviations=np.sqrt(np.maximum(np.diag(np.linalg.pinv(normal)), 0.0)),
     )
+
+
+def deviations(problem: Problem, frame: Frame, solution: Solution) -> Array:
+    """Return what the Jacobian says of the spread of each coordinate, and of the gain.
+
+    Good enough to start a search for limits, and no more: it knows neither bounds nor curvature.
+
+    Parameters
+    ----------
+    problem : Problem
+        Record.
+    frame : Frame
+        Frame of the solution, the gain free.
+    solution : Solution
+        The fit.
+
+    Returns
+    -------
+    ndarray, shape (k + 1,)
+        Standard deviations at unit noise, in the coordinates' own units, the gain's last.
+    """
+    x = solution.coordinates
+    unit = problem.response(solution.shape)
+    held = Frame(shape=frame.shape, low=frame.low, high=frame.high, gain=solution.gain)
+    rows = np.vstack([_jacobian(problem, held, x, solution.gain, unit), unit])
+    covariance = np.linalg.pinv(rows @ rows.T, rcond=1e-14, hermitian=True)
+    return np.sqrt(np.maximum(np.diag(covariance), 0.0))
 
 
 def _evaluate(problem: Problem, frame: Frame, x: Array) -> tuple[float, Array, Array]:

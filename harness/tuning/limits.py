@@ -3,30 +3,41 @@
 from __future__ import annotations
 
 import math
+from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
 import numpy as np
-from scipy.special import stdtrit
+from scipy.special import fdtrc, stdtrit
 
 from harness.domain.models import Interval
-from harness.tuning.least_squares import Frame, Problem, Solution, evenness_of, search, split
+from harness.tuning.least_squares import (
+    Frame,
+    Problem,
+    Solution,
+    deviations,
+    evenness_of,
+    search,
+    split,
+    unit_frame,
+)
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
 
-_ROUNDS = 12
+_ROUNDS = 15
 _CLOSE = 0.01  # of the critical value: 0.1 % of coverage at 95 %
 _SIGNIFICANT = 3.0  # standard deviations above white before residuals count as correlated
 _LEAST_FREEDOM = 2.0
 
 
-def effective_samples(residuals: NDArray[np.float64], longest: int) -> float:
+def effective_samples(residuals: NDArray[np.float64], longest: int, fitted: int) -> float:
     """Return how many independent residuals the record is worth.
 
     Batch means: for white residuals the variance of the mean of b of them is 1/b of their own.
     Over b = 2, 4, 8, ... the largest excess over that, where it is significant, divides the
-    number of samples. Records whose misfit is the plant's curvature rather than noise thus
-    count little more than one sample per total lag.
+    number of samples. The fitted parameters are slow, so each takes a degree of freedom from the
+    means. Records whose misfit is the plant's curvature rather than noise thus count little more
+    than one sample per total lag.
 
     Parameters
     ----------
@@ -34,6 +45,8 @@ def effective_samples(residuals: NDArray[np.float64], longest: int) -> float:
         Residuals of the fit.
     longest : int
         Longest batch: the total lag of the model [rows].
+    fitted : int
+        Parameters fitted [-].
 
     Returns
     -------
@@ -43,11 +56,11 @@ def effective_samples(residuals: NDArray[np.float64], longest: int) -> float:
     n = residuals.size
     variance = float(residuals @ residuals) / n
     inflation, batch = 1.0, 2
-    while variance > 0.0 and batch <= longest and n // batch >= 4:  # noqa: PLR2004  a variance of fewer means is no variance
+    while variance > 0.0 and batch <= longest and n // batch >= 2 * fitted:
         count = n // batch
         means = residuals[: count * batch].reshape(count, batch).mean(axis=1)
-        ratio = batch * float(means @ means) / count / variance
-        if ratio > 1.0 + _SIGNIFICANT * math.sqrt(2.0 / count):
+        ratio = batch * float(means @ means) / (count - fitted) / variance
+        if ratio > 1.0 + _SIGNIFICANT * math.sqrt(2.0 / (count - fitted)):
             inflation = max(inflation, ratio)
         batch *= 2
     return n / inflation
@@ -81,18 +94,15 @@ def parameters_of(solution: Solution, order: int) -> dict[str, float]:
 
 
 def profile_limits(
-    problem: Problem,
-    best: Solution,
-    order: int,
-    confidence: float,
-    samples: float,
+    problem: Problem, best: Solution, order: int, confidence: float, samples: float
 ) -> dict[str, Interval]:
     """Return limits of every parameter by profile likelihood.
 
     A value belongs to the interval if the best fit with the parameter held there costs no more
     than the overall best by t^2 of the residual variance (t of Student, two-sided). Where the
     cost stays below that down to a bound (no dead time, no second lag), the interval ends at
-    the bound: it is one-sided.
+    the bound: it is one-sided. Where a dead time of zero is within reach, the limits of the lags
+    use the wider critical value of `_critical_at_bound`.
 
     Parameters
     ----------
@@ -112,60 +122,96 @@ def profile_limits(
     dict of str to Interval
         By parameter.
     """
-    count = order + 2 + problem.nuisance.shape[0]
-    freedom = max(samples - count, _LEAST_FREEDOM)
+    freedom = max(samples - parameter_count(problem, order), _LEAST_FREEDOM)
     critical = float(stdtrit(freedom, 0.5 + 0.5 * confidence))
-    variance = best.cost / freedom
-    limits = {}
+    sigma = math.sqrt(best.cost / freedom)
+    profile = _Profile(problem=problem, best=best, order=order, sigma=sigma)
+    spread = deviations(problem, unit_frame(order, 2.0 * sum(best.shape)), best) * sigma
+    limits: dict[str, Interval] = {}
     for name, value in parameters_of(best, order).items():
-        ends = [
-            _limit(problem, best, order, name, value, side * critical, variance)
-            for side in (-1.0, 1.0)
-        ]
-        limits[name] = Interval(low=ends[0], high=ends[1], level=confidence)
+        if name == "time_constant_1" and limits["dead_time"].low <= 0.0:
+            critical = _critical_at_bound(freedom, confidence)
+        guess = _offset(best, name, spread * critical)
+        limits[name] = Interval(
+            low=profile.limit(name, value, -guess, critical),
+            high=profile.limit(name, value, guess, critical),
+            level=confidence,
+        )
     return limits
 
 
-def _limit(
-    problem: Problem,
-    best: Solution,
-    order: int,
-    name: str,
-    value: float,
-    critical: float,
-    variance: float,
-) -> float:
-    """Return the value at which the signed root of the profile deviance meets the critical one."""
-    target = abs(critical)
-    bound = -math.inf if name == "gain" else 0.0
-    if name == "total_lag":
-        bound = 1e-6 * value
-    if variance <= 0.0 or (critical < 0.0 and value <= bound):
-        return value
-    sigma = math.sqrt(variance)
-    offset = math.copysign(_first_offset(best, name, value) * sigma * target, critical)
-    start: NDArray[np.float64] | None = None
-    inside, inside_root, outside, outside_root = 0.0, 0.0, math.inf, math.inf
-    for _ in range(_ROUNDS):
-        tried = max(value + offset, bound)
-        frame, first = profile_frame(best, order, name, tried)
-        found = search(
-            problem, frame, first if start is None else start, 1e-3 * variance / best.cost
-        )
-        start = found.coordinates
-        root = math.sqrt(max(found.cost - best.cost, 0.0) / variance)
-        distance = abs(tried - value)
-        if abs(root - target) <= _CLOSE * target:
-            return tried
-        if root < target:
-            if tried <= bound:
-                return bound
-            inside, inside_root = distance, root
+def parameter_count(problem: Problem, order: int) -> int:
+    """Return how many parameters a fit has: gain, dead time, lags, level and drift.
+
+    Parameters
+    ----------
+    problem : Problem
+        Record.
+    order : int
+        Lags [-].
+
+    Returns
+    -------
+    int
+        Parameters [-].
+    """
+    return order + 2 + int(problem.nuisance.shape[0])
+
+
+def _critical_at_bound(freedom: float, confidence: float) -> float:
+    """Return the critical root deviance where a nuisance parameter may lie on its bound.
+
+    The deviance then follows no chi-square of one degree; an even mixture of one and two degrees
+    bounds it from above where a single nuisance parameter is on its bound (after S. G. Self and
+    K.-Y. Liang, J. Am. Stat. Assoc. 82:605, 1987). Here with F for chi-square.
+    """
+    low, high = 0.0, 1e6
+    for _ in range(80):
+        middle = 0.5 * (low + high)
+        one, two = fdtrc(1.0, freedom, middle), fdtrc(2.0, freedom, 0.5 * middle)
+        if 0.5 * float(one + two) > 1.0 - confidence:
+            low = middle
         else:
-            outside, outside_root = distance, root
-        distance = _next_distance(inside, inside_root, outside, outside_root, target)
-        offset = math.copysign(distance, critical)
-    return max(value + offset, bound)
+            high = middle
+    return math.sqrt(0.5 * (low + high))
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class _Profile:
+    """Cost of the best fit as a function of one parameter."""
+
+    problem: Problem
+    best: Solution
+    order: int
+    sigma: float
+
+    def limit(self, name: str, value: float, offset: float, critical: float) -> float:
+        """Return where the root deviance meets the critical value, starting at an offset."""
+        bound = {"gain": -math.inf, "total_lag": 1e-6 * value}.get(name, 0.0)
+        if self.sigma == 0.0 or (offset < 0.0 and value <= bound):
+            return value
+        home = profile_frame(self.best, self.order, name, value)[1]
+        direction = np.zeros(home.size)  # of the other parameters, per unit of this one
+        inside, inside_root, outside, outside_root = 0.0, 0.0, math.inf, math.inf
+        for _ in range(_ROUNDS):
+            tried = max(value + offset, bound)
+            distance = abs(tried - value)
+            frame, _ = profile_frame(self.best, self.order, name, tried)
+            tolerance = 1e-3 * self.sigma**2 / self.best.cost
+            found = search(self.problem, frame, home + direction * distance, tolerance)
+            direction = (found.coordinates - home) / distance
+            root = math.sqrt(max(found.cost - self.best.cost, 0.0)) / self.sigma
+            if abs(root - critical) <= _CLOSE * critical or (
+                root < critical and tried <= bound
+            ):
+                return tried
+            if root < critical:
+                inside, inside_root = distance, root
+            else:
+                outside, outside_root = distance, root
+            step = _next_distance(inside, inside_root, outside, outside_root, critical)
+            offset = math.copysign(step, offset)
+        return max(value + offset, bound)
 
 
 def _next_distance(
@@ -178,16 +224,18 @@ def _next_distance(
     return inside + (outside - inside) * min(max(share, 0.05), 0.95)
 
 
-def _first_offset(best: Solution, name: str, value: float) -> float:
-    """Return a first guess of a parameter's standard deviation at unit noise."""
-    total = sum(best.shape)
+def _offset(best: Solution, name: str, spread: NDArray[np.float64]) -> float:
+    """Return a first guess of the distance from a parameter to its limit."""
+    total, even = sum(best.shape), evenness_of(best.shape)
     if name == "gain":
-        energy = float(np.ptp(best.residuals)) or 1.0
-        return 1e-2 * abs(value) / energy
-    spread = float(best.deviations[0])
+        return float(spread[-1])
     if name == "total_lag":
-        return spread
-    return max(float(best.deviations[1]) * total, spread)
+        return float(spread[0])
+    if name == "dead_time":
+        return float(spread[1] * total)
+    root = math.sqrt(max(1.0 - even, 0.0))
+    parting = 0.5 * total * (math.sqrt(1.0 - even + float(spread[2])) - root)
+    return max(parting, 0.5 * float(spread[1]) * total)
 
 
 def profile_frame(
