@@ -156,7 +156,7 @@ def check_map(
     Returns
     -------
     list of (int, str)
-        Index of the item and the problem, in order of the items; empty for a good map.
+        Index of the item [-] and the problem, in order of the items; empty for a good map.
     """
     by_name = {point.name: point for point in points}
     problems = list(_overlaps(items))
@@ -239,17 +239,17 @@ def _counts_problems(item: RegisterItem) -> Iterator[str]:
 
 def _range_problems(point: Point, item: RegisterItem) -> Iterator[str]:
     """Yield where the ends of the point's range do not fit the type."""
-    if item.scaling is Scaling.COUNTS:
-        return
-    low, high = -FLOAT32_MAX, FLOAT32_MAX
-    if item.encoding is Encoding.BIT:
-        low, high = 0.0, 1.0
     kind = INTEGER_TYPES.get(item.encoding)
+    bit = item.encoding is Encoding.BIT
+    factor = item.factor if kind is not None else 1.0
+    if (item.scaling is Scaling.COUNTS and not bit) or not 0.0 < factor < math.inf:
+        return  # the counts, or the factor, are told of already
+    low, high = (0.0, 1.0) if bit else (-FLOAT32_MAX, FLOAT32_MAX)
     if kind is not None:
         low, high = kind.low, kind.high
     for end in (point.range.lower, point.range.upper):
-        number = end * item.factor if kind is not None else end
-        if item.scaling is Scaling.CURRENT:
+        number = end * factor
+        if item.scaling is Scaling.CURRENT and not bit:
             fraction = point.range.to_fraction(end)
             number = (CURRENT_LOW_MA + CURRENT_SPAN_MA * fraction) * MICRO_PER_MILLI
         if not low <= number <= high:
