@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import math
-from array import array
 from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
@@ -11,7 +10,7 @@ from harness.domain.rig import Encoding, RegisterItem
 from harness.domain.signals import Quality
 from harness.errors import LinkError, PeerError
 from harness.links.codecs import ItemCodec, ValueRefusedError, register_count
-from harness.links.register_map import ADDRESS_MAX, MapRow, check_map, describe_map
+from harness.links.register_map import MapRow, check_map, describe_map
 
 if TYPE_CHECKING:
     from collections.abc import Sequence
@@ -103,6 +102,9 @@ class RegisterBank:
         self._points = points
         self._items = items
         self._point_of = [by_name[item.point] for item in items]
+        self._items_of: dict[int, list[int]] = {}
+        for place, index in enumerate(self._point_of):
+            self._items_of.setdefault(index, []).append(place)
         self._codecs = [
             None if item.encoding is Encoding.BIT else ItemCodec(points[index], item)
             for item, index in zip(items, self._point_of, strict=True)
@@ -153,7 +155,7 @@ class RegisterBank:
             If a register of them is not in the map.
         """
         cells = self._registers
-        if cells.run_end[address] < address + count:
+        if cells.run_end.get(address, 0) < address + count:
             raise AddressRefusedError(cells.absent(address, count))
         return bytes(cells.content[_WORD * address : _WORD * (address + count)])
 
@@ -176,7 +178,7 @@ class RegisterBank:
             If a bit of them is not in the map.
         """
         cells = self._bits
-        if cells.run_end[address] < address + count:
+        if cells.run_end.get(address, 0) < address + count:
             raise AddressRefusedError(cells.absent(address, count))
         digits = cells.content[address : address + count]
         return int(digits[::-1], 2).to_bytes((count + 7) // 8, "little")
@@ -289,7 +291,7 @@ class RegisterBank:
         return self.read_registers(address, 1) if half is None else half
 
     def _check_writable(self, cells: _Cells, address: int, count: int) -> None:
-        if cells.run_end[address] < address + count:
+        if cells.run_end.get(address, 0) < address + count:
             raise AddressRefusedError(cells.absent(address, count))
         for index in cells.touched(address, count):
             if not self._points[self._point_of[index]].writable:
@@ -342,9 +344,8 @@ class RegisterBank:
     def _show_written(self, point: int) -> None:
         """Show a written value wherever its point stands, in its own place as it was written."""
         overlay = self._overlays[point]
-        for index, shown in enumerate(self._point_of):
-            if shown == point:
-                self._show(index, overlay.value, math.nan, Quality.GOOD)
+        for index in self._items_of[point]:
+            self._show(index, overlay.value, math.nan, Quality.GOOD)
         item = self._items[overlay.item]
         cells = self._bits if item.encoding is Encoding.BIT else self._registers
         cells.put(item.address, overlay.raw)
@@ -369,11 +370,11 @@ class _Cells:
                 cells = range(item.address, item.address + register_count(item.encoding))
                 self.item_at.update(dict.fromkeys(cells, index))
         self._size = 1 if bits else _WORD
-        self.content = bytearray(b"0" if bits else bytes(_WORD)) * (ADDRESS_MAX + 1)
-        self.run_end = array("l", range(ADDRESS_MAX + 1))  # exclusive end of the mapped run
+        cells_to = max(self.item_at, default=-1) + 1
+        self.content = bytearray(b"0" if bits else bytes(_WORD)) * cells_to
+        self.run_end: dict[int, int] = {}  # by address in the map: where its run of them ends
         for address in sorted(self.item_at, reverse=True):
-            follows = address + 1 in self.item_at
-            self.run_end[address] = self.run_end[address + 1] if follows else address + 1
+            self.run_end[address] = self.run_end.get(address + 1, address + 1)
 
     def put(self, address: int, data: bytes) -> None:
         start = self._size * address
@@ -386,6 +387,6 @@ class _Cells:
 
     def absent(self, address: int, count: int) -> str:
         """Return which address of a range is the first that is not in the map, in words."""
-        missing = max(self.run_end[address], address)
+        missing = self.run_end.get(address, address)
         asked = f"{address}" if count == 1 else f"{address} to {address + count - 1}"
         return f"address {missing} is not in the map (asked for {asked}, counted from 0)"

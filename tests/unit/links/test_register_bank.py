@@ -225,7 +225,7 @@ def test_bits(bank):
 def test_a_bit_that_its_point_does_not_take():
     locked = (point("ON", True, Range(lower=0.0, upper=0.5, unit="")),)
     bank = RegisterBank(locked, (RegisterItem(point="ON", address=0, encoding=Encoding.BIT),))
-    with pytest.raises(ValueRefusedError, match="ON = 1 is outside 0 to 0.5"):
+    with pytest.raises(ValueRefusedError, match=r"ON = 1 is outside 0 to 0\.5"):
         bank.write_bits(0, (True,))
 
 
