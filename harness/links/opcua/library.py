@@ -65,11 +65,25 @@ def node_id(identifier: int | str | bytes | uuid.UUID, namespace: int = 0) -> ua
     return ua.NodeId(cast("ua.Int32", identifier), cast("ua.Int16", namespace))
 
 
+class SharedValue(ua.DataValue):
+    """A data value that nobody changes, so that a deep copy of it is the value itself.
+
+    The library copies every value deeply for every subscriber, which was two thirds of the
+    cost of publishing.
+    """
+
+    __slots__ = ()
+
+    def __deepcopy__(self, memo: object) -> SharedValue:
+        """Return the value itself: neither it nor its variant is ever changed in place."""
+        return self
+
+
 def data_value(
     variant: ua.Variant, code: ua.StatusCode, source_stamp: datetime, server_stamp: datetime
 ) -> ua.DataValue:
     """Return a value with its status and both stamps, which must be aware of their zone."""
-    return ua.DataValue(
+    return SharedValue(
         variant,
         StatusCode=code,
         SourceTimestamp=cast("ua.DateTime", source_stamp),

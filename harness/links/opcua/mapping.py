@@ -69,6 +69,7 @@ _UNITS = {  # codes: UNECE Recommendation 20
     "kPa": UnitInformation(code="KPA", symbol="kPa", description="kilopascal"),
     "degC": UnitInformation(code="CEL", symbol="°C", description="degree Celsius"),
     "%": UnitInformation(code="P1", symbol="%", description="percent"),
+    "%/%": UnitInformation(code="C62", symbol="%/%", description="one"),  # a controller gain
     "": UnitInformation(code="C62", symbol="1", description="one"),
 }
 
