@@ -270,6 +270,8 @@ def show(value: object) -> str:
     """
     if isinstance(value, bool):
         return "true" if value else "false"
+    if isinstance(value, float):
+        return repr(value)
     try:
         text = json.dumps(value, ensure_ascii=False)
     except TypeError:  # a date or a time
@@ -336,6 +338,8 @@ def _words(detail: ErrorDetails, raw: dict[str, Any], model: type[BaseModel]) ->
         "int_type": "must be a whole number",
         "bool_type": "must be true or false",
         "list_type": "must be a list in square brackets",
+        "dict_type": "must be a table in braces, {{ key = value }}",
+        "model_type": "must be a table",
         "finite_number": "must be a finite number",
         "greater_than": "must be above {gt}",
         "greater_than_equal": "must be at least {ge}",
@@ -345,7 +349,9 @@ def _words(detail: ErrorDetails, raw: dict[str, Any], model: type[BaseModel]) ->
         "too_long": "must have {max_length} or fewer elements",
         "string_too_short": "must not be empty",
     }
-    rule = rules.get(kind, detail["msg"]).format(**context)
+    if kind == "literal_error":
+        context = {"expected": context["expected"].replace("'", '"')}
+    rule = rules[kind].format(**context) if kind in rules else detail["msg"]
     return f"{show(_written(detail, raw))} {rule}"
 
 

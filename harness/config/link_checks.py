@@ -233,7 +233,9 @@ def _counts(item: Entry, encoding: str) -> None:
     counts = item.pair("counts") or (0, _LAST_ADDRESS)
     low, high = _INTEGERS[encoding]
     if not counts[0] < counts[1]:
-        item.problem("counts", f"{item.shown('counts')} is crossed; write the lower end first")
+        item.problem(
+            "counts", f"{item.shown('counts')} is crossed; the first end lies below the second"
+        )
     elif counts[0] < low or counts[1] > high:
         item.problem(
             "counts" if "counts" in item.raw else "encoding",

@@ -79,7 +79,8 @@ def _transmitter(transmitter: Entry, draft: RigDraft) -> None:
                 sound = False
         if sound and transmitter_range(transmitter) is None:
             transmitter.problem(
-                "range", f"{transmitter.shown('range')} is crossed; write the lower end first"
+                "range",
+                f"{transmitter.shown('range')} is crossed; the first end lies below the second",
             )
     current = transmitter.number("failure_current")
     if current is not None and FAILURE_LOW_MA < current < FAILURE_HIGH_MA:
@@ -172,7 +173,7 @@ def _output_limits(loop: Entry, draft: RigDraft) -> None:
     if not limits[0] < limits[1]:
         loop.problem(
             "output_limits",
-            f"{loop.shown('output_limits')} is crossed; write the lower limit first",
+            f"{loop.shown('output_limits')} is crossed; the first limit lies below the second",
         )
         return
     actuator = with_tag(draft.actuators, loop.text("output"))

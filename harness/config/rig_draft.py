@@ -8,8 +8,8 @@ from typing import TYPE_CHECKING, Any
 from harness.config.findings import (
     Entry,
     Findings,
-    not_one_of,
     read_document,
+    show,
     single_table,
     tables,
     unknown_keys,
@@ -148,7 +148,10 @@ def _of_kinds(
         if "kind" not in raw:
             findings.add(path, f"kind is missing; it is one of {', '.join(kinds)}")
         elif not isinstance(kind, str) or kind not in kinds:
-            findings.add(f"{path}.kind", not_one_of(str(kind), kinds, f"a {name}", "kind"))
+            listed = ", ".join(kinds)
+            findings.add(
+                f"{path}.kind", f"{show(kind)} is no kind of {name}; kinds are {listed}"
+            )
         else:
             entries.append(Entry(path, raw, kinds[kind], findings))
     return tuple(entries)

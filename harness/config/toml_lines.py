@@ -81,9 +81,8 @@ class _Scan:
                 self._record(prefix, start)
             elif self.text.startswith("[", start):
                 self.position += 1
-                prefix = self._within(self._key())
+                prefix = self._table(self._key(), start)
                 self.position += 1
-                self._record(prefix, start)
             else:
                 self._pair(prefix)
             self._skip(_BLANK)
@@ -110,6 +109,11 @@ class _Scan:
             if not self.text.startswith(".", self.position):
                 return parts
             self.position += 1
+
+    def _table(self, parts: list[str], start: int) -> str:
+        for depth in range(1, len(parts) + 1):
+            self._record(self._within(parts[:depth]), start)
+        return self._within(parts)
 
     def _within(self, parts: list[str]) -> str:
         path = ""

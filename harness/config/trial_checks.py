@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from typing import TYPE_CHECKING
 
-from harness.config.findings import not_one_of
+from harness.config.findings import not_one_of, show
 from harness.domain.rig import Action
 
 if TYPE_CHECKING:
@@ -140,7 +140,8 @@ def _models(draft: TrialDraft, rig: Rig) -> None:
         constants = model.time_constants
         if sorted(constants, reverse=True) != constants:
             draft.given.problem(
-                f"{name}.time_constants", "are crossed; write the larger time constant first"
+                f"{name}.time_constants",
+                f"{show(draft.given.raw[name]['time_constants'])} is crossed; the larger comes first",
             )
     _direction(draft, rig)
 

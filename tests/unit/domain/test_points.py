@@ -1,0 +1,73 @@
+"""The points of a rig: names, ranges in the units shown, and who may write."""
+
+from pathlib import Path
+
+import pytest
+
+from harness.config.load import rig_from_text
+from harness.domain.points import points_of, position_point
+from harness.domain.signals import PointKind
+
+TEXT = (Path(__file__).parent.parent / "config" / "data" / "rig.toml").read_text(
+    encoding="utf-8"
+)
+RIG = rig_from_text(TEXT, "rig.toml")
+POINTS = {point.name: point for point in points_of(RIG, external=True)}
+
+
+def test_names_and_order():
+    assert [point.name for point in points_of(RIG, external=True)] == [
+        "LT-101",
+        "LT-102",
+        "FT-101",
+        "FV-101",
+        "ZT-101",
+        "FV-102",
+        "ZT-102",
+        "LIC-102.SP",
+        "LIC-102.MODE",
+        "LIC-102.MO",
+        "LIC-102.KC",
+        "LIC-102.TI",
+        "LIC-102.HB",
+        "TICK",
+    ]
+    assert [point.name for point in points_of(RIG, external=False)] == list(POINTS)
+
+
+def test_an_external_controller_writes_its_output_and_heartbeat_alone():
+    writable = [point.name for point in POINTS.values() if point.writable]
+    assert writable == ["FV-101", "LIC-102.HB"]
+
+
+def test_nobody_writes_beside_the_built_in_controller():
+    assert not any(point.writable for point in points_of(RIG, external=False))
+
+
+def test_flows_are_shown_in_cubic_metres_an_hour():
+    flow = POINTS["FT-101"]
+    assert (flow.range.lower, flow.range.unit) == (0.0, "m3/h")
+    assert flow.range.upper == pytest.approx(12.0, rel=1e-15)
+
+
+def test_a_setpoint_has_the_range_of_its_process_variable():
+    assert POINTS["LIC-102.SP"].range == POINTS["LT-102"].range
+
+
+def test_outputs_and_travel_are_percentages():
+    for name in ("FV-101", "ZT-101", "LIC-102.MO"):
+        shown = POINTS[name].range
+        assert (shown.lower, shown.upper, shown.unit) == (0.0, 100.0, "%")
+
+
+def test_kinds_follow_the_roles():
+    assert POINTS["LT-102"].kind is PointKind.MEASUREMENT
+    assert POINTS["ZT-102"].kind is PointKind.POSITION
+    assert POINTS["FV-102"].kind is PointKind.COMMAND
+    assert POINTS["LIC-102.TI"].kind is PointKind.INTEGRAL_TIME
+    assert POINTS["TICK"].kind is PointKind.TICK
+
+
+def test_position_tag_keeps_the_loop_number_and_suffix():
+    assert position_point("FV-101") == "ZT-101"
+    assert position_point("LV-12A") == "ZT-12A"
