@@ -10,7 +10,8 @@ import numpy as np
 
 from harness.domain.models import FittedModel, LagModel
 from harness.errors import DataError
-from harness.tuning.least_squares import Problem, Solution, search, unit_frame
+from harness.tuning.frames import unit_frame
+from harness.tuning.least_squares import Problem, Solution, search
 from harness.tuning.limits import effective_samples, parameter_count, profile_limits
 
 if TYPE_CHECKING:
@@ -36,7 +37,7 @@ class OrderChoice:
     best : FittedModel
         The order with the lower criterion.
     fits : dict of int to FittedModel
-        Fits by order, 1 and 2.
+        Fits by order, 1 and 2 [-].
     criterion : dict of int to float
         Criterion by order; lower is better [-].
     effective_samples : float

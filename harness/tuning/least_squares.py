@@ -7,8 +7,7 @@ simplification, BIT 15:49, 1975).
 
 from __future__ import annotations
 
-import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -17,12 +16,11 @@ from harness.domain.models import LagModel
 from harness.tuning.response import held_step, unit_response
 
 if TYPE_CHECKING:
-    from collections.abc import Callable
-
     from numpy.typing import NDArray
 
+    from harness.tuning.frames import Frame, Shape
+
     Array = NDArray[np.float64]
-    Shape = tuple[float, float, float]  # first lag, second lag, dead time [s]
 
 _DIFFERENCE = 1e-6  # relative step of a forward difference; the response is exact to 1e-14
 _ITERATIONS = 60
@@ -63,33 +61,13 @@ class Problem:
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
-class Frame:
-    """Coordinates of the shape for one search, each within its bounds.
-
-    Parameters
-    ----------
-    shape : callable
-        From coordinates to first lag, second lag and dead time.
-    low, high : ndarray, shape (k,)
-        Bounds; equal bounds fix a coordinate.
-    gain : float or None
-        Gain held fixed, or None to solve for it.
-    """
-
-    shape: Callable[[Array], Shape]
-    low: Array
-    high: Array
-    gain: float | None = None
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
 class Solution:
     """Where a search ended.
 
     Parameters
     ----------
     coordinates : ndarray, shape (k,)
-        Coordinates in the frame.
+        Coordinates in the frame [s, or a share].
     shape : tuple of float
         First lag, second lag, dead time [s].
     gain : float
@@ -97,7 +75,7 @@ class Solution:
     residuals : ndarray, shape (n,)
         Measured minus model [fraction of PV span].
     cost : float
-        Sum of the squares of the residuals.
+        Sum of the squares of the residuals [square of a fraction of PV span].
     """
 
     coordinates: Array
@@ -105,69 +83,6 @@ class Solution:
     gain: float
     residuals: Array
     cost: float
-
-
-def unit_frame(order: int, longest: float) -> Frame:
-    """Return the frame in which the well-determined sum comes first.
-
-    Coordinates: total lag, dead time over total lag, and 4 tau1 tau2 / (tau1 + tau2)^2. The
-    last is smooth where the two lags meet, which the lags themselves are not.
-
-    Parameters
-    ----------
-    order : int
-        1 or 2 lags [-].
-    longest : float
-        Longest total lag looked at [s].
-
-    Returns
-    -------
-    Frame
-        Frame.
-    """
-    return Frame(
-        shape=lambda x: split(x[0] * (1.0 - x[1]), x[2], x[0] * x[1]),
-        low=np.array([1e-6 * longest, 0.0, 0.0]),
-        high=np.array([longest, 0.999, 1.0 if order > 1 else 0.0]),
-    )
-
-
-def split(lags: float, evenness: float, dead_time: float) -> Shape:
-    """Return two lags from their sum and evenness, and the dead time.
-
-    Parameters
-    ----------
-    lags : float
-        tau1 + tau2 [s].
-    evenness : float
-        4 tau1 tau2 / (tau1 + tau2)^2, 0 for a single lag and 1 for equal ones [-].
-    dead_time : float
-        Dead time [s].
-
-    Returns
-    -------
-    tuple of float
-        First lag, second lag, dead time [s].
-    """
-    root = math.sqrt(max(1.0 - evenness, 0.0))
-    return 0.5 * lags * (1.0 + root), 0.5 * lags * evenness / (1.0 + root), dead_time
-
-
-def evenness_of(shape: Shape) -> float:
-    """Return 4 tau1 tau2 / (tau1 + tau2)^2 of a shape [-].
-
-    Parameters
-    ----------
-    shape : tuple of float
-        First lag, second lag, dead time [s].
-
-    Returns
-    -------
-    float
-        Evenness [-].
-    """
-    total = shape[0] + shape[1]
-    return 4.0 * shape[0] * shape[1] / total**2 if total > 0.0 else 0.0
 
 
 def search(problem: Problem, frame: Frame, start: Array, tolerance: float) -> Solution:
@@ -180,7 +95,7 @@ def search(problem: Problem, frame: Frame, start: Array, tolerance: float) -> So
     frame : Frame
         Coordinates and bounds.
     start : ndarray, shape (k,)
-        Start; moved inside the bounds if it is not.
+        Start; moved inside the bounds if it is not [s, or a share].
     tolerance : float
         A step that can win less than this share of the cost is the last [-].
 
@@ -247,7 +162,7 @@ def deviations(problem: Problem, frame: Frame, solution: Solution) -> Array:
     """
     x = solution.coordinates
     unit = problem.response(solution.shape)
-    held = Frame(shape=frame.shape, low=frame.low, high=frame.high, gain=solution.gain)
+    held = replace(frame, gain=solution.gain)
     rows = np.vstack([_jacobian(problem, held, x, solution.gain, unit), unit])
     covariance = np.linalg.pinv(rows @ rows.T, rcond=1e-14, hermitian=True)
     return np.sqrt(np.maximum(np.diag(covariance), 0.0))

@@ -10,16 +10,8 @@ import numpy as np
 from scipy.special import fdtrc, stdtrit
 
 from harness.domain.models import Interval
-from harness.tuning.least_squares import (
-    Frame,
-    Problem,
-    Solution,
-    deviations,
-    evenness_of,
-    search,
-    split,
-    unit_frame,
-)
+from harness.tuning.frames import evenness_of, profile_frame, unit_frame
+from harness.tuning.least_squares import Problem, Solution, deviations, search
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
@@ -42,7 +34,7 @@ def effective_samples(residuals: NDArray[np.float64], longest: int, fitted: int)
     Parameters
     ----------
     residuals : ndarray, shape (n,)
-        Residuals of the fit.
+        Residuals of the fit [fraction of PV span].
     longest : int
         Longest batch: the total lag of the model [rows].
     fitted : int
@@ -79,7 +71,7 @@ def parameters_of(solution: Solution, order: int) -> dict[str, float]:
     Returns
     -------
     dict of str to float
-        Values, ``total_lag`` first.
+        Values, ``total_lag`` first [s; the gain as fraction of PV span per fraction of output].
     """
     first, second, dead = solution.shape
     values = {
@@ -190,13 +182,13 @@ class _Profile:
         bound = {"gain": -math.inf, "total_lag": 1e-6 * value}.get(name, 0.0)
         if self.sigma == 0.0 or (offset < 0.0 and value <= bound):
             return value
-        home = profile_frame(self.best, self.order, name, value)[1]
+        home = profile_frame(self.best.shape, self.order, name, value)[1]
         direction = np.zeros(home.size)  # of the other parameters, per unit of this one
         inside, inside_root, outside, outside_root = 0.0, 0.0, math.inf, math.inf
         for _ in range(_ROUNDS):
             tried = max(value + offset, bound)
             distance = abs(tried - value)
-            frame, _ = profile_frame(self.best, self.order, name, tried)
+            frame, _ = profile_frame(self.best.shape, self.order, name, tried)
             tolerance = 1e-3 * self.sigma**2 / self.best.cost
             found = search(self.problem, frame, home + direction * distance, tolerance)
             direction = (found.coordinates - home) / distance
@@ -236,68 +228,3 @@ def _offset(best: Solution, name: str, spread: NDArray[np.float64]) -> float:
     root = math.sqrt(max(1.0 - even, 0.0))
     parting = 0.5 * total * (math.sqrt(1.0 - even + float(spread[2])) - root)
     return max(parting, 0.5 * float(spread[1]) * total)
-
-
-def profile_frame(
-    best: Solution, order: int, name: str, value: float
-) -> tuple[Frame, NDArray[np.float64]]:
-    """Return the frame that holds one parameter, and where to start in it.
-
-    Parameters
-    ----------
-    best : Solution
-        The fit.
-    order : int
-        Lags [-].
-    name : str
-        Parameter held.
-    value : float
-        Its value, in its own unit.
-
-    Returns
-    -------
-    frame : Frame
-        Coordinates of what is left free.
-    start : ndarray, shape (k,)
-        Start.
-    """
-    first, second, dead = best.shape
-    total, even = first + second + dead, evenness_of(best.shape)
-    most, top = 1.0 if order > 1 else 0.0, 50.0 * total
-    match name:
-        case "gain":
-            frame = Frame(
-                shape=lambda x: split(x[0] * (1.0 - x[1]), x[2], x[0] * x[1]),
-                low=np.array([1e-6 * total, 0.0, 0.0]),
-                high=np.array([top, 0.999, most]),
-                gain=value,
-            )
-            return frame, np.array([total, dead / total, even])
-        case "total_lag":
-            frame = Frame(
-                shape=lambda x: split(value * (1.0 - x[0]), x[1], value * x[0]),
-                low=np.zeros(2),
-                high=np.array([0.999, most]),
-            )
-            return frame, np.array([dead / total, even])
-        case "dead_time":
-            frame = Frame(
-                shape=lambda x: split(x[0], x[1], value),
-                low=np.array([1e-6 * total, 0.0]),
-                high=np.array([top, most]),
-            )
-            return frame, np.array([max(total - value, 1e-3 * total), even])
-        case "time_constant_1":
-            frame = Frame(
-                shape=lambda x: (value, x[0], x[1]),
-                low=np.zeros(2),
-                high=np.array([value * most, top]),
-            )
-            return frame, np.array([min(second, value), dead])
-        case _:
-            frame = Frame(
-                shape=lambda x: (x[0], value, x[1]),
-                low=np.array([max(value, 1e-6 * total), 0.0]),
-                high=np.array([top, top]),
-            )
-            return frame, np.array([max(first, value), dead])
