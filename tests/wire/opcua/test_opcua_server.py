@@ -312,7 +312,9 @@ async def test_other_machines_are_kept_out(bench, new_server, host):
 
 
 @pytest.mark.slow
-async def test_the_port_is_free_again_after_a_fault(new_server, new_image, new_sink, points):
+async def test_no_image_yet_then_a_fault_and_the_port_is_free_again(
+    new_server, new_image, new_sink, points
+):
     class FaultyImage(new_image):
         def read(self):
             if self.tick() > 0:
@@ -320,8 +322,15 @@ async def test_the_port_is_free_again_after_a_fault(new_server, new_image, new_s
             return super().read()
 
     image = FaultyImage(points)
+    image.advance(-1)  # to -1: there is no image yet
     server = new_server(image, new_sink())
     await server.start()
+    async with Client(server.endpoint, timeout=5) as client:
+        waiting, sp = await read(client, "LT-102", "LIC-102.SP")
+        assert waiting.StatusCode.value == 0x80320000  # BadWaitingForInitialData
+        assert sp.StatusCode.value == 0x80320000
+    image.advance()
+    await server.publish()
     port = int(server.endpoint.rsplit(":", 1)[1])
     try:
         with pytest.raises(LinkError, match="already open"):
