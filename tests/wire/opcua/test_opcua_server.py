@@ -312,6 +312,7 @@ async def test_other_machines_are_kept_out(bench, new_server, host):
 
 
 @pytest.mark.slow
+@pytest.mark.timeout(90)  # it makes two address spaces, each seconds long on a busy machine
 async def test_no_image_yet_then_a_fault_and_the_port_is_free_again(
     new_server, new_image, new_sink, points
 ):
