@@ -191,6 +191,7 @@ async def test_reads_at_full_speed_are_condensed_and_no_write_is_lost_unread(sid
     assert len(news.activity) < 600
 
 
+@pytest.mark.timeout(60)
 @pytest.mark.slow  # an OPC UA server takes more than a second to start
 def test_both_kinds_of_link_are_open_and_opc_ua_is_told_of_new_images(two_tanks):
     opcua = OpcUaServerLink(name="opcua", host="127.0.0.1", port=0)
