@@ -63,4 +63,7 @@ def kernel(function: _Function) -> _Function:
     callable
         The same function, compiled.
     """
-    return cast("_Function", numba.njit(cache=True, fastmath=False, nogil=True)(function))
+    return cast(
+        "_Function",
+        numba.njit(cache=True, fastmath=False, nogil=True, error_model="numpy")(function),
+    )

@@ -58,16 +58,17 @@ N_PLANT_PARAMETERS = 4
 
 # Parameters of a vessel.
 AREA = 0  # [m2]
+INVERSE_AREA = 1  # a product is several times faster than a quotient [1/m2]
 VESSEL_STRIDE = 2
 
 # Parameters of a valve.
 KV = 0  # [m3/h at 1 bar]
 RANGEABILITY = 1  # [-]
-LINE_KV = 2  # [m3/h at 1 bar]; 0 for no line
-STROKE_TIME = 3  # [s]
-LAG = 4  # [s]
-PRESSURE_DROP = 5  # [Pa]
-DENSITY = 6  # [kg/m3]
+LOG_RANGEABILITY = 2  # [-]
+LINE_KV = 3  # [m3/h at 1 bar]; 0 for no line
+FLOW_PER_KV = 4  # at the pressure drop and density of this valve [m3/s per m3/h at 1 bar]
+STROKE_TIME = 5  # [s]
+LAG = 6  # [s]
 HALF_DECAY = 7  # exp(-tick / 2 / lag) [-]
 VALVE_STRIDE = 8
 
@@ -91,7 +92,9 @@ WEIGHT_DECAY = 5  # weights for a whole tick, see transmitter.damping_weights [-
 WEIGHT_START = 6
 WEIGHT_MIDDLE = 7
 WEIGHT_END = 8
-TRANSMITTER_STRIDE = 9
+INVERSE_SUBJECT_AREA = 9  # of the vessel it looks at; 0 for a valve's flow [1/m2]
+SUBJECT_COEFFICIENT = 10  # of the outlet whose flow it measures, or 0 [m2.5/s]
+TRANSMITTER_STRIDE = 11
 
 # Table of a valve, an orifice, an overflow, a transmitter.
 VALVE_DESTINATION = 0
@@ -101,7 +104,7 @@ ORIGIN = 0
 DESTINATION = 1  # -1 leaves the rig
 PATH_LINKS = 2
 KIND = 0
-SUBJECT = 1
+SUBJECT = 1  # vessel for a level or an outlet's flow, valve for a valve's flow
 STREAM = 2
 TRANSMITTER_LINKS = 3
 
@@ -173,7 +176,6 @@ class Counts:
             5 * integrated
             + self.vessels
             + 3 * self.valves
-            + self.transmitters
             + self.vessels
             + self.state_offsets()[PLANT_STATE]
         )

@@ -1,8 +1,8 @@
 """One tick of any plant: valves exactly, volumes by Runge-Kutta, instruments exactly.
 
-The commands are held over a tick. The tick is split where a valve reaches its command (a corner
-of its rate limit); between corners every right-hand side is smooth, except near an empty vessel
-and at a weir's crest, where the step is adapted.
+The commands are held over a tick. Each valve gives its flow over the tick as a parabola that
+takes the corners of its rate limit into account, so that every right-hand side is smooth, except
+near an empty vessel and at a weir's crest, where the step is adapted.
 """
 
 from __future__ import annotations
@@ -14,11 +14,10 @@ from numpy.typing import NDArray
 
 from plants import layout as at
 from plants.compile import kernel
-from plants.flow import liquid_flow, orifice_flow, series_coefficient, weir_flow
+from plants.flow import orifice_flow, weir_flow
 from plants.noise import standard_normal
 from plants.transmitter import BAD, damping_weights, loop_current, quantised
-from plants.valve import inherent_characteristic, lagged_travel, time_to_corner
-from plants.vessel import cylinder_level
+from plants.valve import installed_flow, valve_course
 
 Floats = NDArray[np.float64]
 Integers = NDArray[np.int64]
@@ -55,11 +54,15 @@ def valve_flow(table: Integers, parameters: Floats, valve: int, travel: float) -
         Flow [m3/s].
     """
     p = table[at.AT_VALVE_PARAMETERS] + valve * at.VALVE_STRIDE
-    kind = table[table[at.AT_VALVE_LINKS] + valve * at.VALVE_LINKS + at.VALVE_CHARACTERISTIC]
-    relative = inherent_characteristic(travel, kind, parameters[p + at.RANGEABILITY])
-    kv = series_coefficient(parameters[p + at.KV] * relative, parameters[p + at.LINE_KV])
-    flow: float = liquid_flow(kv, parameters[p + at.PRESSURE_DROP], parameters[p + at.DENSITY])
-    return flow
+    return installed_flow(
+        travel,
+        table[table[at.AT_VALVE_LINKS] + valve * at.VALVE_LINKS + at.VALVE_CHARACTERISTIC],
+        parameters[p + at.RANGEABILITY],
+        parameters[p + at.LOG_RANGEABILITY],
+        parameters[p + at.KV],
+        parameters[p + at.LINE_KV],
+        parameters[p + at.FLOW_PER_KV],
+    )
 
 
 @kernel
@@ -69,10 +72,13 @@ def rates(
     work: Floats,
     volumes: int,
     flows: int,
-    dry: int,
     result: int,
+    dry: int,
 ) -> None:
     """Write the rates of change of all volumes and totals.
+
+    The offsets are taken out of the table once, at the top: the compiler cannot know that
+    writing a rate leaves the table alone.
 
     Parameters
     ----------
@@ -82,49 +88,61 @@ def rates(
         Parameters of the rig.
     work : ndarray of float64
         Scratch array that holds inputs and result.
-    volumes, flows, dry, result : int
-        Where in ``work`` the volumes [m3], the valves' flows [m3/s], the flags of dry vessels
-        and the result [m3/s] stand [-].
+    volumes, flows, result : int
+        Where in ``work`` the volumes [m3], the valves' flows [m3/s] and the result [m3/s]
+        stand [-].
+    dry : int
+        Where the flags of dry vessels stand; -1 when no vessel is dry and no weir is reached [-].
     """
     totals = result + table[at.N_VESSELS]
+    vessels = table[at.AT_VESSEL_PARAMETERS] + at.INVERSE_AREA
+    links = table[at.AT_VALVE_LINKS] + at.VALVE_DESTINATION
+    outlets = table[at.AT_ORIFICE_LINKS]
+    coefficients = table[at.AT_ORIFICE_PARAMETERS]
+    n_outlets = table[at.N_ORIFICES]
     for place in range(result, totals + at.N_TOTALS):
         work[place] = 0.0
-    links = table[at.AT_VALVE_LINKS]
+    into = 0.0
     for valve in range(table[at.N_VALVES]):
         flow = work[flows + valve]
-        destination = table[links + valve * at.VALVE_LINKS + at.VALVE_DESTINATION]
-        work[result + destination] += flow
-        work[totals + at.TOTAL_IN] += flow
-    _overflow_rates(table, parameters, work, volumes, result)
-    _orifice_rates(table, parameters, work, volumes, dry, result)
+        work[result + table[links + valve * at.VALVE_LINKS]] += flow
+        into += flow
+    if dry >= 0:
+        _weir_rates(table, parameters, work, volumes, result)
+    out = work[totals + at.TOTAL_OUT]
+    for path in range(n_outlets):
+        link = outlets + path * at.PATH_LINKS
+        origin = table[link + at.ORIGIN]
+        destination = table[link + at.DESTINATION]
+        if dry >= 0 and work[dry + origin] > 0.0:
+            flow = max(work[result + origin], 0.0)
+        else:
+            level = work[volumes + origin] * parameters[vessels + origin * at.VESSEL_STRIDE]
+            flow = orifice_flow(parameters[coefficients + path * at.ORIFICE_STRIDE], level)
+        work[result + origin] -= flow
+        if destination >= 0:
+            work[result + destination] += flow
+        else:
+            out += flow
+    work[totals + at.TOTAL_IN] = into
+    work[totals + at.TOTAL_OUT] = out
 
 
 @kernel
-def _level(
-    table: Integers, parameters: Floats, levels_of: Floats, volumes: int, vessel: int
-) -> float:
-    """Return the level of a vessel whose volume stands in an array."""
-    area = parameters[table[at.AT_VESSEL_PARAMETERS] + vessel * at.VESSEL_STRIDE]
-    return cylinder_level(levels_of[volumes + vessel], area)
-
-
-@kernel
-def _overflow_rates(
+def _weir_rates(
     table: Integers, parameters: Floats, work: Floats, volumes: int, result: int
 ) -> None:
     """Add the flow over every weir."""
-    links = table[at.AT_OVERFLOW_LINKS]
     totals = result + table[at.N_VESSELS]
     for path in range(table[at.N_OVERFLOWS]):
-        origin = table[links + path * at.PATH_LINKS + at.ORIGIN]
+        link = table[at.AT_OVERFLOW_LINKS] + path * at.PATH_LINKS
+        origin = table[link + at.ORIGIN]
         p = table[at.AT_OVERFLOW_PARAMETERS] + path * at.OVERFLOW_STRIDE
         head = _level(table, parameters, work, volumes, origin) - parameters[p + at.CREST]
-        if head <= 0.0:
-            continue
         flow = weir_flow(parameters[p + at.WEIR_COEFFICIENT], head)
         caught = flow * parameters[p + at.CAUGHT_FRACTION]
         work[result + origin] -= flow
-        destination = table[links + path * at.PATH_LINKS + at.DESTINATION]
+        destination = table[link + at.DESTINATION]
         if destination >= 0:
             work[result + destination] += caught
         else:
@@ -133,26 +151,13 @@ def _overflow_rates(
 
 
 @kernel
-def _orifice_rates(
-    table: Integers, parameters: Floats, work: Floats, volumes: int, dry: int, result: int
-) -> None:
-    """Add the flow of every outlet; upstream ones come first, for the sake of dry vessels."""
-    links = table[at.AT_ORIFICE_LINKS]
-    totals = result + table[at.N_VESSELS]
-    for path in range(table[at.N_ORIFICES]):
-        origin = table[links + path * at.PATH_LINKS + at.ORIGIN]
-        if work[dry + origin] > 0.0:
-            flow = max(work[result + origin], 0.0)
-        else:
-            flow = _outlet_flow(
-                table, parameters, path, _level(table, parameters, work, volumes, origin)
-            )
-        work[result + origin] -= flow
-        destination = table[links + path * at.PATH_LINKS + at.DESTINATION]
-        if destination >= 0:
-            work[result + destination] += flow
-        else:
-            work[totals + at.TOTAL_OUT] += flow
+def _level(
+    table: Integers, parameters: Floats, volumes: Floats, first: int, vessel: int
+) -> float:
+    """Return the level of a vessel whose volume stands in an array."""
+    p = table[at.AT_VESSEL_PARAMETERS] + vessel * at.VESSEL_STRIDE
+    level: float = volumes[first + vessel] * parameters[p + at.INVERSE_AREA]
+    return level
 
 
 @kernel
@@ -160,31 +165,6 @@ def _outlet_flow(table: Integers, parameters: Floats, path: int, level: float) -
     """Return the flow of an outlet under a level."""
     p = table[at.AT_ORIFICE_PARAMETERS] + path * at.ORIFICE_STRIDE
     return orifice_flow(parameters[p + at.ORIFICE_COEFFICIENT], level)
-
-
-@kernel
-def _measured(
-    table: Integers,
-    parameters: Floats,
-    work: Floats,
-    transmitter: int,
-    volumes: int,
-    flows: int,
-) -> float:
-    """Return the true level or flow that a transmitter sees, from places in ``work``."""
-    link = table[at.AT_TRANSMITTER_LINKS] + transmitter * at.TRANSMITTER_LINKS
-    subject = table[link + at.SUBJECT]
-    kind = table[link + at.KIND]
-    if kind == at.MEASURES_VALVE_FLOW:
-        flow: float = work[flows + subject]
-        return flow
-    vessel = subject
-    if kind == at.MEASURES_ORIFICE_FLOW:
-        vessel = table[table[at.AT_ORIFICE_LINKS] + subject * at.PATH_LINKS + at.ORIGIN]
-    level = _level(table, parameters, work, volumes, vessel)
-    if kind == at.MEASURES_LEVEL:
-        return level
-    return _outlet_flow(table, parameters, subject, level)
 
 
 @kernel
@@ -196,74 +176,81 @@ def _move_valves(
     interval: float,
     flows: int,
 ) -> None:
-    """Move every valve over an interval without corners; write flows at start, middle, end."""
+    """Move every valve over an interval; write the parabolas of their flows."""
     n_valves = table[at.N_VALVES]
     whole = interval == parameters[at.TICK]
     for valve in range(n_valves):
-        p = table[at.AT_VALVE_PARAMETERS] + valve * at.VALVE_STRIDE
         position = state[table[at.AT_RAMP] + valve]
         travel = state[table[at.AT_TRAVEL] + valve]
         command = state[table[at.AT_COMMAND] + valve]
-        flow = state[table[at.AT_FLOW] + valve]
-        work[flows + valve] = flow
-        if position == command and travel == position:
-            work[flows + n_valves + valve] = flow
-            work[flows + 2 * n_valves + valve] = flow
-            continue
-        stroke_time = parameters[p + at.STROKE_TIME]
-        lag = parameters[p + at.LAG]
-        rate = 0.0
-        if position != command:
-            rate = math.copysign(1.0 / stroke_time, command - position)
-        half_decay = 0.0
-        if lag > 0.0:
-            half_decay = (
-                parameters[p + at.HALF_DECAY] if whole else math.exp(-interval / 2 / lag)
+        start = middle = end = flow = state[table[at.AT_FLOW] + valve]
+        if position != command or travel != position:
+            p = table[at.AT_VALVE_PARAMETERS] + valve * at.VALVE_STRIDE
+            lag = parameters[p + at.LAG]
+            half_decay = 0.0
+            if lag > 0.0:
+                half_decay = (
+                    parameters[p + at.HALF_DECAY] if whole else math.exp(-interval / 2 / lag)
+                )
+            start, middle, end, travel, position, flow = valve_course(
+                travel,
+                position,
+                command,
+                flow,
+                interval,
+                parameters[p + at.STROKE_TIME],
+                lag,
+                half_decay,
+                table[
+                    table[at.AT_VALVE_LINKS] + valve * at.VALVE_LINKS + at.VALVE_CHARACTERISTIC
+                ],
+                parameters[p + at.RANGEABILITY],
+                parameters[p + at.LOG_RANGEABILITY],
+                parameters[p + at.KV],
+                parameters[p + at.LINE_KV],
+                parameters[p + at.FLOW_PER_KV],
             )
-        half = lagged_travel(travel, position, rate, interval / 2, lag, half_decay)
-        end = lagged_travel(travel, position, rate, interval, lag, half_decay * half_decay)
-        work[flows + n_valves + valve] = valve_flow(table, parameters, valve, half)
-        flow = valve_flow(table, parameters, valve, end)
-        work[flows + 2 * n_valves + valve] = flow
-        state[table[at.AT_FLOW] + valve] = flow
-        state[table[at.AT_TRAVEL] + valve] = end
-        state[table[at.AT_RAMP] + valve] = position + rate * interval
+            state[table[at.AT_FLOW] + valve] = flow
+            state[table[at.AT_TRAVEL] + valve] = travel
+            state[table[at.AT_RAMP] + valve] = position
+        work[flows + valve] = start
+        work[flows + n_valves + valve] = middle
+        work[flows + 2 * n_valves + valve] = end
 
 
 @kernel
 def _runge_kutta(
-    table: Integers, parameters: Floats, state: Floats, work: Floats, interval: float
+    table: Integers,
+    parameters: Floats,
+    state: Floats,
+    work: Floats,
+    interval: float,
+    careful: bool,
 ) -> None:
-    """Integrate volumes, totals, valves and damping over an interval without corners."""
+    """Integrate volumes, totals, valves and damping over an interval."""
     n_vessels = table[at.N_VESSELS]
     n_valves = table[at.N_VALVES]
-    n_transmitters = table[at.N_TRANSMITTERS]
     n = n_vessels + at.N_TOTALS
     start, stage, k1, k, total = 0, n, 2 * n, 3 * n, 4 * n
-    dry = 5 * n
-    flows = dry + n_vessels
-    inputs = flows + 3 * n_valves
+    flows = 5 * n + n_vessels
+    dry = 5 * n if careful else -1
 
     _move_valves(table, parameters, state, work, interval, flows)
     for i in range(n):
         work[start + i] = state[i]
-    for transmitter in range(n_transmitters):
-        work[inputs + transmitter] = _measured(
-            table, parameters, work, transmitter, start, flows
-        )
-    rates(table, parameters, work, start, flows, dry, k1)
+    rates(table, parameters, work, start, flows, k1, dry)
     for i in range(n):
         work[total + i] = work[k1 + i]
         work[stage + i] = work[start + i] + 0.5 * interval * work[k1 + i]
-    rates(table, parameters, work, stage, flows + n_valves, dry, k)
+    rates(table, parameters, work, stage, flows + n_valves, k, dry)
     for i in range(n):
         work[total + i] += 2.0 * work[k + i]
         work[stage + i] = work[start + i] + 0.5 * interval * work[k + i]
-    rates(table, parameters, work, stage, flows + n_valves, dry, k)
+    rates(table, parameters, work, stage, flows + n_valves, k, dry)
     for i in range(n):
         work[total + i] += 2.0 * work[k + i]
         work[stage + i] = work[start + i] + interval * work[k + i]
-    rates(table, parameters, work, stage, flows + 2 * n_valves, dry, k)
+    rates(table, parameters, work, stage, flows + 2 * n_valves, k, dry)
     for i in range(n):
         work[total + i] += work[k + i]
         work[stage + i] = work[start + i] + interval / 6.0 * work[total + i]
@@ -272,7 +259,7 @@ def _runge_kutta(
         work[k + i] = 0.75 * work[start + i] + 0.25 * (
             work[stage + i] + interval * work[k1 + i]
         )
-    _damp(table, parameters, state, work, interval, stage, k, flows, inputs)
+    _damp(table, parameters, state, work, interval, start, k, stage, flows)
 
 
 @kernel
@@ -282,36 +269,52 @@ def _damp(
     state: Floats,
     work: Floats,
     interval: float,
-    end: int,
+    start: int,
     middle: int,
+    end: int,
     flows: int,
-    inputs: int,
 ) -> None:
     """Move the damping of every transmitter over an interval."""
     n_valves = table[at.N_VALVES]
     whole = interval == parameters[at.TICK]
+    damped = table[at.AT_DAMPED]
+    links = table[at.AT_TRANSMITTER_LINKS]
+    first = table[at.AT_TRANSMITTER_PARAMETERS]
+    held_flows = table[at.AT_FLOW]
     for transmitter in range(table[at.N_TRANSMITTERS]):
-        p = table[at.AT_TRANSMITTER_PARAMETERS] + transmitter * at.TRANSMITTER_STRIDE
-        damped = table[at.AT_DAMPED] + transmitter
-        x1 = _measured(table, parameters, work, transmitter, end, flows + 2 * n_valves)
-        if parameters[p + at.DAMPING] <= 0.0:
-            state[damped] = x1
+        p = first + transmitter * at.TRANSMITTER_STRIDE
+        link = links + transmitter * at.TRANSMITTER_LINKS
+        subject = table[link + at.SUBJECT]
+        kind = table[link + at.KIND]
+        damping = parameters[p + at.DAMPING]
+        if kind == at.MEASURES_VALVE_FLOW:
+            x0 = work[flows + subject]
+            xm = work[flows + n_valves + subject]
+            x1 = work[flows + 2 * n_valves + subject]
+            if damping <= 0.0:
+                x1 = state[held_flows + subject]
+        else:
+            inverse = parameters[p + at.INVERSE_SUBJECT_AREA]
+            x0 = work[start + subject] * inverse
+            xm = work[middle + subject] * inverse
+            x1 = work[end + subject] * inverse
+            if kind == at.MEASURES_ORIFICE_FLOW:
+                coefficient = parameters[p + at.SUBJECT_COEFFICIENT]
+                x0 = orifice_flow(coefficient, x0)
+                xm = orifice_flow(coefficient, xm)
+                x1 = orifice_flow(coefficient, x1)
+        if damping <= 0.0:
+            state[damped + transmitter] = x1
             continue
-        xm = _measured(table, parameters, work, transmitter, middle, flows + n_valves)
         if whole:
             w_decay = parameters[p + at.WEIGHT_DECAY]
             w_start = parameters[p + at.WEIGHT_START]
             w_middle = parameters[p + at.WEIGHT_MIDDLE]
             w_end = parameters[p + at.WEIGHT_END]
         else:
-            w_decay, w_start, w_middle, w_end = damping_weights(
-                interval, parameters[p + at.DAMPING]
-            )
-        state[damped] = (
-            w_decay * state[damped]
-            + w_start * work[inputs + transmitter]
-            + w_middle * xm
-            + w_end * x1
+            w_decay, w_start, w_middle, w_end = damping_weights(interval, damping)
+        state[damped + transmitter] = (
+            w_decay * state[damped + transmitter] + w_start * x0 + w_middle * xm + w_end * x1
         )
 
 
@@ -332,9 +335,11 @@ def _needs_care(table: Integers, parameters: Floats, state: Floats, interval: fl
     for path in range(table[at.N_OVERFLOWS]):
         origin = table[table[at.AT_OVERFLOW_LINKS] + path * at.PATH_LINKS + at.ORIGIN]
         p = table[at.AT_OVERFLOW_PARAMETERS] + path * at.OVERFLOW_STRIDE
-        area = parameters[table[at.AT_VESSEL_PARAMETERS] + origin * at.VESSEL_STRIDE]
+        inverse = parameters[
+            table[at.AT_VESSEL_PARAMETERS] + origin * at.VESSEL_STRIDE + at.INVERSE_AREA
+        ]
         # All that flows anywhere in the rig bounds the rise of any level.
-        if (state[origin] + passing * interval) / area > parameters[p + at.CREST]:
+        if (state[origin] + passing * interval) * inverse > parameters[p + at.CREST]:
             return True
     return False
 
@@ -357,7 +362,7 @@ def _mark_dry(table: Integers, parameters: Floats, state: Floats, work: Floats) 
             continue
         for i in range(n):
             work[i] = state[i]
-        rates(table, parameters, work, 0, flows, dry, n)
+        rates(table, parameters, work, 0, flows, n, dry)
         inflow = work[n + origin] + _outlet_flow(table, parameters, path, level)
         if inflow >= _outlet_flow(table, parameters, path, _DRY_LEVEL):
             continue
@@ -384,13 +389,13 @@ def _doubling_error(
     whole_step = kept + size
     for i in range(size):
         work[kept + i] = state[i]
-    _runge_kutta(table, parameters, state, work, step)
+    _runge_kutta(table, parameters, state, work, step, True)
     for i in range(n_vessels):
         work[whole_step + i] = state[i]
     for i in range(size):
         state[i] = work[kept + i]
-    _runge_kutta(table, parameters, state, work, step / 2)
-    _runge_kutta(table, parameters, state, work, step / 2)
+    _runge_kutta(table, parameters, state, work, step / 2, True)
+    _runge_kutta(table, parameters, state, work, step / 2, True)
     error = 0.0
     for i in range(n_vessels):
         allowed = _ABSOLUTE_TOLERANCE + _RELATIVE_TOLERANCE * abs(state[i])
@@ -404,9 +409,9 @@ def _doubling_error(
 def _careful(
     table: Integers, parameters: Floats, state: Floats, work: Floats, interval: float
 ) -> None:
-    """Integrate an interval without corners in adapted steps, by step doubling."""
+    """Integrate an interval in adapted steps, by step doubling."""
     n = table[at.N_VESSELS] + at.N_TOTALS
-    kept = 5 * n + table[at.N_VESSELS] + 3 * table[at.N_VALVES] + table[at.N_TRANSMITTERS]
+    kept = 5 * n + table[at.N_VESSELS] + 3 * table[at.N_VALVES]
     smallest = interval * _SMALLEST_STEP
     done = 0.0
     step = interval
@@ -442,38 +447,15 @@ def plant_tick(table: Integers, parameters: Floats, state: Floats, work: Floats)
     work : ndarray of float64
         Scratch of ``Counts.work_size`` places.
     """
-    remaining = parameters[at.TICK]
-    ramps = table[at.AT_RAMP]
-    commands = table[at.AT_COMMAND]
-    n_valves = table[at.N_VALVES]
-    while remaining > 0.0:
-        interval = remaining
-        for valve in range(n_valves):
-            p = table[at.AT_VALVE_PARAMETERS] + valve * at.VALVE_STRIDE
-            corner = time_to_corner(
-                state[ramps + valve], state[commands + valve], parameters[p + at.STROKE_TIME]
-            )
-            if corner <= 0.0:
-                state[ramps + valve] = state[commands + valve]
-            elif corner < interval:
-                interval = corner
-        if _needs_care(table, parameters, state, interval):
-            _careful(table, parameters, state, work, interval)
-        else:
-            _runge_kutta(table, parameters, state, work, interval)
-        for valve in range(n_valves):
-            p = table[at.AT_VALVE_PARAMETERS] + valve * at.VALVE_STRIDE
-            left = time_to_corner(
-                state[ramps + valve], state[commands + valve], parameters[p + at.STROKE_TIME]
-            )
-            # Rounding leaves a corner that was just reached within a few units of the last place.
-            if left <= 1e-12 * parameters[p + at.STROKE_TIME]:
-                state[ramps + valve] = state[commands + valve]
-        remaining -= interval
+    interval = parameters[at.TICK]
+    if _needs_care(table, parameters, state, interval):
+        _careful(table, parameters, state, work, interval)
+    else:
+        _runge_kutta(table, parameters, state, work, interval, False)
 
 
 @kernel
-def sample(table: Integers, parameters: Floats, state: Floats, work: Floats, tick: int) -> None:
+def sample(table: Integers, parameters: Floats, state: Floats, tick: int) -> None:
     """Sample every transmitter: true value, current and quality.
 
     Parameters
@@ -484,37 +466,40 @@ def sample(table: Integers, parameters: Floats, state: Floats, work: Floats, tic
         Parameters of the rig.
     state : ndarray of float64
         State of the rig; the samples are written into it.
-    work : ndarray of float64
-        Scratch.
     tick : int
         Tick of the sample, for the noise [ticks].
     """
-    n = table[at.N_VESSELS] + at.N_TOTALS
-    flows = 5 * n + table[at.N_VESSELS]
-    for i in range(n):
-        work[i] = state[i]
-    for valve in range(table[at.N_VALVES]):
-        work[flows + valve] = state[table[at.AT_FLOW] + valve]
+    links = table[at.AT_TRANSMITTER_LINKS]
+    first = table[at.AT_TRANSMITTER_PARAMETERS]
+    damped = table[at.AT_DAMPED]
+    true = table[at.AT_TRUE]
+    currents = table[at.AT_CURRENT]
+    qualities = table[at.AT_QUALITY]
+    forced = table[at.AT_FORCED]
+    flows = table[at.AT_FLOW]
+    seed = table[at.SEED]
     for transmitter in range(table[at.N_TRANSMITTERS]):
-        p = table[at.AT_TRANSMITTER_PARAMETERS] + transmitter * at.TRANSMITTER_STRIDE
-        state[table[at.AT_TRUE] + transmitter] = _measured(
-            table, parameters, work, transmitter, 0, flows
-        )
-        forced = state[table[at.AT_FORCED] + transmitter]
-        if forced > 0.0:
-            state[table[at.AT_CURRENT] + transmitter] = forced
-            state[table[at.AT_QUALITY] + transmitter] = BAD
+        p = first + transmitter * at.TRANSMITTER_STRIDE
+        link = links + transmitter * at.TRANSMITTER_LINKS
+        subject = table[link + at.SUBJECT]
+        kind = table[link + at.KIND]
+        if kind == at.MEASURES_VALVE_FLOW:
+            value = state[flows + subject]
+        else:
+            value = state[subject] * parameters[p + at.INVERSE_SUBJECT_AREA]
+            if kind == at.MEASURES_ORIFICE_FLOW:
+                value = orifice_flow(parameters[p + at.SUBJECT_COEFFICIENT], value)
+        state[true + transmitter] = value
+        if state[forced + transmitter] > 0.0:
+            state[currents + transmitter] = state[forced + transmitter]
+            state[qualities + transmitter] = BAD
             continue
         fraction = (
-            state[table[at.AT_DAMPED] + transmitter] * parameters[p + at.SCALE]
-            + parameters[p + at.OFFSET]
+            state[damped + transmitter] * parameters[p + at.SCALE] + parameters[p + at.OFFSET]
         )
         noise = parameters[p + at.NOISE]
         if noise > 0.0:
-            stream = table[
-                table[at.AT_TRANSMITTER_LINKS] + transmitter * at.TRANSMITTER_LINKS + at.STREAM
-            ]
-            fraction += noise * standard_normal(table[at.SEED], stream, tick)
+            fraction += noise * standard_normal(seed, table[link + at.STREAM], tick)
         current, quality = loop_current(quantised(fraction, parameters[p + at.RESOLUTION]))
-        state[table[at.AT_CURRENT] + transmitter] = current
-        state[table[at.AT_QUALITY] + transmitter] = quality
+        state[currents + transmitter] = current
+        state[qualities + transmitter] = quality

@@ -1,0 +1,1 @@
+"""The tick of a rig: controller, plant, sample. Synchronous; it never waits and does no I/O."""
