@@ -133,7 +133,9 @@ def _rings(draft: RigDraft) -> None:
 
 def _vessel(vessel: Entry, draft: RigDraft) -> None:
     tag = vessel.text("tag")
-    ends = {end for path in draft.paths for end in (path.raw.get("from"), path.raw.get("to"))}
+    ends = {
+        end for path in draft.paths for end in (path.text("origin"), path.text("destination"))
+    }
     if tag and tag not in ends:
         vessel.problem("tag", f'"{tag}" has no path; let one lead into it or out of it')
     level, height = vessel.number("initial_level"), vessel.number("height")
