@@ -205,12 +205,11 @@ def _solve(problem: Problem, order: int) -> Solution:
     """Return the best fit from the best points of a coarse grid over shapes."""
     record = problem.output.size * problem.tick
     frame = unit_frame(order, 2.0 * record)
-    evens = (0.5, 0.95) if order > 1 else (0.0,)
+    even = 0.8 if order > 1 else 0.0
     points = [
         np.array([total, dead, even])
-        for total in np.geomspace(max(problem.tick, 1e-3 * record), record, 12)
+        for total in np.geomspace(max(problem.tick, 1e-3 * record), record, 10)
         for dead in (0.02, 0.3, 0.7)
-        for even in evens
     ]
 
     def cost(x: Array) -> float:

@@ -128,10 +128,10 @@ def search(problem: Problem, frame: Frame, start: Array, tolerance: float) -> So
                 damping = max(0.1 * damping, 1e-12)
                 break
             damping *= 10.0
-        if cost - trial_cost <= tolerance * cost:
-            cost = min(cost, trial_cost)
+        won, cost_before, cost = cost - trial_cost, cost, min(cost, trial_cost)
+        # What a step wins beside its promise is of the size of what is still to be won.
+        if won <= tolerance * cost_before or abs(promised - won) <= tolerance * cost_before:
             break
-        cost = trial_cost
     return Solution(
         coordinates=x,
         shape=_plain(frame.shape(x)),

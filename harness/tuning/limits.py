@@ -17,7 +17,8 @@ if TYPE_CHECKING:
     from numpy.typing import NDArray
 
 _ROUNDS = 15
-_CLOSE = 0.01  # of the critical value: 0.1 % of coverage at 95 %
+_CLOSE = 0.05  # of the critical value; from there on the root deviance is taken as straight
+_PRECISION = 3e-3  # of the variance, to which each cost is found: 8e-4 of a root of two
 _SIGNIFICANT = 3.0  # standard deviations above white before residuals count as correlated
 _LEAST_FREEDOM = 2.0
 
@@ -189,7 +190,7 @@ class _Profile:
             tried = max(value + offset, bound)
             distance = abs(tried - value)
             frame, _ = profile_frame(self.best.shape, self.order, name, tried)
-            tolerance = 1e-3 * self.sigma**2 / self.best.cost
+            tolerance = _PRECISION * self.sigma**2 / self.best.cost
             found = search(self.problem, frame, home + direction * distance, tolerance)
             direction = (found.coordinates - home) / distance
             root = math.sqrt(max(found.cost - self.best.cost, 0.0)) / self.sigma
