@@ -28,8 +28,8 @@ MEANING = {
 }
 METHOD = (
     "The plant is simulated by its nonlinear balances; controller, valves and transmitters act "
-    "on it tick by tick. Each automatic phase is compared with two predictions made before "
-    "looking at the measurement: the fitted linear model under the same sampled block, and this "
+    "on it tick by tick. Each automatic phase is compared with two "
+    "predictions: the fitted linear model under the same sampled block, and this "
     "plant under the ideal block with the same sampling, delay and noise. The controller is "
     "judged against the second, on the true level, so that noise of the transmitter is not "
     "counted against it. The gap between the two predictions says how far the step leaves the "

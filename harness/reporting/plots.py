@@ -34,7 +34,7 @@ STYLES: dict[str, dict[str, Any]] = {
 ORDER = ("transmitted", "design_target", "predicted_linear", "measured", "predicted_nonlinear")
 BAND_COLOUR = "#e4ebe6"
 MOST_POINTS = 1200  # of a curve; more than the pixels it is printed with
-WIDTH, HEIGHT = 7.1, 4.05  # [inch]; the printable width of A4
+WIDTH, HEIGHT = 7.1, 3.75  # [inch]; the printable width of A4
 SETTINGS: dict[Any, Any] = {
     "svg.fonttype": "none",  # text stays text: it can be searched and read aloud
     "font.family": "sans-serif",
@@ -160,14 +160,15 @@ def _draw_process_variable(axes: Any, curves: PhaseCurves, settled: float | None
     axes.plot(curves.time, curves.setpoint, drawstyle="steps-post", **STYLES["setpoint"])
     axes.set_ylabel(f"Process variable [{curves.unit}]")
     if settled is not None and 0 <= settled <= curves.time[-1]:
-        axes.axvline(settled, color=INK, linewidth=0.7, zorder=1)
+        axes.axvline(settled, color=FAINT, linewidth=0.7, zorder=1)
         axes.annotate(
-            "settled",
+            "measured: settled",
             (settled, 1.0),
             xycoords=("data", "axes fraction"),
             xytext=(3, -9),
             textcoords="offset points",
             fontsize=7.5,
+            color="#56616c",
         )
 
 
@@ -201,6 +202,8 @@ def _inline(document: str, label: str) -> str:
     element = re.sub(r'(<svg[^>]*?) width="[^"]*"', r"\1", element, count=1)
     element = re.sub(r'(<svg[^>]*?) height="[^"]*"', r"\1", element, count=1)
     element = re.sub(r"<metadata>.*?</metadata>\s*", "", element, flags=re.DOTALL)
+    # Its style names every element of the page; the report's own style has it for drawings only.
+    element = re.sub(r"<defs>\s*<style.*?</style>\s*</defs>\s*", "", element, flags=re.DOTALL)
     element = re.sub(r"<!--.*?-->\s*", "", element, flags=re.DOTALL)
     escaped = label.replace("&", "&amp;").replace("<", "&lt;").replace('"', "&quot;")
     return element.replace("<svg", f'<svg role="img" aria-label="{escaped}"', 1)

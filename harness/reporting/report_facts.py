@@ -19,7 +19,7 @@ CONDITION_UNITS = {"tick": "s", "scan": "s", "period": "s", "delay": "s"}
 NO_FIGURE = "\N{EN DASH}"
 PATHS = {"output": "controller output to process variable", "load": "load to process variable"}
 PARAMETERS = {
-    "gain": ("Gain", "fraction of span per fraction of output"),
+    "gain": ("Gain", "% of span per % of output"),
     "gain_engineering": ("Gain", "engineering units"),
     "total_lag": ("Total lag, dead time included", "s"),
     "time_constant_1": ("Time constant 1", "s"),
@@ -130,14 +130,15 @@ def _model_table(path: str, model: Document) -> Markup:
         known = low is not None and high is not None
         rows.append(
             [
-                joined((title, element("small", unit))),
+                title,
+                unit,
                 element("b", figure(here.get(name), NO_FIGURE)),
                 f"{figure(low)} to {figure(high)}" if known else NO_FIGURE,
                 figure(there.get(name), NO_FIGURE),
                 _difference(here.get(name), there.get(name)),
             ]
         )
-    titles = ("Parameter", "Model used", level, "Linearised plant", "Difference")
+    titles = ("Parameter", "Unit", "Model used", level, "Linearised plant", "Difference")
     caption = element("h4", f"From {PATHS.get(path, path)}")
     return Markup(f'<div class="together">{caption}{table(titles, rows, css="model")}</div>')
 

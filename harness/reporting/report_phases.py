@@ -11,9 +11,10 @@ from harness.reporting.plots import has_values, line_sample, phase_drawing
 from harness.reporting.words import (
     duration,
     figure,
+    figure_in,
     humanised,
-    in_unit,
     limit_words,
+    metric_title,
     metric_words,
     outcome_of,
     quantity,
@@ -27,10 +28,10 @@ if TYPE_CHECKING:
 
 LEGEND = {
     "measured": "measured",
-    "predicted_nonlinear": "predicted, nonlinear plant (judged against)",
+    "predicted_nonlinear": "predicted, nonlinear plant: judged against",
     "predicted_linear": "predicted, linear model",
-    "design_target": "design target (not judged)",
-    "transmitted": "as transmitted to the controller",
+    "design_target": "design target, not judged",
+    "transmitted": "transmitted",
     "setpoint": "setpoint",
     "load": "load valve",
 }
@@ -49,7 +50,15 @@ def phase_overview(document: Mapping[str, object]) -> Markup:
         verdict = badge(text(phase, "verdict") or Outcome.SHOWN)
         rows.append([text(phase, "name"), what, length, *cells, verdict])
         kinds.append("" if metrics else "unscored")
-    titles = ("Phase", "What", "h:mm:ss", "Settling, 2 %", "Overshoot or peak", "IAE", "Offset")
+    titles = (
+        "Phase",
+        "What",
+        "Duration",
+        "Settling, 2 %",
+        "Overshoot or peak",
+        "IAE",
+        "Offset",
+    )
     return table((*titles, "Verdict"), rows, css="overview", row_css=kinds)
 
 
@@ -132,18 +141,16 @@ def _metrics_table(metrics: Mapping[str, Mapping[str, object]]) -> Markup:
 def _metric_row(name: str, metric: Mapping[str, object], outcome: Outcome) -> list[object]:
     unit, limit, words = text(metric, "unit"), part(metric, "limit"), metric_words(name)
     measured, nonlinear, linear = (
-        in_unit(number(metric, key), unit)
-        for key in ("measured", "predicted_nonlinear", "predicted_linear")
+        number(metric, key) for key in ("measured", "predicted_nonlinear", "predicted_linear")
     )
-    low, high = (in_unit(number(limit, key), unit) for key in ("low", "high"))
     return [
         joined((words.title, element("small", words.of_what) if words.of_what else "")),
-        element("b", figure(measured)),
-        figure(nonlinear),
-        figure(linear),
+        element("b", figure_in(measured, unit)),
+        figure_in(nonlinear, unit),
+        figure_in(linear, unit),
         shown_unit(unit),
         limit_words(limit, unit) if limit else "not judged",
-        gauge(measured, nonlinear, low, high),
+        gauge(measured, nonlinear, number(limit, "low"), number(limit, "high")),
         badge(outcome),
     ]
 
@@ -154,10 +161,10 @@ def _bases(metrics: Mapping[str, Mapping[str, object]]) -> Markup:
     for name, metric in metrics.items():
         basis = text(part(metric, "limit"), "basis")
         if basis:
-            by_basis.setdefault(basis, []).append(metric_words(name).title)
+            by_basis.setdefault(basis, []).append(metric_title(name))
     if not by_basis:
         return Markup("")
-    words = [f"{basis}: {', '.join(names)}." for basis, names in by_basis.items()]
+    words = [f"{'; '.join(names)}: {basis}." for basis, names in by_basis.items()]
     gauge_words = (
         " In the drawings the bar is what is allowed, the stroke the nonlinear prediction, the "
         "dot the measurement. Errors under the integrals are fractions of span."

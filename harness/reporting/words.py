@@ -16,6 +16,7 @@ NOT_REACHED = "not reached"
 DIGITS = 4  # significant; a level transmitter resolves no more
 LARGEST_PLAIN = 1e7  # beyond it, and below the next, powers of ten are easier to read
 SMALLEST_PLAIN = 1e-4
+FINEST = 4  # decimals of a percentage; nobody judges a millionth of a span
 
 CAUTIONS = (
     "The outputs of a controller under test must be isolated from the field: no output may "
@@ -44,10 +45,10 @@ class MetricWords:
 
 
 METRICS = {
-    "settling_time_2": MetricWords(title="Settling time, 2 % band", of_what=""),
-    "settling_time_5": MetricWords(title="Settling time, 5 % band", of_what=""),
+    "settling_time_2": MetricWords(title="Settling time", of_what="2 % band"),
+    "settling_time_5": MetricWords(title="Settling time", of_what="5 % band"),
     "overshoot": MetricWords(title="Overshoot", of_what="of the step"),
-    "rise_time": MetricWords(title="Rise time, 10 to 90 %", of_what=""),
+    "rise_time": MetricWords(title="Rise time", of_what="10 to 90 %"),
     "peak_deviation": MetricWords(title="Peak deviation", of_what="of span"),
     "peak_time": MetricWords(title="Time of the peak", of_what=""),
     "iae": MetricWords(title="IAE", of_what="integral of |e|"),
@@ -75,6 +76,12 @@ def outcome_of(text: str) -> Outcome:
         return Outcome(text)
     except ValueError:
         return Outcome.INVALID
+
+
+def metric_title(name: str) -> str:
+    """Return the full name of a metric in one line."""
+    words = metric_words(name)
+    return f"{words.title}, {words.of_what}" if words.of_what else words.title
 
 
 def metric_words(name: str) -> MetricWords:
@@ -112,6 +119,30 @@ def figure(value: float | None, missing: str = NOT_REACHED) -> str:
     return f"{rounded:.{max(0, decimals)}f}"
 
 
+def figure_in(value: float | None, unit: str, missing: str = NOT_REACHED) -> str:
+    """Return a number as shown in ``shown_unit(unit)``: fractions times 100, and not too fine.
+
+    Parameters
+    ----------
+    value : float or None
+        The number, in ``unit``; None and what is not finite give ``missing``.
+    unit : str
+        Its unit, ``"1"`` for a fraction.
+    missing : str
+        The word.
+    """
+    words = figure(in_unit(value, unit), missing)
+    shown = in_unit(value, unit)
+    if unit != "1" or shown is None or words == missing:
+        return words
+    rounded = round(shown, FINEST)
+    if rounded == 0.0:
+        return "0" if shown == 0.0 else f"{0:.{FINEST}f}"
+    return (
+        figure(rounded) if len(words.partition(".")[2]) <= FINEST else f"{rounded:.{FINEST}f}"
+    )
+
+
 def shown_unit(unit: str) -> str:
     """Return a unit as people read it; a fraction is shown in per cent."""
     return UNITS.get(unit, unit)
@@ -124,18 +155,18 @@ def in_unit(value: float | None, unit: str) -> float | None:
 
 def quantity(value: float | None, unit: str, missing: str = NOT_REACHED) -> str:
     """Return number and unit, e.g. ``4.050 %`` for 0.0405 of unit ``"1"``."""
-    words = figure(in_unit(value, unit), missing)
+    words = figure_in(value, unit, missing)
     return words if words == missing else f"{words} {shown_unit(unit)}".rstrip()
 
 
 def limit_words(limit: Mapping[str, object], unit: str) -> str:
     """Return the limits in words, in the unit as shown: ``26.10 to 31.90``, ``at most 5.000``."""
-    low, high = (in_unit(number(limit, key), unit) for key in ("low", "high"))
+    low, high = (number(limit, key) for key in ("low", "high"))
     if low is not None and high is not None:
-        return f"{figure(low)} to {figure(high)}"
+        return f"{figure_in(low, unit)} to {figure_in(high, unit)}"
     if high is not None:
-        return f"at most {figure(high)}"
-    return f"at least {figure(low)}" if low is not None else "none"
+        return f"at most {figure_in(high, unit)}"
+    return f"at least {figure_in(low, unit)}" if low is not None else "none"
 
 
 def duration(seconds: float) -> str:

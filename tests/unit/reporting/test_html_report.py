@@ -1,0 +1,218 @@
+"""The report: self-contained, the same bytes each time, complete, and tolerant of gaps."""
+
+from __future__ import annotations
+
+import re
+from dataclasses import replace
+from html.parser import HTMLParser
+
+import numpy as np
+import pytest
+
+from harness.domain.run import Event, EventKind
+from harness.reporting.html import render_report
+from harness.reporting.markup import gauge
+from harness.reporting.words import CAUTIONS
+
+VOID = {"meta", "br"}
+
+
+class Reader(HTMLParser):
+    """Keeps the text and refuses elements that are not closed in order."""
+
+    def __init__(self):
+        super().__init__()
+        self.open, self.words, self.ids, self.links, self.names = [], [], [], [], []
+
+    def handle_starttag(self, tag, attrs):
+        self.names.append(tag)
+        self.note(dict(attrs))
+        if tag not in VOID:
+            self.open.append(tag)
+
+    def handle_startendtag(self, tag, attrs):
+        self.note(dict(attrs))
+
+    def note(self, attributes):
+        self.links += [
+            attributes[key] for key in ("href", "src", "xlink:href") if key in attributes
+        ]
+        if "id" in attributes:
+            self.ids.append(attributes["id"])
+
+    def handle_endtag(self, tag):
+        assert self.open.pop() == tag
+
+    def handle_data(self, data):
+        if self.open and self.open[-1] != "style":
+            self.words.append(data)
+
+    @property
+    def text(self):
+        return " ".join(" ".join(self.words).split())
+
+
+def read(page):
+    reader = Reader()
+    reader.feed(page)
+    reader.close()
+    assert reader.open == []
+    return reader
+
+
+@pytest.fixture(scope="module")
+def cache():
+    return {}
+
+
+@pytest.fixture
+def page(cache, document, all_curves, events, header):
+    if "page" not in cache:
+        cache["page"] = render_report(document, all_curves, events, header)
+    return cache["page"]
+
+
+def test_the_same_input_gives_the_same_bytes(page, document, all_curves, events, header):
+    assert render_report(document, all_curves, events, header) == page
+
+
+def test_it_needs_nothing_from_outside(page):
+    reader = read(page)
+    assert all(link.startswith("#") for link in reader.links)
+    assert not {"script", "link", "img", "iframe"} & set(reader.names)
+    style = re.search(r"<style>(.*?)</style>", page, re.DOTALL).group(1)
+    assert "url(" not in style
+    assert "@import" not in style
+
+
+def test_drawings_share_no_ids_and_refer_only_to_their_own(page):
+    reader = read(page)
+    assert len(reader.ids) == len(set(reader.ids))
+    referred = {link[1:] for link in reader.links} | set(re.findall(r"url\(#([^)]+)\)", page))
+    assert referred <= set(reader.ids)
+    assert page.count('role="img"') == 3
+
+
+def test_everything_an_engineer_asks_for_is_there(page, header):
+    text = read(page).text
+    expected = [
+        "Process-water make-up skid",
+        "Trial: Acceptance PI",
+        header.run,
+        "numba 0.68.1",
+        "20260305",
+        "0.62 s",
+        "95 % limits",
+        "214.7",
+        "208.0 to 221.4",
+        "213.8",
+        "1.527 % of output per % of span",
+        "65.49 % of span",  # 100 / 1.527
+        "0.3681 repeats per minute",  # 60 / 163
+        "163.0 s = 2.717 min",
+        "0.009368 1/s",  # 1.527 / 163
+        "factor 4.610 = 13.27 dB",  # 20 log10 4.61
+        "Skogestad",
+        "506.2",
+        "443.3 to 541.8",
+        "13.66",
+        "The two predictions differ by 1.9 % of the step",
+        "not decidable",
+        "0.4120 ms",
+        "controller found",
+        "2690.0",
+        "Tested by",
+        "Witnessed by",
+        "Date",
+        *CAUTIONS,
+    ]
+    assert [words for words in expected if words not in text] == []
+    assert not re.search(r"\b(nan|None|inf)\b", text)
+
+
+def test_a_failure_shows_in_the_head_and_at_its_metric(failed_document, header):
+    page = render_report(failed_document, [], [], header)
+    text = read(page).text
+    assert "outside its limits" in text
+    assert failed_document["reasons"][0] in text
+    assert "not reached" in text
+    assert page.count('class="outside"') == 1
+
+
+def test_what_comes_from_files_is_escaped(document, all_curves, header):
+    nasty = '</style><script>alert("x")</script>'
+    document["phases"][3]["findings"] = [nasty]
+    document["phases"][3]["name"] = nasty
+    event = Event(tick=1, kind=EventKind.NOTE, subject=nasty, text=nasty)
+    odd = replace(header, rig_name=nasty, trial_name=nasty)
+    page = render_report(document, [replace(all_curves[0], name=nasty)], [event], odd)
+    reader = read(page)
+    assert "script" not in reader.names
+    assert nasty in reader.text
+    assert page.count("</style>") == 1
+
+
+@pytest.mark.parametrize(
+    "document",
+    [
+        {},
+        {"schema": 1, "verdict": "invalid", "reasons": ["stopped by the user"]},
+        {"verdict": "pass", "loops": {"LIC-102": {}}, "phases": [{"name": "settle"}]},
+        {
+            "verdict": "pass",
+            "loops": {
+                "LIC-102": {
+                    "models": {"output": {"gain": 1.0}},
+                    "tuning": {"law": "P", "gain": 2.0, "integral_time": None},
+                }
+            },
+            "phases": [{"name": "x", "metrics": {"iae": {"unit": "s", "measured": 1.0}}}],
+            "lateness": None,
+        },
+    ],
+)
+def test_absent_parts_are_no_trouble(document, header):
+    text = read(render_report(document, [], [], header)).text
+    assert "Conditions" in text
+    assert "None " not in text.replace("None were recorded", "")
+
+
+def test_curves_without_values_are_left_out_and_long_ones_stay_small(
+    document, all_curves, header
+):
+    count = 200_000
+    curves = all_curves[0]
+    nothing = np.full(count, np.nan)
+    long = replace(
+        curves,
+        time=np.linspace(-60, 900, count),
+        setpoint=np.ones(count),
+        measured=np.ones(count),
+        transmitted=np.random.default_rng(1).normal(1, 0.01, count),
+        predicted_linear=nothing,
+        predicted_nonlinear=nothing,
+        design_target=None,
+        output=np.ones(count),
+        output_predicted=nothing,
+        load=np.ones(count),
+    )
+    page = render_report(document, [long], [], header)
+    assert "predicted, linear model" not in page
+    assert "transmitted" in page
+    assert len(page) < 200_000
+
+
+def test_many_events_are_cut_with_a_word(document, header):
+    event = Event(tick=1, kind=EventKind.NOTE, subject="s", text="t")
+    text = read(render_report(document, [], [event] * 250, header)).text
+    assert "50 more events are in the record" in text
+
+
+def test_the_gauge_puts_the_dot_where_the_figure_is():
+    inside = gauge(5.0, 5.0, 0.0, 10.0)
+    assert 'cx="46.0"' in inside  # half way between 18 and 74
+    assert 'class="inside"' in inside
+    assert 'class="outside"' in gauge(10.1, 5.0, 0.0, 10.0)
+    assert 'cx="87.0"' in gauge(1e9, None, None, 10.0)
+    assert gauge(None, 5.0, 0.0, 10.0) == ""
+    assert gauge(1.0, 5.0, 0.0, None) == ""
