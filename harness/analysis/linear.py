@@ -218,7 +218,7 @@ def predict_sampled(  # noqa: PLR0917  the order of the loop: what is in it, whe
     setpoint, load : ndarray, shape (n,)
         Setpoint and output of the load valve at each tick [-].
     mode : ndarray of int, shape (n,)
-        MANUAL or AUTOMATIC of ``harness.controllers.block``.
+        MANUAL or AUTOMATIC of ``harness.controllers.block`` [-].
     manual_output : ndarray, shape (n,)
         Output in manual [-].
     initial_output, initial_pv : float

@@ -82,7 +82,7 @@ def setpoint_metrics(
     Returns
     -------
     dict of str to float or None
-        By the names of ``METRIC_UNITS``.
+        By the names of ``METRIC_UNITS``, in the units given there [s, s^2 or -].
 
     Raises
     ------
@@ -149,7 +149,8 @@ def load_metrics(
     Returns
     -------
     dict of str to float or None
-        By the names of ``METRIC_UNITS``; overshoot, rise time and decay ratio are None.
+        By the names of ``METRIC_UNITS``, in the units given there [s, s^2 or -]; overshoot,
+        rise time and decay ratio are None.
 
     Raises
     ------
