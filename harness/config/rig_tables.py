@@ -163,7 +163,17 @@ class LoopTable(Table):
 
 
 class ItemTable(Table):
-    """One line of ``items`` of a Modbus link."""
+    """One line of ``items`` of a Modbus link.
+
+    Parameters
+    ----------
+    address : int
+        First register or bit, counted from 0 [-].
+    factor : float
+        Multiplier of a value before it becomes an integer [-].
+    counts : list of int
+        Counts of the two ends of the range [-].
+    """
 
     point: Tag
     address: Annotated[int, Field(ge=0, le=65535)]
