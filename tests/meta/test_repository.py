@@ -26,7 +26,7 @@ FORBIDDEN = re.compile(
             "seed " + "document",
             "sub" + "agent",
             "/(wo" + "rk|ro" + "ot|fa" + "rm)/",
-            r"\.lib" + "rary",
+            r"/\.lib" + "rary",
         ]
     ),
     re.IGNORECASE,
