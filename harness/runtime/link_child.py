@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import asyncio
+import pickle
 import signal
 import threading
 from contextlib import AsyncExitStack, suppress
@@ -24,6 +25,7 @@ if TYPE_CHECKING:
     from harness.links.port import ImageSource
 
 _QUIET_S = 0.010  # reads are condensed for this long [s]
+_FITS_BYTES = 4_096  # into any system's pipe, whatever stands in it already has been announced
 _LAST_WORDS_S = 4.0  # longest wait for the last news to go out [s]
 # Between two looks at the image for a new tick: often enough to be a small part of any tick,
 # seldom enough to cost nothing when the ticks stand still.
@@ -210,13 +212,16 @@ def _send(box: NewsBox, image: ImageReader, up: Connection) -> None:
     messages = 0
     while (news := box.wait(_QUIET_S)) is not None:
         messages += 1
-        image.tell_news(
-            messages
-        )  # before it is sent: a long message passes only while it is read
+        data = pickle.dumps(news, pickle.HIGHEST_PROTOCOL)
+        # Announced when it is there in full, so that the parent's tick can take it without a
+        # look first. What does not fit into a pipe is there in full only while it is read.
+        if len(data) > _FITS_BYTES:
+            image.tell_news(messages)
         try:
-            up.send(news)
+            up.send_bytes(data)
         except OSError:  # the parent is gone; the other pipe says so as well
             return
+        image.tell_news(messages)
 
 
 async def _until_stopped(

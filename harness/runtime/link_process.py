@@ -148,8 +148,10 @@ class LinkProcess:
         InvalidRunError
             When the process has ended by itself, once all it sent has been returned.
         """
-        if self._image is not None and self._image.news() != self._received:
-            self._receive(self._image.news())
+        if self._image is not None and self._up is not None:
+            announced = self._image.news()
+            if announced != self._received:
+                self._receive(self._up, announced)
         if self._left:
             return self._merged()
         now_ns = time.perf_counter_ns()
@@ -204,18 +206,24 @@ class LinkProcess:
             case _:
                 raise LinkError(f"links {names}: the link process ended before they were open")
 
-    def _receive(self, sent: int) -> None:
-        """Take the messages that are there, up to those that were announced."""
-        while self._up is not None and self._received != sent and self._take_one(self._up):
-            self._received += 1
+    def _receive(self, up: Connection, announced: int) -> None:
+        """Take the messages that were announced; they are there, so that this does not wait."""
+        with suppress(EOFError, OSError):  # cut off in the middle: the process is gone
+            while self._received != announced:
+                self._take(up.recv())
+                self._received += 1
 
-    def _take_one(self, up: Connection) -> bool:
+    def _take_late(self, up: Connection) -> bool:
+        """Take a message of a process that is ending; return whether there was one."""
         try:
             if not up.poll(0):
                 return False
-            message = up.recv()
+            self._take(up.recv())
         except (EOFError, OSError):
             return False
+        return True
+
+    def _take(self, message: object) -> None:
         match message:
             case LinkNews():
                 self._left.append(message)
@@ -225,7 +233,6 @@ class LinkProcess:
                 raise LinkError(
                     f"links: {message!r} came up the pipe, which nothing here sends"
                 )
-        return True
 
     def _merged(self) -> LinkNews:
         parts, self._left = self._left, []
@@ -239,7 +246,7 @@ class LinkProcess:
 
     def _cause(self) -> str:
         """Say why the process is gone, from its last message if there is one."""
-        while self._failure is None and self._up is not None and self._take_one(self._up):
+        while self._failure is None and self._up is not None and self._take_late(self._up):
             pass
         code = None if self._process is None else self._process.exitcode
         return self._failure or (
@@ -253,9 +260,9 @@ class LinkProcess:
                 self._down.send_bytes(b"stop")
         deadline_ns = time.perf_counter_ns() + int(_STOP_TIMEOUT_S * 1e9)
         while process.is_alive() and time.perf_counter_ns() < deadline_ns:
-            if self._up is None or not self._take_one(self._up):
+            if self._up is None or not self._take_late(self._up):
                 process.join(0.01)
-        while self._up is not None and self._take_one(self._up):
+        while self._up is not None and self._take_late(self._up):
             pass
         if process.is_alive():
             process.kill()
