@@ -15,7 +15,7 @@ from harness.errors import ModelError
 from plants import layout as at
 from plants.operating import steady_volumes
 from plants.stepper import sample, valve_flow
-from plants.transmitter import fraction_of_current
+from plants.transmitter import BAD, fraction_of_current
 from plants.vessel import cylinder_level, cylinder_volume
 
 if TYPE_CHECKING:
@@ -111,7 +111,7 @@ class Engine:
         Returns
         -------
         ndarray, shape (ticks, n_columns)
-            One row a tick.
+            One row a tick, each number in its column's unit.
         """
         rows = np.empty((ticks, len(self.columns)))
         advance(
@@ -131,7 +131,8 @@ class Engine:
         Returns
         -------
         ndarray, shape (n_columns,)
-            As ``record`` would give it, but for outputs that this tick's scan may still change.
+            As ``record`` would give it, but for outputs that this tick's scan may still
+            change; each number in its column's unit.
         """
         row = np.empty(len(self.columns))
         write_row(self.table, self.parameters, self.state, row, self._stride)
@@ -290,6 +291,26 @@ class Engine:
         shown = shown_range(self.rig.transmitter(transmitter))
         current = self.state[self.table[at.AT_CURRENT] + self._transmitters[transmitter]]
         return shown.from_fraction(fraction_of_current(current))
+
+    def transmitted(self, transmitter: str) -> tuple[float, bool]:
+        """Return a transmitted value as a controller's input card has it.
+
+        Parameters
+        ----------
+        transmitter : str
+            Tag of the transmitter.
+
+        Returns
+        -------
+        value : float
+            Fraction of span [-].
+        bad : bool
+            Whether its quality is bad.
+        """
+        number = self._transmitters[transmitter]
+        current = self.state[self.table[at.AT_CURRENT] + number]
+        bad = self.state[self.table[at.AT_QUALITY] + number] == BAD
+        return float(fraction_of_current(current)), bool(bad)
 
     def output(self, valve: str) -> float:
         """Return a valve's command.

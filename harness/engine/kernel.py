@@ -68,7 +68,7 @@ def write_row(
     parameters, state : ndarray of float64
         Parameters and state of the rig.
     row : ndarray of float64, shape (n_columns,)
-        The row; columns as in ``harness.engine.assemble.columns_of``.
+        The row; columns and their units as in ``harness.engine.assemble.columns_of``.
     stride : int
         Places of a loop in the state [-].
     """
@@ -134,7 +134,7 @@ def advance(
     work : ndarray of float64
         Scratch.
     rows : ndarray of float64, shape (ticks, n_columns) or (0, n_columns)
-        Rows of the trace are written here, unless it is empty.
+        Rows of the trace are written here, in their columns' units, unless it is empty.
     ticks : int
         Ticks to advance [ticks].
     """

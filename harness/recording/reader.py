@@ -105,7 +105,7 @@ class RunFolder:
         Parameters
         ----------
         segment : int or None
-            Only this one; None for all.
+            Only this one; None for all [-].
         names : tuple of str or None
             Only these columns; None for all.
 

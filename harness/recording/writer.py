@@ -117,7 +117,7 @@ class Recorder:
         first_tick : int
             Tick of the first row [ticks].
         block : ndarray, shape (n, columns)
-            One row a tick, in the order of the header's columns.
+            One row a tick, in the order and the units of the header's columns.
         lateness : ndarray, shape (n,), or None
             By how much each tick was late; None without a wall clock [s].
 

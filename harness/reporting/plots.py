@@ -103,7 +103,7 @@ def line_sample(name: str) -> str:
 
 
 def has_values(values: NDArray[np.float64] | None) -> bool:
-    """Return whether a curve has anything to draw."""
+    """Return whether a curve has anything to draw, in whatever unit."""
     return values is not None and bool(np.isfinite(values).any())
 
 
@@ -122,7 +122,7 @@ def thinned(
     Returns
     -------
     time, values : ndarray, shape (m,)
-        Points of the curve, in order.
+        Points of the curve, in order and in the same units.
     """
     count = time.size
     if count <= most:

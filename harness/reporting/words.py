@@ -149,7 +149,7 @@ def shown_unit(unit: str) -> str:
 
 
 def in_unit(value: float | None, unit: str) -> float | None:
-    """Return the number to show in ``shown_unit``: fractions times 100."""
+    """Return the number to show in ``shown_unit`` of its unit: fractions times 100."""
     return value * 100.0 if value is not None and unit == "1" else value
 
 

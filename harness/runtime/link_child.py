@@ -62,7 +62,7 @@ class LinksOpen:
     Parameters
     ----------
     addresses : dict of str to tuple of str and int
-        Host and port that each link has, by its name.
+        Host and port [-] that each link has, by its name.
     """
 
     addresses: dict[str, tuple[str, int]]

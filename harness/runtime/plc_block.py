@@ -113,7 +113,7 @@ class Orders:
     setpoint : float
         Setpoint [fraction of PV span].
     mode : int
-        MANUAL or AUTOMATIC.
+        MANUAL or AUTOMATIC [-].
     manual_output : float
         Output in manual [-].
     gain : float
@@ -140,7 +140,7 @@ class BlockState:
     integral : float
         Integral part [-].
     held : int
-        1 when the coming scan has to continue from ``output``, whatever the error.
+        1 when the coming scan has to continue from ``output``, whatever the error [-].
     orders : Orders or None
         Last good orders; None before the first.
     scans : int
@@ -318,7 +318,7 @@ def writes_of(program: PlcProgram, state: BlockState) -> dict[str, float]:
     Returns
     -------
     dict of str to float
-        Valve command and heartbeat, by point.
+        Valve command and heartbeat by point, each in its point's unit.
     """
     biased = min(max(state.output + program.faults.output_bias, 0.0), 1.0)
     return {

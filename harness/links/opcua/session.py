@@ -68,7 +68,7 @@ class Desk:
     now_ns : callable
         Returns the time for arrival stamps [ns].
     connections : iterator of int
-        Numbers for connections, each once.
+        Numbers for connections, each once [-].
     """
 
     link: str
