@@ -302,8 +302,10 @@ def test_marks_and_line_ends_of_other_editors(tmp_path):
 
 
 def test_deep_nesting_is_refused_and_does_not_overflow():
-    with pytest.raises(ConfigurationError):
-        rig_from_text("format = 1\nx = " + "[" * 5000 + "]" * 5000, "rig.toml")
+    text = "format = 1\nx = " + "[" * 5000 + "]" * 5000
+    assert problems_of(rig_from_text, text, "rig.toml") == (
+        "rig.toml:1: brackets are nested too deeply to be a rig or a trial",
+    )
 
 
 LINES = RIG_TEXT.splitlines()

@@ -452,6 +452,15 @@ CASES = (
         ),
     ),
     Case(
+        "transmitter tag form",
+        'tag = "FT-101"',
+        'tag = "FI-101"',
+        (
+            '91: transmitter[2].tag: "FI-101" is not a tag for a transmitter; capitals, a hyphen'
+            ' and a number after ISA-5.1, e.g. "LT-101"',
+        ),
+    ),
+    Case(
         "first letter of a level",
         'tag = "LT-101"',
         'tag = "FT-111"',
