@@ -6,7 +6,7 @@ import math
 import struct
 
 import pytest
-from hypothesis import given
+from hypothesis import HealthCheck, given, settings
 from hypothesis import strategies as st
 
 from harness.domain.rig import Encoding, RegisterItem, Scaling, WordOrder
@@ -19,6 +19,9 @@ from harness.links.codecs import (
     reorder,
     round_half_up,
 )
+
+# What is tested is the result; how long an example takes is the machine's affair.
+UNHURRIED = settings(deadline=None, suppress_health_check=[HealthCheck.too_slow])
 
 LEVEL = Range(lower=0.0, upper=4.0, unit="m")
 PERCENT = Range(lower=0.0, upper=100.0, unit="%")
@@ -61,6 +64,7 @@ def test_word_orders_say_what_they_do(order, wire):
     assert "".join(letters[letter] for letter in order) == wire
 
 
+@UNHURRIED
 @given(st.binary(min_size=4, max_size=4), st.sampled_from(ORDERS))
 def test_each_order_is_its_own_inverse(data, order):
     assert reorder(reorder(data, order), order) == data
@@ -123,6 +127,7 @@ def test_a_float_that_does_not_fit_is_the_largest_finite_one(value):
     assert make(Encoding.FLOAT32).encode(-value, math.nan, 0) == bytes.fromhex("FF7FFFFF")
 
 
+@UNHURRIED
 @given(
     st.sampled_from(INTEGERS),
     st.sampled_from(ORDERS),
@@ -140,6 +145,7 @@ def test_engineering_integers_come_back_within_half_a_count(encoding, order, val
     assert abs(codec.decode_written(data) - value) <= 0.5 / factor * (1 + 1e-9)
 
 
+@UNHURRIED
 @given(st.sampled_from(ORDERS), st.floats(min_value=0.0, max_value=100.0))
 def test_floats_come_back_to_single_precision(order, value):
     codec = make(Encoding.FLOAT32, PERCENT, PointKind.COMMAND, word_order=order)
@@ -147,6 +153,7 @@ def test_floats_come_back_to_single_precision(order, value):
     assert back == struct.unpack(">f", struct.pack(">f", value))[0]
 
 
+@UNHURRIED
 @given(st.floats(min_value=0.0, max_value=4.0), st.booleans())
 def test_counts_come_back_within_half_a_count(value, falling):
     codec = counts(27648, 0) if falling else counts(0, 27648)

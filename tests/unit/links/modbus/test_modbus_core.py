@@ -6,10 +6,13 @@ import struct
 from itertools import pairwise
 
 import pytest
-from hypothesis import given, settings
+from hypothesis import HealthCheck, given, settings
 from hypothesis import strategies as st
 
 from harness.links.modbus.core import FrameError
+
+# What is tested is the result; how long an example takes is the machine's affair.
+UNHURRIED = settings(deadline=None, suppress_health_check=[HealthCheck.too_slow])
 
 ARRIVAL = 77
 
@@ -177,6 +180,7 @@ REPLIES = bytes.fromhex(
 )
 
 
+@UNHURRIED
 @given(st.lists(st.integers(min_value=0, max_value=len(STREAM)), max_size=8))
 def test_any_cut_gives_the_same_replies(registers, cuts):
     session = fresh(registers).session
@@ -223,8 +227,8 @@ def test_both_ends_of_the_length_are_taken(rig, length):
     assert rig.session.receive(data, ARRIVAL).hex() == "00090000000301e301"
 
 
+@UNHURRIED
 @given(st.lists(st.binary(max_size=300), max_size=6))
-@settings(max_examples=150)
 def test_no_bytes_do_harm(registers, pieces):
     """Any bytes are answered, waited on, or end the connection; nothing else ever happens."""
     made = fresh(registers)
@@ -236,8 +240,8 @@ def test_no_bytes_do_harm(registers, pieces):
     assert ask(made.another(2), "03 0000 0002") == "03 04 00 00 00 01"
 
 
+@UNHURRIED
 @given(st.binary(min_size=1, max_size=253), st.integers(min_value=0, max_value=255))
-@settings(max_examples=150)
 def test_every_framed_request_is_answered_once(registers, pdu, unit):
     reply = fresh(registers).session.receive(frame(pdu, 7, unit), ARRIVAL)
     transaction, protocol, length, answered, function = struct.unpack_from(">HHHBB", reply)
@@ -255,6 +259,7 @@ VALID = st.one_of(
 )  # fmt: skip
 
 
+@UNHURRIED
 @given(st.lists(VALID, max_size=12))
 def test_the_registers_behave_like_a_plain_list(registers, requests_):
     """Against a model of ten registers that knows nothing of frames, items or caches."""

@@ -2,12 +2,15 @@
 
 from __future__ import annotations
 
-from hypothesis import given
+from hypothesis import HealthCheck, given, settings
 from hypothesis import strategies as st
 
 from harness.domain.rig import Encoding, RegisterItem
 from harness.links.codecs import register_count
 from harness.links.modbus.plan import read_blocks, write_blocks
+
+# What is tested is the result; how long an example takes is the machine's affair.
+UNHURRIED = settings(deadline=None, suppress_health_check=[HealthCheck.too_slow])
 
 
 def item(address, encoding=Encoding.FLOAT32):
@@ -51,6 +54,7 @@ def test_nothing_asked_is_no_request():
     assert read_blocks((), MAP) == ()
 
 
+@UNHURRIED
 @given(st.data())
 def test_every_wanted_item_lies_whole_in_one_allowed_request(data):
     addresses = data.draw(st.lists(st.integers(0, 400), unique=True, max_size=60))
