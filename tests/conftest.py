@@ -17,8 +17,8 @@ from harness.domain.rig import (
     Rig,
     Source,
     Transmitter,
-    Vessel,
     VerticalCylinder,
+    Vessel,
 )
 from harness.domain.signals import Range
 
