@@ -182,7 +182,7 @@ def _draw_outputs(axes: Any, curves: PhaseCurves) -> None:
         if has_values(values):
             axes.plot(*thinned(curves.time, 100.0 * values), **STYLES[name])
     axes.set_ylabel("Output [%]")
-    axes.set_xlabel("Time since the step was known to the controller [s]")
+    axes.set_xlabel("Time since metric time zero [s]")
 
 
 def _frame(axes: Any, time: NDArray[np.float64]) -> None:

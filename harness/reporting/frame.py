@@ -1,0 +1,167 @@
+"""One frame of the live view: head, phases, values, trend, events."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+from rich.console import Console, Group, RenderableType
+from rich.rule import Rule
+from rich.table import Table
+from rich.text import Text
+
+from harness.reporting.tables import QUALITY_STYLES
+from harness.reporting.trend import REFERENCE_STYLE, trend
+from harness.reporting.view_state import LoopView, PhaseState, PhaseView, ViewState
+from harness.reporting.words import duration, figure
+
+OTHER_LINES = 7  # [lines]; head, rule, heading of the events, and empty ones
+LOOP_LINES = 3  # [lines]; of a loop, beside its trend
+BAR_WIDTH = 12  # [characters]
+STATE_WIDTH, TIMES_WIDTH = 7, 14  # [characters]; never cut, whatever the notes say
+VALUE_WIDTH = 9  # [characters]
+NARROW, USUAL, WIDE = 60, 80, 110  # [characters]; below the usual width the bars go
+LOW = 28  # [lines]; below, trend and events are shorter
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class _Layout:
+    """What fits the terminal: width and lines for each part, and whether it knows Unicode."""
+
+    width: int
+    phases: int
+    trend: int
+    events: int
+    unicode: bool
+
+
+def frame(state: ViewState, console: Console) -> RenderableType:
+    """Return one frame of the live view, no larger than the terminal from 60 by 20 upwards.
+
+    Parameters
+    ----------
+    state : ViewState
+        What to show.
+    console : Console
+        Decides width, height and characters.
+    """
+    layout = _layout(console, len(state.loops))
+    rule = Rule(characters="─" if layout.unicode else "-")
+    phases = _around_running(state.phases, layout.phases)
+    pieces: list[RenderableType] = [_head(state, layout), rule, _phase_list(phases, layout)]
+    for loop in state.loops:
+        pieces += [Text(""), _loop_values(loop, layout)]
+        drawn = trend(
+            loop.recent_process_variable,
+            loop.recent_setpoint,
+            width=layout.width,
+            height=layout.trend,
+            braille=layout.unicode,
+        )
+        pieces.append(drawn)
+    if state.events:
+        pieces += [Text(""), Text("Latest events", style="bold")]
+        pieces += [
+            Text(f"  {event}", no_wrap=True, overflow="ellipsis")
+            for event in state.events[-layout.events :]
+        ]
+    return Group(*pieces)
+
+
+def _layout(console: Console, loops: int) -> _Layout:
+    low = console.height < LOW
+    trend_height, events = (4, 2) if low else (7, 5)
+    taken = OTHER_LINES + events + (LOOP_LINES + trend_height) * loops
+    return _Layout(
+        width=max(NARROW, min(console.width, WIDE)),
+        phases=max(3, console.height - taken),
+        trend=trend_height,
+        events=events,
+        unicode=console.encoding.startswith("utf"),
+    )
+
+
+def pace_words(state: ViewState) -> str:
+    """Return the pace in words."""
+    return f"pace {state.pace:g}" if state.pace > 0 else "virtual time"
+
+
+def time_words(state: ViewState) -> str:
+    """Return the plant time so far, and how long it should take, in words."""
+    words = f"plant time {duration(state.elapsed)}"
+    return f"{words} of about {duration(state.expected)}" if state.expected > 0 else words
+
+
+def _head(state: ViewState, layout: _Layout) -> Table:
+    names = Text.assemble((state.rig, "bold"), "  ", state.trial or "live session")
+    grid = Table.grid(expand=False, padding=(0, 2, 0, 0))
+    grid.width = layout.width
+    grid.add_column(ratio=1, no_wrap=True, overflow="ellipsis")
+    grid.add_column(justify="right", no_wrap=True)
+    grid.add_row(names, Text(f"{pace_words(state)}   {time_words(state)}"))
+    return grid
+
+
+def _phase_list(phases: tuple[PhaseView, ...], layout: _Layout) -> Table:
+    grid = Table.grid(padding=(0, 2, 0, 0))
+    bars = layout.width >= USUAL
+    names = max((len(phase.name) for phase in phases), default=0)
+    taken = names + STATE_WIDTH + TIMES_WIDTH + 8 + (BAR_WIDTH + 2 if bars else 0)
+    for least in (0, STATE_WIDTH, *([BAR_WIDTH] if bars else []), TIMES_WIDTH):
+        grid.add_column(no_wrap=True, min_width=least)
+    grid.add_column(no_wrap=True, overflow="ellipsis", max_width=max(8, layout.width - taken))
+    for phase in phases:
+        style = {PhaseState.RUNNING: "bold", PhaseState.INVALID: "bold magenta"}.get(
+            phase.state, "" if phase.state is PhaseState.DONE else "dim"
+        )
+        cells = [Text(phase.name, style=style), Text(phase.state.value, style=style)]
+        if bars:
+            cells.append(_bar(phase, unicode=layout.unicode))
+        cells += [Text(_phase_times(phase), style=style), Text(phase.note, style=style)]
+        grid.add_row(*cells)
+    return grid
+
+
+def _phase_times(phase: PhaseView) -> str:
+    times = "-" if phase.state is PhaseState.WAITING else duration(phase.elapsed)
+    return f"{times} of {duration(phase.expected)}" if phase.expected > 0 else times
+
+
+def _bar(phase: PhaseView, *, unicode: bool) -> Text:
+    """Return the progress of a phase; one that takes longer than expected stays just short."""
+    full, empty = ("━", "┄") if unicode else ("=", ".")
+    if phase.state is PhaseState.DONE:
+        part = 1.0
+    elif phase.state is PhaseState.WAITING or phase.expected <= 0:
+        part = 0.0
+    else:
+        part = min(phase.elapsed / phase.expected, 1.0 - 1.0 / BAR_WIDTH)
+    done = int(part * BAR_WIDTH)
+    return Text.assemble((full * done, "bold"), (empty * (BAR_WIDTH - done), "dim"))
+
+
+def _loop_values(loop: LoopView, layout: _Layout) -> Table:
+    """Return the present values of a loop, each under its name."""
+    cells = {
+        loop.tag: Text(loop.mode, style="bold"),
+        "setpoint": Text(f"{figure(loop.setpoint, 'none')} {loop.unit}", style=REFERENCE_STYLE),
+        "measured": Text(f"{figure(loop.process_variable, 'none')} {loop.unit}", style="bold"),
+        "quality": Text(loop.quality.name.lower(), style=QUALITY_STYLES[loop.quality]),
+        "output": Text(f"{100 * loop.output:.1f} %"),
+        "load": Text(f"{100 * loop.load:.1f} %"),
+    }
+    grid = Table.grid(padding=(0, 3 if layout.width >= USUAL else 1, 0, 0))
+    for _ in cells:
+        grid.add_column(no_wrap=True, min_width=VALUE_WIDTH)
+    names = [Text(name, style="bold" if name == loop.tag else "dim") for name in cells]
+    grid.add_row(*names)
+    grid.add_row(*cells.values())
+    return grid
+
+
+def _around_running(phases: tuple[PhaseView, ...], room: int) -> tuple[PhaseView, ...]:
+    """Return the part of the list that fits, with the running phase in it."""
+    if len(phases) <= room:
+        return phases
+    running = [i for i, phase in enumerate(phases) if phase.state is not PhaseState.DONE]
+    first = max(0, min((running[0] if running else len(phases)) - 1, len(phases) - room))
+    return phases[first : first + room]

@@ -1,0 +1,113 @@
+"""A small trend of two signals, drawn with characters."""
+
+from __future__ import annotations
+
+import math
+from typing import TYPE_CHECKING
+
+from rich.text import Text
+
+from harness.reporting.words import figure
+
+if TYPE_CHECKING:
+    from collections.abc import Sequence
+
+BRAILLE = 0x2800  # first of the 256 patterns of Unicode's block Braille Patterns
+# Bit of each dot in its cell, by column and row from the top (Unicode, Braille Patterns).
+DOTS = ((0x01, 0x02, 0x04, 0x40), (0x08, 0x10, 0x20, 0x80))
+LEAST_RANGE = 1e-3  # of the size of the values: a flat line is drawn as one, not its last digit
+LABEL_WIDTH = 8  # [characters]
+SIGNAL_STYLE, REFERENCE_STYLE = "bold", "cyan"
+
+
+def trend(
+    signal: Sequence[float],
+    reference: Sequence[float],
+    *,
+    width: int,
+    height: int,
+    braille: bool = True,
+) -> Text:
+    """Return a drawing of a signal against its reference, oldest at the left.
+
+    Parameters
+    ----------
+    signal, reference : sequence of float
+        Process variable and setpoint at the same times [any unit]; what is not finite is left
+        out.
+    width, height : int
+        Size with the labels of the scale [characters].
+    braille : bool
+        Whether to draw with braille dots, two by four to a character; else with ``*`` and ``-``.
+
+    Returns
+    -------
+    Text
+        ``height`` lines.
+    """
+    columns = max(1, width - LABEL_WIDTH - 1)
+    across, down = (2, 4) if braille else (1, 1)
+    low, high = _scale([*signal, *reference])
+    shape = (columns * across, height * down)
+    dots = _raster(signal, low, high, *shape), _raster(reference, low, high, *shape)
+    text = Text(no_wrap=True)
+    for row in range(height):
+        label = {0: figure(high), height - 1: figure(low)}.get(row, "")
+        text.append(f"{label:>{LABEL_WIDTH}} ", style="dim")
+        for column in range(columns):
+            _append_cell(text, row, column, dots, braille=braille)
+        if row < height - 1:
+            text.append("\n")
+    return text
+
+
+def _scale(values: Sequence[float]) -> tuple[float, float]:
+    """Return the ends of the scale, a little wider than the values."""
+    known = [value for value in values if math.isfinite(value)] or [0.0]
+    low, high = min(known), max(known)
+    room = max(0.05 * (high - low), LEAST_RANGE * max(abs(low), abs(high), LEAST_RANGE))
+    return low - room, high + room
+
+
+def _raster(
+    values: Sequence[float], low: float, high: float, columns: int, rows: int
+) -> list[list[int]]:
+    """Return for each dot column the dot rows that are set, joined so that no line is broken."""
+    raster: list[list[int]] = [[] for _ in range(columns)]
+    last: int | None = None
+    for column in range(columns if values else 0):
+        value = values[min(len(values) - 1, column * len(values) // columns)]
+        if not math.isfinite(value):
+            last = None
+            continue
+        row = min(rows - 1, int((high - value) / (high - low) * rows))
+        start = row if last is None else last + (row > last) - (row < last)
+        raster[column] = list(range(min(start, row), max(start, row) + 1))
+        last = row
+    return raster
+
+
+def _append_cell(
+    text: Text,
+    row: int,
+    column: int,
+    dots: tuple[list[list[int]], list[list[int]]],
+    *,
+    braille: bool,
+) -> None:
+    """Append one character; where both signals meet, the process variable's style wins."""
+    if not braille:
+        signal, reference = (row in raster[column] for raster in dots)
+        text.append("*" if signal else "-" if reference else " ")
+        return
+    bits = [
+        sum(
+            bit
+            for x, column_bits in enumerate(DOTS)
+            for y, bit in enumerate(column_bits)
+            if row * 4 + y in raster[column * 2 + x]
+        )
+        for raster in dots
+    ]
+    style = SIGNAL_STYLE if bits[0] else REFERENCE_STYLE
+    text.append(chr(BRAILLE + (bits[0] | bits[1])), style=style)
