@@ -106,7 +106,6 @@ def linearised_models(
     ModelError
         When there is no steady state, or the process variable is not a level.
     """
-    rig = engine.rig
     point = operating_point(engine, outputs)
     return LoopModels(
         output=_path(engine, loop, loop.output, point),

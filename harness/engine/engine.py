@@ -360,6 +360,38 @@ class Engine:
             [valve_flow(self.table, self.parameters, i, x) for i, x in enumerate(travels)]
         )
 
+    def place_of_transmitter(self, tag: str) -> int:
+        """Return a transmitter's number among the transmitters [-].
+
+        Parameters
+        ----------
+        tag : str
+            Its tag.
+        """
+        return self._transmitters[tag]
+
+    def place_of_valve(self, tag: str, entry: int) -> int:
+        """Return where a valve's value stands in the state [-].
+
+        Parameters
+        ----------
+        tag : str
+            Tag of the valve.
+        entry : int
+            Entry of the table's header, e.g. ``plants.layout.AT_TRAVEL`` [-].
+        """
+        return int(self.table[entry]) + self._valves[tag]
+
+    def place_of_loop(self, tag: str) -> int:
+        """Return where a loop's places begin in the state [-].
+
+        Parameters
+        ----------
+        tag : str
+            Tag of the loop.
+        """
+        return self._at(tag)
+
     def _at(self, loop: str) -> int:
         return int(self.table[place.AT_LOOP_STATE]) + self._loops[loop] * self._stride
 

@@ -139,6 +139,10 @@ class ImageWriter:
         """Return how many messages the reader's side says it has sent [-]."""
         return self._words[_NEWS]
 
+    def awake(self) -> int:
+        """Return how many wake-up calls the reader's side says it has taken [-]."""
+        return self._words[_AWAKE]
+
     def close(self) -> None:
         """Let go of the segment and remove it; a second call does nothing."""
         if self._closed:
@@ -214,6 +218,16 @@ class ImageReader:
             Messages since the start [-].
         """
         self._words[_NEWS] = messages
+
+    def tell_awake(self, calls: int) -> None:
+        """Tell the writer's side how many wake-up calls were taken.
+
+        Parameters
+        ----------
+        calls : int
+            Calls since the start [-].
+        """
+        self._words[_AWAKE] = calls
 
     def close(self) -> None:
         """Let go of the segment, which stays; a second call does nothing."""

@@ -13,7 +13,7 @@ from urllib.parse import urlsplit
 
 from harness.domain.rig import ModbusServerLink, OpcUaServerLink
 from harness.errors import DryrigError
-from harness.runtime.clock import NS_PER_S, PacedClock
+from harness.runtime.clock import PacedClock
 from harness.runtime.image import ImageReader
 from harness.runtime.news import NewsBox
 
@@ -22,15 +22,11 @@ if TYPE_CHECKING:
     from multiprocessing.connection import Connection
 
     from harness.domain.signals import Point
-    from harness.links.port import ImageSource
 
 _QUIET_S = 0.010  # reads are condensed for this long [s]
 _FITS_BYTES = 4_096  # into any system's pipe, whatever stands in it already has been announced
 _LAST_WORDS_S = 4.0  # longest wait for the last news to go out [s]
-# Between two looks at the image for a new tick: often enough to be a small part of any tick,
-# seldom enough to cost nothing when the ticks stand still.
-_SHORTEST_PAUSE_S = 0.002
-_LONGEST_PAUSE_S = 0.020
+WAKE = b"image"  # down the pipe: there is a new image to show
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -154,8 +150,9 @@ async def _serve(setup: LinkSetup, up: Connection, down: Connection) -> None:
                 publishers.append(server)
         _tell(up, LinksOpen(addresses=addresses))
         sender.start()
-        _listen(down, stop)
-        await _until_stopped(stop, publishers, image, clock)
+        fresh = asyncio.Event()
+        _listen(down, image, fresh, stop)
+        await _until_stopped(stop, publishers, fresh)
 
 
 async def _finish(box: NewsBox, sender: threading.Thread) -> None:
@@ -194,17 +191,26 @@ def _address_in(url: str) -> tuple[str, int]:
     return parts.hostname or "", parts.port or 0
 
 
-def _listen(down: Connection, stop: asyncio.Event) -> None:
-    """Set the event when the parent asks to stop, or is gone."""
+def _listen(
+    down: Connection, image: ImageReader, fresh: asyncio.Event, stop: asyncio.Event
+) -> None:
+    """Set an event when there is a new image, and another when the parent asks to stop or is gone."""
     loop = asyncio.get_running_loop()
 
-    def wait_for_word() -> None:
-        with suppress(EOFError, OSError):  # the parent's end of the pipe closes with it
-            down.recv_bytes()
-        if not loop.is_closed():
+    def listen() -> None:
+        calls = 0
+        # The parent's end of the pipe closes with it, and the image when this side gives up.
+        with suppress(EOFError, OSError, ValueError):
+            while down.recv_bytes() == WAKE:
+                calls += 1
+                image.tell_awake(
+                    calls
+                )  # before the image is read, so that no later one is missed
+                loop.call_soon_threadsafe(fresh.set)
+        with suppress(RuntimeError):  # the loop has ended already
             loop.call_soon_threadsafe(stop.set)
 
-    threading.Thread(target=wait_for_word, daemon=True).start()
+    threading.Thread(target=listen, daemon=True).start()
 
 
 def _send(box: NewsBox, image: ImageReader, up: Connection) -> None:
@@ -225,35 +231,18 @@ def _send(box: NewsBox, image: ImageReader, up: Connection) -> None:
 
 
 async def _until_stopped(
-    stop: asyncio.Event,
-    publishers: Sequence[PublishingServer],
-    image: ImageSource,
-    clock: PacedClock,
+    stop: asyncio.Event, publishers: Sequence[PublishingServer], fresh: asyncio.Event
 ) -> None:
     async with asyncio.TaskGroup() as tasks:
-        publishing = (
-            tasks.create_task(_publish(publishers, image, clock)) if publishers else None
-        )
+        publishing = tasks.create_task(_publish(publishers, fresh))
         await stop.wait()
-        if publishing is not None:
-            publishing.cancel()
+        publishing.cancel()
 
 
-async def _publish(
-    publishers: Sequence[PublishingServer], image: ImageSource, clock: PacedClock
-) -> None:
-    """Show each new image on the servers that must be told; images in between are skipped."""
-    shown = -1
-    changed_ns = clock.now_ns()
+async def _publish(publishers: Sequence[PublishingServer], fresh: asyncio.Event) -> None:
+    """Show each new image on the servers that must be told; where ticks are faster, the latest."""
     while True:
-        tick = image.tick()
-        now_ns = clock.now_ns()
-        since_s = (now_ns - changed_ns) / NS_PER_S
-        if tick == shown:
-            pause = since_s / 8
-        else:
-            shown, changed_ns = tick, now_ns
-            for publisher in publishers:
-                await publisher.publish()
-            pause = since_s * 3 / 4
-        await asyncio.sleep(min(max(pause, _SHORTEST_PAUSE_S), _LONGEST_PAUSE_S))
+        await fresh.wait()
+        fresh.clear()
+        for publisher in publishers:
+            await publisher.publish()

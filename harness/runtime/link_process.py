@@ -7,9 +7,10 @@ import time
 from contextlib import suppress
 from typing import TYPE_CHECKING
 
+from harness.domain.rig import OpcUaServerLink
 from harness.errors import InvalidRunError, LinkError
 from harness.runtime.image import ImageWriter
-from harness.runtime.link_child import LinkSetup, LinksFailed, LinksOpen, run_links
+from harness.runtime.link_child import WAKE, LinkSetup, LinksFailed, LinksOpen, run_links
 from harness.runtime.news import NO_NEWS, LinkNews
 
 if TYPE_CHECKING:
@@ -21,7 +22,7 @@ if TYPE_CHECKING:
     import numpy as np
     from numpy.typing import NDArray
 
-    from harness.domain.rig import ModbusServerLink, OpcUaServerLink
+    from harness.domain.rig import ModbusServerLink
     from harness.domain.signals import Point
 
 _START_TIMEOUT_S = 30.0  # an OPC UA server takes 1.4 s to start, more on a busy machine [s]
@@ -57,6 +58,8 @@ class LinkProcess:
         self._process: SpawnProcess | None = None
         self._up: Connection | None = None
         self._down: Connection | None = None
+        self._must_call = any(isinstance(link, OpcUaServerLink) for link in self._links)
+        self._calls = 0
         self._received = 0
         self._checked_ns = 0
         self._left: list[LinkNews] = []
@@ -130,8 +133,15 @@ class LinkProcess:
         qualities : ndarray, shape (n_points,)
             ``Quality`` numbers [-].
         """
-        if self._image is not None:
-            self._image.publish(tick, values, currents, qualities)
+        if self._image is None or self._down is None:
+            return
+        self._image.publish(tick, values, currents, qualities)
+        # One call at a time: while one lies in the pipe, the pipe cannot fill up, and whoever
+        # takes it finds the latest image.
+        if self._must_call and self._image.awake() == self._calls:
+            self._calls += 1
+            with suppress(OSError):  # the process is gone; drain says so
+                self._down.send_bytes(WAKE)
 
     def drain(self) -> LinkNews:
         """Return all that has happened since the last call, without waiting.

@@ -1,0 +1,196 @@
+"""What a phase will look like, before it is run: its response, its time constant, its length."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import TYPE_CHECKING
+
+import numpy as np
+
+from harness.analysis.linear import predict_sampled
+from harness.analysis.steady import tail_time_constant
+from harness.controllers.block import AUTOMATIC, MANUAL
+from harness.domain.models import ControllerSettings
+from harness.domain.trial import Mode, PhaseKind
+from harness.errors import DataError, ModelError
+
+if TYPE_CHECKING:
+    from numpy.typing import NDArray
+
+    from harness.analysis.linear import ScanSchedule
+    from harness.domain.models import LoopModels
+    from harness.domain.rig import Loop
+    from harness.domain.trial import Phase, SteadyRule
+
+    Floats = NDArray[np.float64]
+
+_HORIZON = 12.0  # of the total lag, doubled until the response has died out [-]
+_DOUBLINGS = 5
+_TYPICAL_CHANGE = 0.05  # of output or span, where a phase changes nothing [-]
+_LOOK_DELAY = 1.0  # dominant time constants from the first right moment to the verdict [-]
+_MID = 0.5  # of output or span: where a linear prediction stands does not matter [-]
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class PhasePlan:
+    """Expectation of a phase.
+
+    Parameters
+    ----------
+    dominant_time : float
+        Time constant of the tail of its response [s].
+    effect : float
+        Change of the process variable that it makes: lasting, or at its peak [fraction of span].
+    duration : float
+        Expected time until it counts as steady [s].
+    """
+
+    dominant_time: float
+    effect: float
+    duration: float
+
+
+def predict_phase(
+    phase: Phase,
+    loop: Loop,
+    models: LoopModels,
+    settings: ControllerSettings | None,
+    schedule: ScanSchedule,
+    tick: float,
+    rows: int,
+    change: float | None = None,
+) -> tuple[Floats, Floats]:
+    """Predict a phase with linear models, from a steady state at mid range.
+
+    Parameters
+    ----------
+    phase : Phase
+        The phase.
+    loop : Loop
+        The loop.
+    models : LoopModels
+        Models.
+    settings : ControllerSettings or None
+        Settings; needed in automatic.
+    schedule : ScanSchedule
+        Scans of the block.
+    tick : float
+        Step [s].
+    rows : int
+        Length [ticks].
+    change : float or None
+        Size of the step; None takes the phase's [fraction].
+
+    Returns
+    -------
+    process_variable : ndarray, shape (rows,)
+        Deviation from its start [fraction of span].
+    output : ndarray, shape (rows,)
+        Deviation of the output from its start [-].
+    """
+    size = phase.change if change is None else change
+    automatic = phase.mode is Mode.AUTOMATIC
+    setpoint = np.full(rows, _MID)
+    load = np.full(rows, _MID)
+    manual = np.full(rows, _MID)
+    if phase.kind is PhaseKind.SETPOINT_STEP:
+        setpoint += size
+    elif phase.kind is PhaseKind.LOAD_STEP:
+        load += size
+    elif phase.kind is PhaseKind.OUTPUT_STEP:
+        manual += size
+    block = settings or ControllerSettings(gain=0.0, integral_time=None, action=loop.action)
+    process_variable, output = predict_sampled(
+        models,
+        block,
+        schedule,
+        tick,
+        setpoint,
+        load,
+        np.full(rows, AUTOMATIC if automatic else MANUAL, dtype=np.int64),
+        manual,
+        _MID,
+        _MID,
+        loop.output_low - 1.0,
+        loop.output_high + 1.0,
+        initial_load=_MID,
+    )
+    return process_variable - _MID, output - _MID
+
+
+def plan_phase(
+    phase: Phase,
+    loop: Loop,
+    models: LoopModels,
+    settings: ControllerSettings | None,
+    schedule: ScanSchedule,
+    tick: float,
+    rule: SteadyRule,
+) -> PhasePlan:
+    """Return the expectation of a phase.
+
+    Parameters
+    ----------
+    phase : Phase
+        The phase; one that changes nothing is taken to settle from a typical step.
+    loop : Loop
+        The loop.
+    models : LoopModels
+        Models.
+    settings : ControllerSettings or None
+        Settings; needed in automatic.
+    schedule : ScanSchedule
+        Scans of the block.
+    tick : float
+        Step [s].
+    rule : SteadyRule
+        When a phase counts as steady.
+
+    Returns
+    -------
+    PhasePlan
+        The expectation.
+
+    Raises
+    ------
+    ModelError
+        When the predicted loop does not come to rest.
+    """
+    stand_in = phase
+    if phase.kind is PhaseKind.SETTLE:
+        kind = PhaseKind.OUTPUT_STEP
+        if phase.mode is Mode.AUTOMATIC:
+            kind = PhaseKind.SETPOINT_STEP
+        stand_in = type(phase)(
+            name=phase.name,
+            loop=phase.loop,
+            kind=kind,
+            mode=phase.mode,
+            change=_TYPICAL_CHANGE,
+            time_limit=phase.time_limit,
+        )
+    horizon = _HORIZON * max(models.output.total_lag, models.load.total_lag)
+    for _ in range(_DOUBLINGS):
+        rows = max(10, round(horizon / tick))
+        response, _ = predict_phase(stand_in, loop, models, settings, schedule, tick, rows)
+        error = np.asarray(response - response[-1], dtype=np.float64)
+        time = np.arange(rows, dtype=np.float64) * tick
+        # The end of a response that has died out is its final value; a running one betrays
+        # itself by moving over the last third.
+        still_moving = np.ptp(response[-rows // 3 :]) > rule.remaining / 10 * np.ptp(response)
+        if np.isfinite(response).all() and not still_moving:
+            try:
+                dominant = tail_time_constant(time, error)
+            except DataError:
+                horizon *= 2
+                continue
+            effect = float(np.max(np.abs(response)))
+            left = np.flatnonzero(np.abs(error) > rule.remaining * effect)
+            last = float(time[left[-1]]) if len(left) else 0.0
+            duration = max(rule.dwell * dominant, last + _LOOK_DELAY * dominant)
+            return PhasePlan(dominant_time=dominant, effect=effect, duration=duration)
+        horizon *= 2
+    raise ModelError(
+        f"phase {phase.name!r}: the predicted loop does not come to rest within {horizon:.0f} s; "
+        "it is unstable or nearly so. Take a longer closed-loop time, or check the settings"
+    )

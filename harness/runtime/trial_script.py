@@ -1,0 +1,371 @@
+"""A trial, phase by phase: what is ordered when, and when a phase is over."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from harness.analysis.linear import ScanSchedule
+from harness.analysis.loop_models import linearised_models
+from harness.analysis.plan import plan_phase
+from harness.analysis.steady import SteadyDetector
+from harness.controllers.block import AUTOMATIC, MANUAL
+from harness.domain.models import FittedModel, LagModel, LoopModels
+from harness.domain.points import shown_range
+from harness.domain.run import EventKind
+from harness.domain.trial import Mode, ModelSource, PhaseKind, SettingsSource
+from harness.errors import InvalidRunError
+from harness.runtime.requests import Advance, Compute
+from harness.runtime.session import require_controllers
+from harness.tuning.identification import fit_best
+from harness.tuning.synthesis import direct_synthesis
+
+if TYPE_CHECKING:
+    from collections.abc import Generator
+
+    from numpy.typing import NDArray
+
+    from harness.analysis.plan import PhasePlan
+    from harness.domain.models import ControllerSettings
+    from harness.domain.rig import Loop
+    from harness.domain.trial import Phase, Trial
+    from harness.runtime.requests import Request, Script
+    from harness.runtime.session import Session
+
+    Floats = NDArray[np.float64]
+
+_WAIT_FOR_CONTROLLER = 30.0  # wall seconds for a controller to be found or to take an order [s]
+_LEAD_IN = 30  # rows before a step that a fit gets to see the start from [ticks]
+_CONFIDENCE = 0.95  # of the limits of a fit [-]
+
+
+@dataclass(slots=True)
+class _LoopWork:
+    """What a trial knows and does of one loop."""
+
+    loop: Loop
+    linearised: LoopModels
+    models: LoopModels
+    settings: ControllerSettings | None = None
+    automatic: bool = False
+    identified: bool = False
+    recent: list[Floats] = field(default_factory=list)
+    output_record: list[Floats] = field(default_factory=list)
+    load_record: list[Floats] = field(default_factory=list)
+
+
+def trial_script(session: Session, trial: Trial) -> Script:
+    """Return the script of a trial.
+
+    Parameters
+    ----------
+    session : Session
+        Who carries it out.
+    trial : Trial
+        The trial.
+
+    Yields
+    ------
+    Request
+        Time to pass, and computations.
+    """
+    runner = _TrialRunner(session, trial)
+    yield from runner.run()
+
+
+class _TrialRunner:
+    def __init__(self, session: Session, trial: Trial) -> None:
+        self._session = session
+        self._trial = trial
+        self._columns = [column.name for column in session.engine.columns]
+        self._works: dict[str, _LoopWork] = {}
+
+    def run(self) -> Script:
+        yield from self._find_controllers()
+        for index, phase in enumerate(self._trial.phases):
+            work = self._work(phase.loop)
+            if phase.mode is Mode.AUTOMATIC and not work.automatic:
+                yield from self._go_automatic(work)
+            elif phase.mode is Mode.MANUAL and work.automatic:
+                self._go_manual(work)
+            yield from self._phase(index, phase, work)
+        for work in self._works.values():
+            if self._trial.models is ModelSource.IDENTIFIED and not work.identified:
+                yield from self._identify(work)
+
+    def _work(self, tag: str) -> _LoopWork:
+        if tag not in self._works:
+            loop = self._session.rig.loop(tag)
+            linearised = linearised_models(self._session.engine, loop)
+            given = self._trial.given
+            models = given if given is not None else linearised
+            self._works[tag] = _LoopWork(loop=loop, linearised=linearised, models=models)
+        return self._works[tag]
+
+    # The controller at the other end.
+
+    def _find_controllers(self) -> Generator[Request, Any, None]:
+        """Wait until every loop of the trial has a controller."""
+        session = self._session
+        if not session.external:
+            return
+        for tag in dict.fromkeys(phase.loop for phase in self._trial.phases):
+            watch = session.watches[tag]
+            loop = session.rig.loop(tag)
+            waited = 0
+            while not watch.found:
+                if waited * session.rig.tick / session.pace > _WAIT_FOR_CONTROLLER:
+                    raise InvalidRunError(
+                        f"loop {tag}: no controller wrote {loop.output} within "
+                        f"{_WAIT_FOR_CONTROLLER:g} s; start the controller, and check host, port, "
+                        "unit and the address it writes to"
+                    )
+                yield Advance(ticks=1)
+                waited += 1
+
+    def _known(self, loop: Loop, order: int) -> Generator[Request, Any, list[Floats]]:
+        """Wait until the controller is known to have an order; return the rows until then."""
+        session = self._session
+        rows: list[Floats] = []
+        while not session.knows(loop, order):
+            if len(rows) * session.rig.tick / max(session.pace, 1e-9) > _WAIT_FOR_CONTROLLER:
+                raise InvalidRunError(
+                    f"loop {loop.tag}: the controller did not read the order of tick {order} "
+                    f"within {_WAIT_FOR_CONTROLLER:g} s, though it is alive; does it read setpoint, "
+                    "mode and manual output from the rig?"
+                )
+            rows.append((yield Advance(ticks=1)))
+            require_controllers(session)
+        return rows
+
+    # Modes.
+
+    def _go_manual(self, work: _LoopWork) -> None:
+        output = self._session.engine.output(work.loop.output)
+        self._session.order(work.loop, mode=MANUAL, manual_output=output)
+        work.automatic = False
+
+    def _go_automatic(self, work: _LoopWork) -> Generator[Request, Any, None]:
+        """Find settings, give them in manual, then transfer at the present process variable."""
+        trial = self._trial
+        if trial.models is ModelSource.IDENTIFIED and not work.identified:
+            yield from self._identify(work)
+        elif not work.identified:
+            self._tell_models(work, {}, trial.models.value)
+            work.identified = True
+        self._settle_settings(work)
+        order = self._session.tick
+        yield from self._known(work.loop, order)
+        setpoint = self._process_variable_now(work)
+        order = self._session.order(work.loop, setpoint=setpoint, mode=AUTOMATIC)
+        yield from self._known(work.loop, order)
+        work.automatic = True
+        # A moment in automatic, so that a transfer that bumps shows before the first step.
+        yield Advance(ticks=max(10, round(trial.closed_loop_time / self._session.rig.tick)))
+        require_controllers(self._session)
+
+    def _process_variable_now(self, work: _LoopWork) -> float:
+        """Return the mean transmitted value of late, or the present one."""
+        column = self._columns.index(f"{work.loop.process_variable}.value")
+        if work.recent:
+            return float(np.mean(np.concatenate(work.recent)[-_LEAD_IN:, column]))
+        return self._session.engine.measured(work.loop.process_variable)
+
+    def _settle_settings(self, work: _LoopWork) -> None:
+        trial = self._trial
+        data: dict[str, object] = {}
+        if trial.settings is SettingsSource.AS_FOUND and trial.as_found is not None:
+            settings = trial.as_found
+            data["rule"] = "as found"
+        else:
+            synthesis = direct_synthesis(work.models.output, trial.law, trial.closed_loop_time)
+            settings = synthesis.settings
+            data |= {
+                "rule": synthesis.rule,
+                "closed_loop_time": synthesis.closed_loop_time,
+                "reduced": model_document(synthesis.reduced),
+            }
+        work.settings = settings
+        data |= {
+            "gain": settings.gain,
+            "integral_time": settings.integral_time,
+            "action": settings.action.value,
+        }
+        ti = settings.integral_time
+        text = f"gain {settings.gain:.4g} %/%, " + (f"Ti {ti:.4g} s" if ti else "no integral")
+        self._session.order(work.loop, settings=settings)
+        self._session.event(EventKind.SETTINGS, work.loop.tag, text, data)
+
+    # Models.
+
+    def _identify(self, work: _LoopWork) -> Generator[Request, Any, None]:
+        """Fit both paths to what was recorded in manual."""
+        fits: dict[str, FittedModel] = {}
+        span = shown_range(self._session.rig.transmitter(work.loop.process_variable))
+        value = self._columns.index(f"{work.loop.process_variable}.value")
+        for path, record, valve in (
+            ("output", work.output_record, work.loop.output),
+            ("load", work.load_record, work.loop.load),
+        ):
+            if not record:
+                continue
+            rows = np.concatenate(record)
+            inputs = rows[:, self._columns.index(f"{valve}.command")].copy()
+            outputs = (rows[:, value] - span.lower) / span.span
+            choice = yield Compute(
+                function=fit_best,
+                arguments=(inputs, outputs, self._session.rig.tick, _CONFIDENCE),
+            )
+            fits[path] = choice.best
+        work.models = LoopModels(
+            output=fits["output"].model if "output" in fits else work.models.output,
+            load=fits["load"].model if "load" in fits else work.models.load,
+        )
+        work.identified = True
+        self._tell_models(work, fits, "identified")
+
+    def _tell_models(self, work: _LoopWork, fits: dict[str, FittedModel], source: str) -> None:
+        data: dict[str, object] = {"source": source}
+        for path in ("output", "load"):
+            model: LagModel = getattr(work.models, path)
+            fit = fits.get(path)
+            document = model_document(model)
+            document["source"] = source if fit or source != "identified" else "linearised"
+            if fit is not None:
+                document["limits"] = {
+                    name: {"low": limit.low, "high": limit.high, "level": limit.level}
+                    for name, limit in fit.limits.items()
+                }
+                document["residual_rms"] = fit.residual_rms
+                document["samples"] = fit.samples
+            document["linearised"] = model_document(getattr(work.linearised, path))
+            data[path] = document
+        output = work.models.output
+        lags = " and ".join(f"{lag:.4g}" for lag in output.time_constants)
+        text = f"{source}: gain {output.gain:.4g}, lags {lags} s, dead time {output.dead_time:.3g} s"
+        self._session.event(EventKind.MODELS, work.loop.tag, text, data)
+
+    # Phases.
+
+    def _phase(
+        self, index: int, phase: Phase, work: _LoopWork
+    ) -> Generator[Request, Any, None]:
+        session = self._session
+        plan = self._plan(phase, work)
+        session.event(
+            EventKind.PHASE_STARTED,
+            phase.name,
+            f"{phase.kind.value.replace('_', ' ')} of {100 * phase.change:+.3g} % in {phase.mode.value}",
+            {
+                "index": index,
+                "loop": phase.loop,
+                "expected": plan.duration,
+                "dominant_time": plan.dominant_time,
+                "effect": plan.effect,
+            },
+        )
+        lead_in = work.recent[-1:] if work.recent else []
+        order = self._order(phase, work)
+        rows = yield from self._known(work.loop, order)
+        session.event(
+            EventKind.ORDER_KNOWN,
+            phase.name,
+            f"in the controller {session.tick - order} ticks after the order",
+            {"order": order},
+        )
+        rows += yield from self._until_steady(phase, work, plan)
+        self._keep(phase, work, [block[-_LEAD_IN:] for block in lead_in], rows)
+
+    def _plan(self, phase: Phase, work: _LoopWork) -> PhasePlan:
+        loop, tick = work.loop, self._session.rig.tick
+        schedule = ScanSchedule(
+            scan_ticks=max(1, round(loop.scan / tick)), delay_ticks=loop.output_delay
+        )
+        return plan_phase(
+            phase, loop, work.models, work.settings, schedule, tick, self._trial.steady
+        )
+
+    def _order(self, phase: Phase, work: _LoopWork) -> int:
+        session, loop = self._session, work.loop
+        match phase.kind:
+            case PhaseKind.SETPOINT_STEP:
+                shown = shown_range(session.rig.transmitter(loop.process_variable))
+                setpoint = session.image()[f"{loop.tag}.SP"][1] + phase.change * shown.span
+                return session.order(loop, setpoint=setpoint)
+            case PhaseKind.OUTPUT_STEP:
+                present = session.image()[f"{loop.tag}.MO"][1] / 100.0
+                return session.order(loop, manual_output=present + phase.change)
+            case PhaseKind.LOAD_STEP:
+                present = session.engine.output(loop.load)
+                session.set_load(loop.load, present + phase.change)
+                # The load is no order to the controller: it acts at once.
+                return -1
+            case PhaseKind.SETTLE:
+                return -1
+
+    def _until_steady(
+        self, phase: Phase, work: _LoopWork, plan: PhasePlan
+    ) -> Generator[Request, Any, list[Floats]]:
+        session = self._session
+        tick, rule = session.rig.tick, self._trial.steady
+        true = self._columns.index(f"{work.loop.process_variable}.true")
+        shown = shown_range(session.rig.transmitter(work.loop.process_variable))
+        detector = SteadyDetector(rule, tick, plan.dominant_time, plan.effect)
+        chunk = max(1, round(rule.thinning * plan.dominant_time / tick))
+        rows: list[Floats] = []
+        taken = 0
+        while not detector.steady:
+            if taken * tick >= phase.time_limit:
+                session.event(
+                    EventKind.PHASE_ENDED, phase.name, detector.reason, {"steady": False}
+                )
+                raise InvalidRunError(
+                    f"phase {phase.name!r}: not steady within its time limit of "
+                    f"{phase.time_limit:g} s ({detector.reason}); judge nothing from it. Look at "
+                    "the trace: is the loop swinging, or the limit too short?"
+                )
+            block = yield Advance(ticks=chunk)
+            require_controllers(session)
+            rows.append(block)
+            taken += len(block)
+            detector.feed((block[:, true] - shown.lower) / shown.span)
+        session.event(EventKind.PHASE_ENDED, phase.name, detector.reason, {"steady": True})
+        return rows
+
+    @staticmethod
+    def _keep(phase: Phase, work: _LoopWork, lead_in: list[Floats], rows: list[Floats]) -> None:
+        """Keep what a fit needs: steps in manual with a moment before the first."""
+        work.recent = [np.concatenate(rows)] if rows else work.recent
+        if phase.mode is not Mode.MANUAL:
+            return
+        record = {
+            PhaseKind.OUTPUT_STEP: work.output_record,
+            PhaseKind.LOAD_STEP: work.load_record,
+        }.get(phase.kind)
+        if record is not None:
+            if not record:
+                record.extend(lead_in)
+            record.extend(rows)
+
+
+def model_document(model: LagModel) -> dict[str, object]:
+    """Return a model as JSON-able facts.
+
+    Parameters
+    ----------
+    model : LagModel
+        The model.
+
+    Returns
+    -------
+    dict
+        Gain [-], time constants [s], dead time [s], total lag [s].
+    """
+    return {
+        "gain": model.gain,
+        "time_constants": list(model.time_constants),
+        "dead_time": model.dead_time,
+        "total_lag": model.total_lag,
+    }
