@@ -17,7 +17,7 @@ from harness.reporting.words import duration
 if TYPE_CHECKING:
     from collections.abc import Callable
 
-FRAME_EVERY_NS = 250_000_000  # [ns]; a frame costs some 13 ms of processor, measured
+FRAME_EVERY_NS = 250_000_000  # [ns]; a frame costs some 8 ms of processor, measured
 
 
 class View(Protocol):

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from itertools import groupby
 from typing import TYPE_CHECKING
 
 from rich.text import Text
@@ -46,16 +47,24 @@ def trend(
         ``height`` lines.
     """
     columns = max(1, width - LABEL_WIDTH - 1)
-    across, down = (2, 4) if braille else (1, 1)
     low, high = _scale([*signal, *reference])
-    shape = (columns * across, height * down)
-    dots = _raster(signal, low, high, *shape), _raster(reference, low, high, *shape)
+    across, down = (2, 4) if braille else (1, 1)
+    drawn, behind = (
+        _cells(
+            _raster(values, low, high, columns * across, height * down), height, braille=braille
+        )
+        for values in (signal, reference)
+    )
     text = Text(no_wrap=True)
     for row in range(height):
         label = {0: figure(high), height - 1: figure(low)}.get(row, "")
         text.append(f"{label:>{LABEL_WIDTH}} ", style="dim")
-        for column in range(columns):
-            _append_cell(text, row, column, dots, braille=braille)
+        cells = zip(drawn[row], behind[row], strict=True)
+        for is_signal, run in groupby(cells, key=lambda cell: cell[0] > 0):
+            style = SIGNAL_STYLE if is_signal else REFERENCE_STYLE
+            text.append(
+                "".join(_character(*cell, braille=braille) for cell in run), style=style
+            )
         if row < height - 1:
             text.append("\n")
     return text
@@ -87,27 +96,18 @@ def _raster(
     return raster
 
 
-def _append_cell(
-    text: Text,
-    row: int,
-    column: int,
-    dots: tuple[list[list[int]], list[list[int]]],
-    *,
-    braille: bool,
-) -> None:
-    """Append one character; where both signals meet, the process variable's style wins."""
-    if not braille:
-        signal, reference = (row in raster[column] for raster in dots)
-        text.append("*" if signal else "-" if reference else " ")
-        return
-    bits = [
-        sum(
-            bit
-            for x, column_bits in enumerate(DOTS)
-            for y, bit in enumerate(column_bits)
-            if row * 4 + y in raster[column * 2 + x]
-        )
-        for raster in dots
-    ]
-    style = SIGNAL_STYLE if bits[0] else REFERENCE_STYLE
-    text.append(chr(BRAILLE + (bits[0] | bits[1])), style=style)
+def _cells(raster: list[list[int]], height: int, *, braille: bool) -> list[list[int]]:
+    """Return by row and column the dots of each character as bits; 1 or 0 without braille."""
+    across, down = (2, 4) if braille else (1, 1)
+    cells = [[0] * (len(raster) // across) for _ in range(height)]
+    for x, rows in enumerate(raster):
+        for y in rows:
+            cells[y // down][x // across] |= DOTS[x % across][y % down]
+    return cells
+
+
+def _character(signal: int, reference: int, *, braille: bool) -> str:
+    """Return one character; where both signals meet, the process variable wins."""
+    if braille:
+        return chr(BRAILLE + (signal | reference))
+    return "*" if signal else "-" if reference else " "
