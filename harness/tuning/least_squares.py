@@ -115,12 +115,11 @@ def search(problem: Problem, frame: Frame, start: Array, tolerance: float) -> So
             break
         trial_cost, promised = cost, 0.0
         while damping < _LARGEST_DAMPING:
-            step = _step(normal, gradient, free, damping)
-            trial = np.clip(x + step, frame.low, frame.high)
-            moved = trial - x
+            moved = _step(normal, gradient, free, damping, (frame.low - x, frame.high - x))
             promised = float(2.0 * gradient @ moved - moved @ normal @ moved)
-            if promised <= 0.1 * tolerance * cost:
+            if 0.0 <= promised <= 0.1 * tolerance * cost:
                 break
+            trial = np.clip(x + moved, frame.low, frame.high)
             trial_gain, trial_residuals, trial_unit = _evaluate(problem, frame, trial)
             trial_cost = float(trial_residuals @ trial_residuals)
             if trial_cost < cost:
@@ -207,10 +206,25 @@ def _free(frame: Frame, x: Array, gradient: Array) -> NDArray[np.bool_]:
     return (frame.high > frame.low) & ~pressed
 
 
-def _step(normal: Array, gradient: Array, free: NDArray[np.bool_], damping: float) -> Array:
-    """Return the damped step of the free coordinates."""
-    step = np.zeros(gradient.size)
-    some = normal[np.ix_(free, free)]
-    scale = np.diag(some) + 1e-300
-    step[free] = np.linalg.solve(some + damping * np.diag(scale), gradient[free])
+def _step(
+    normal: Array,
+    gradient: Array,
+    free: NDArray[np.bool_],
+    damping: float,
+    room: tuple[Array, Array],
+) -> Array:
+    """Return the damped step; a coordinate that meets its bound stays there, the rest follow."""
+    step, free = np.zeros(gradient.size), free.copy()
+    damped = normal + damping * np.diag(np.diag(normal) + 1e-300)
+    while free.any():
+        some = np.flatnonzero(free)
+        wanted = gradient[some] - damped[some] @ np.where(free, 0.0, step)
+        step[some] = np.linalg.solve(damped[np.ix_(some, some)], wanted)
+        beyond = np.maximum(room[0] - step, step - room[1])
+        beyond[~free] = 0.0
+        worst = int(np.argmax(beyond))
+        if beyond[worst] <= 0.0:
+            break
+        step[worst] = min(max(step[worst], room[0][worst]), room[1][worst])
+        free[worst] = False
     return step
