@@ -9,7 +9,7 @@ from asyncua.ua.attribute_ids import AttributeIds
 from asyncua.ua.object_ids import ObjectIds
 from asyncua.ua.status_codes import StatusCodes
 
-from harness.links.opcua.library import node_id, status, variant_type
+from harness.links.opcua.stack import node_id, status, variant_type
 from harness.links.opcua.mapping import NAMESPACE_URI, UNITS_NAMESPACE, NodePlan, NodeType
 
 if TYPE_CHECKING:

@@ -19,7 +19,7 @@ from asyncua.ua.attribute_ids import AttributeIds
 from asyncua.ua.status_codes import StatusCodes
 
 from harness.domain.signals import Exchange
-from harness.links.opcua.library import GOOD, node_id, status, status_name
+from harness.links.opcua.stack import GOOD, node_id, status, status_name
 
 if TYPE_CHECKING:
     from collections.abc import Callable, Iterable, Iterator, Sequence
