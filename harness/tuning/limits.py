@@ -21,6 +21,8 @@ _CLOSE = 0.05  # of the critical value; from there on the root deviance is taken
 _PRECISION = 3e-3  # of the variance, to which each cost is found: 8e-4 of a root of two
 _SIGNIFICANT = 3.0  # standard deviations above white before residuals count as correlated
 _LEAST_FREEDOM = 2.0
+_FEWEST_MEANS = 4  # batch means per fitted parameter: fewer say too little of a variance
+_SMALLEST_OFFSET = 1e-9  # of the total lag or the gain, where a record is as good as exact
 
 
 def effective_samples(residuals: NDArray[np.float64], longest: int, fitted: int) -> float:
@@ -49,7 +51,7 @@ def effective_samples(residuals: NDArray[np.float64], longest: int, fitted: int)
     n = residuals.size
     variance = float(residuals @ residuals) / n
     inflation, batch = 1.0, 2
-    while variance > 0.0 and batch <= longest and n // batch >= 2 * fitted:
+    while variance > 0.0 and batch <= longest and n // batch >= _FEWEST_MEANS * fitted:
         count = n // batch
         means = residuals[: count * batch].reshape(count, batch).mean(axis=1)
         ratio = batch * float(means @ means) / (count - fitted) / variance
@@ -124,7 +126,8 @@ def profile_limits(
     for name, value in parameters_of(best, order).items():
         if name == "time_constant_1" and limits["dead_time"].low <= 0.0:
             critical = _critical_at_bound(freedom, confidence)
-        guess = _offset(best, name, spread * critical)
+        size = abs(value) if name == "gain" else sum(best.shape)
+        guess = max(_offset(best, name, spread * critical), _SMALLEST_OFFSET * size)
         limits[name] = Interval(
             low=profile.limit(name, value, -guess, critical),
             high=profile.limit(name, value, guess, critical),
@@ -189,6 +192,8 @@ class _Profile:
         for _ in range(_ROUNDS):
             tried = max(value + offset, bound)
             distance = abs(tried - value)
+            if distance == 0.0:
+                return value
             frame, _ = profile_frame(self.best.shape, self.order, name, tried)
             tolerance = _PRECISION * self.sigma**2 / self.best.cost
             found = search(self.problem, frame, home + direction * distance, tolerance)
