@@ -8,6 +8,7 @@ out is one tick's image or none, whatever the processor does with the order of s
 from __future__ import annotations
 
 import sys
+import weakref
 import zlib
 from multiprocessing import resource_tracker, shared_memory
 from typing import TYPE_CHECKING
@@ -28,9 +29,8 @@ _WORD = 8
 _LATEST = 0  # sequence number of the newest whole image; 0 before the first
 _TICK = 1  # its tick
 _POINTS = 2  # number of points
-_NEWS = (
-    3  # messages that the link process has sent: the only word that the reader's side writes
-)
+_NEWS = 3  # messages that the reader's side has sent; it writes this word and the next
+_AWAKE = 4  # wake-up calls that it has taken
 _HEADER = 8
 # A buffer: checksum, sequence, tick, then values, currents, qualities.
 _BUFFER_HEAD = 3
@@ -68,6 +68,12 @@ def _buffer(memory: shared_memory.SharedMemory) -> memoryview:
     return memory.buf
 
 
+def _remove(words: memoryview[int], memory: shared_memory.SharedMemory) -> None:
+    words.release()
+    memory.close()
+    memory.unlink()
+
+
 class ImageWriter:
     """The side that owns the image and publishes it.
 
@@ -93,7 +99,8 @@ class ImageWriter:
         self._bytes = self._floats.data.cast("B")
         self._payload = self._floats[_BUFFER_HEAD:].reshape(3, points)
         self._sequence = 0
-        self._closed = False
+        # Removed once: by `close`, or at the end of a program that came to grief before it.
+        self._remove = weakref.finalize(self, _remove, self._words, self._memory)
 
     @property
     def name(self) -> str:
@@ -145,12 +152,7 @@ class ImageWriter:
 
     def close(self) -> None:
         """Let go of the segment and remove it; a second call does nothing."""
-        if self._closed:
-            return
-        self._closed = True
-        self._words.release()
-        self._memory.close()
-        self._memory.unlink()
+        self._remove()
 
     def __enter__(self) -> ImageWriter:
         return self

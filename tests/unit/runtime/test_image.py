@@ -82,12 +82,15 @@ def test_readers_see_the_same_image(writer: ImageWriter, reader: ImageReader) ->
     other.close()
 
 
-def test_the_count_of_messages_goes_the_other_way(
+def test_the_counts_of_messages_and_calls_go_the_other_way(
     writer: ImageWriter, reader: ImageReader
 ) -> None:
-    assert writer.news() == 0
+    assert (writer.news(), writer.awake()) == (0, 0)
     reader.tell_news(17)
-    assert writer.news() == 17
+    reader.tell_awake(4)
+    assert (writer.news(), writer.awake()) == (17, 4)
+    publish(writer, 1)
+    assert (writer.news(), writer.awake(), reader.read().tick) == (17, 4, 1)
 
 
 @pytest.mark.parametrize("byte", range(3 * 8, 8 * (3 + 3 * POINTS), 7))
