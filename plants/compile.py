@@ -20,7 +20,12 @@ if TYPE_CHECKING:
 
 _Function = TypeVar("_Function", bound="Callable[..., object]")
 
-_KERNEL_FOLDERS = ("plants", "harness/controllers", "harness/engine", "harness/analysis")
+_KERNEL_SOURCES = (
+    "plants/*.py",
+    "harness/controllers/*.py",
+    "harness/engine/*.py",
+    "harness/analysis/linear.py",
+)
 
 
 def _user_cache() -> Path:
@@ -36,15 +41,16 @@ def _user_cache() -> Path:
 def _source_digest() -> str:
     root = Path(__file__).resolve().parent.parent
     digest = hashlib.sha256()
-    for folder in _KERNEL_FOLDERS:
-        for source in sorted((root / folder).glob("*.py")):
+    for pattern in _KERNEL_SOURCES:
+        for source in sorted(root.glob(pattern)):
             digest.update(source.name.encode())
             digest.update(source.read_bytes())
     return digest.hexdigest()[:16]
 
 
-# The configuration module is filled at run time, so that its names are unknown to the type checker.
-setattr(numba.config, "CACHE_DIR", str(_user_cache() / f"kernels-{_source_digest()}"))  # noqa: B010
+_CACHE = _user_cache() / f"kernels-{_source_digest()}"
+# The configuration module is filled at run time; its names are unknown to the type checker.
+setattr(numba.config, "CACHE_DIR", str(_CACHE))  # noqa: B010
 
 
 def kernel(function: _Function) -> _Function:
@@ -67,3 +73,8 @@ def kernel(function: _Function) -> _Function:
         "_Function",
         numba.njit(cache=True, fastmath=False, nogil=True, error_model="numpy")(function),
     )
+
+
+def is_compiled() -> bool:
+    """Return whether this version's kernels have been compiled on this machine before."""
+    return os.environ.get("NUMBA_DISABLE_JIT") == "1" or any(_CACHE.rglob("*.nbi"))

@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING
 from harness.domain.verdict import Limit, Metric, Outcome
 
 if TYPE_CHECKING:
-    from collections.abc import Mapping
+    from collections.abc import Mapping, Sequence
 
     from harness.domain.trial import Tolerances
 
@@ -138,12 +138,12 @@ def _finite(value: float | None) -> float | None:
     return value if value is not None and math.isfinite(value) else None
 
 
-def worst(outcomes: list[Outcome]) -> Outcome:
+def worst(outcomes: Sequence[Outcome]) -> Outcome:
     """Return the verdict of a whole from those of its parts.
 
     Parameters
     ----------
-    outcomes : list of Outcome
+    outcomes : sequence of Outcome
         Verdicts of the parts.
 
     Returns

@@ -79,8 +79,13 @@ def block_scan(
         integral = output - gain * error
     increment = gain * scan / integral_time * error
     wanted = gain * error + integral + increment
-    if (wanted > output_high and increment > 0.0) or (wanted < output_low and increment < 0.0):
-        wanted = gain * error + integral
+    # Past a limit the integral goes on only as far as the output itself: no further than the
+    # limit, and not at all where the proportional part is beyond it.
+    if wanted > output_high and increment > 0.0:
+        integral = max(integral, min(integral + increment, output_high - gain * error))
+    elif wanted < output_low and increment < 0.0:
+        integral = min(integral, max(integral + increment, output_low - gain * error))
     else:
         integral += increment
+    wanted = gain * error + integral
     return min(max(wanted, output_low), output_high), integral, 0

@@ -7,7 +7,7 @@ from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
 import numpy as np
-from scipy.special import fdtrc, stdtrit
+from scipy.special import stdtrit
 
 from harness.domain.models import Interval
 from harness.tuning.frames import evenness_of, profile_frame, unit_frame
@@ -96,8 +96,7 @@ def profile_limits(
     A value belongs to the interval if the best fit with the parameter held there costs no more
     than the overall best by t^2 of the residual variance (t of Student, two-sided). Where the
     cost stays below that down to a bound (no dead time, no second lag), the interval ends at
-    the bound: it is one-sided. Where a dead time of zero is within reach, the limits of the lags
-    use the wider critical value of `_critical_at_bound`.
+    the bound: it is one-sided, and covers more than it says where the true value is the bound.
 
     Parameters
     ----------
@@ -124,8 +123,6 @@ def profile_limits(
     spread = deviations(problem, unit_frame(order, 2.0 * sum(best.shape)), best) * sigma
     limits: dict[str, Interval] = {}
     for name, value in parameters_of(best, order).items():
-        if name == "time_constant_1" and limits["dead_time"].low <= 0.0:
-            critical = _critical_at_bound(freedom, confidence)
         size = abs(value) if name == "gain" else sum(best.shape)
         guess = max(_offset(best, name, spread * critical), _SMALLEST_OFFSET * size)
         limits[name] = Interval(
@@ -152,24 +149,6 @@ def parameter_count(problem: Problem, order: int) -> int:
         Parameters [-].
     """
     return order + 2 + int(problem.nuisance.shape[0])
-
-
-def _critical_at_bound(freedom: float, confidence: float) -> float:
-    """Return the critical root deviance where a nuisance parameter may lie on its bound.
-
-    The deviance then follows no chi-square of one degree; an even mixture of one and two degrees
-    bounds it from above where a single nuisance parameter is on its bound (after S. G. Self and
-    K.-Y. Liang, J. Am. Stat. Assoc. 82:605, 1987). Here with F for chi-square.
-    """
-    low, high = 0.0, 1e6
-    for _ in range(80):
-        middle = 0.5 * (low + high)
-        one, two = fdtrc(1.0, freedom, middle), fdtrc(2.0, freedom, 0.5 * middle)
-        if 0.5 * float(one + two) > 1.0 - confidence:
-            low = middle
-        else:
-            high = middle
-    return math.sqrt(0.5 * (low + high))
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

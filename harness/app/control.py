@@ -1,0 +1,54 @@
+"""The soft PLC as a command."""
+
+from __future__ import annotations
+
+from typing import TYPE_CHECKING
+
+from harness.app.loading import read_rig
+from harness.errors import UsageError
+from harness.runtime.plc_block import SoftPlcFaults
+from harness.runtime.soft_plc_process import run_soft_plc_blocking
+
+if TYPE_CHECKING:
+    import argparse
+
+
+def control(options: argparse.Namespace) -> None:
+    """Run the soft PLC until it is told to end.
+
+    Parameters
+    ----------
+    options : Namespace
+        Of the command line.
+
+    Raises
+    ------
+    ConfigurationError
+        With every problem of the rig.
+    UsageError
+        When the rig has no such loop or link.
+    """
+    rig, _ = read_rig(options.rig)
+    if not rig.loops:
+        raise UsageError(f"{options.rig}: this rig has no loop to control")
+    run_soft_plc_blocking(
+        rig,
+        options.link,
+        options.loop or rig.loops[0].tag,
+        options.pace,
+        _say,
+        host=options.host,
+        port=options.port,
+        scan=options.scan,
+        faults=SoftPlcFaults(
+            gain_factor=options.fault_gain,
+            integral_time_factor=options.fault_integral_time,
+            reversed_action=options.fault_reversed,
+            output_bias=options.fault_bias,
+            silent_after=options.fault_silent_after,
+        ),
+    )
+
+
+def _say(text: str) -> None:
+    print(text, flush=True)  # noqa: T201

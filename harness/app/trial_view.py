@@ -1,0 +1,254 @@
+"""A running trial as a view sees it, and the process that draws it."""
+
+from __future__ import annotations
+
+import multiprocessing
+import signal
+import sys
+import threading
+import time
+from collections import deque
+from typing import TYPE_CHECKING, Protocol, Self
+
+from harness.domain.points import manual_output_point, mode_point, setpoint_point
+from harness.domain.run import EventKind
+from harness.domain.signals import Quality
+from harness.reporting.terminal import make_console, make_view
+from harness.reporting.view_state import LoopView, PhaseState, PhaseView, ViewState
+
+if TYPE_CHECKING:
+    from multiprocessing.connection import Connection
+
+    from rich.console import Console
+
+    from harness.domain.run import Event
+    from harness.domain.trial import Trial
+    from harness.runtime.session import Session
+
+_TREND = 240  # values of the trend [-]
+_EVENTS = 200  # events kept for the view [-]
+_QUIET = (EventKind.ORDER, EventKind.ORDER_KNOWN)  # too many for a view; the record has them
+_LAST_FRAME = 3.0  # longest wait for the last frame [s]
+
+
+class ViewPort(Protocol):
+    """Where states go."""
+
+    def show(self, state: ViewState) -> None:
+        """Show a state some time soon; a later one may replace it."""
+        ...
+
+
+class TrialView:
+    """Gathers what a view shows of a trial.
+
+    Parameters
+    ----------
+    port : ViewPort
+        Where states go.
+    rig_name : str
+        Name of the rig.
+    trial : Trial
+        The trial.
+    expected : dict of str to float
+        Expected duration of each phase; 0 for not known [s].
+    """
+
+    def __init__(
+        self, port: ViewPort, rig_name: str, trial: Trial, expected: dict[str, float]
+    ) -> None:
+        self._port = port
+        self._rig_name = rig_name
+        self._trial = trial
+        self._expected = dict(expected)
+        self._started: dict[str, float] = {}
+        self._ended: dict[str, tuple[float, bool]] = {}
+        self._events: deque[str] = deque(maxlen=_EVENTS)
+        self._dropped = 0
+        self._trends = {
+            phase.loop: (deque[float](maxlen=_TREND), deque[float](maxlen=_TREND))
+            for phase in trial.phases
+        }
+        self._tick = 1.0
+
+    def take_event(self, event: Event) -> None:
+        """Take an event.
+
+        Parameters
+        ----------
+        event : Event
+            The event.
+        """
+        now = event.tick * self._tick
+        if event.kind is EventKind.PHASE_STARTED:
+            self._started[event.subject] = now
+            self._expected[event.subject] = float(str(event.data.get("expected", 0.0)))
+        elif event.kind is EventKind.PHASE_ENDED:
+            self._ended[event.subject] = (now, bool(event.data.get("steady")))
+        if event.kind not in _QUIET:
+            self._dropped += len(self._events) == _EVENTS
+            self._events.append(
+                f"[{now:7.0f} s] {event.kind.value}: {event.subject}: {event.text}"
+            )
+
+    def look(self, session: Session) -> None:
+        """Show the present state.
+
+        Parameters
+        ----------
+        session : Session
+            The session.
+        """
+        self._tick = session.rig.tick
+        self._port.show(
+            ViewState(
+                rig=self._rig_name,
+                trial=self._trial.name,
+                pace=session.pace,
+                elapsed=session.time,
+                expected=sum(self._expected.values()),
+                phases=tuple(self._phase(phase.name, session) for phase in self._trial.phases),
+                loops=tuple(self._loop(tag, session) for tag in self._trends),
+                events=tuple(self._events),
+                events_before=self._dropped,
+            )
+        )
+
+    def _phase(self, name: str, session: Session) -> PhaseView:
+        state, elapsed = PhaseState.WAITING, 0.0
+        if name in self._ended:
+            end, steady = self._ended[name]
+            state = PhaseState.DONE if steady else PhaseState.INVALID
+            elapsed = end - self._started[name]
+        elif name in self._started:
+            state = PhaseState.RUNNING
+            elapsed = session.time - self._started[name]
+        return PhaseView(
+            name=name, state=state, elapsed=elapsed, expected=self._expected.get(name, 0.0)
+        )
+
+    def _loop(self, tag: str, session: Session) -> LoopView:
+        loop = session.rig.loop(tag)
+        image = session.image()
+        point, value, _, quality = image[loop.process_variable]
+        setpoint = image[setpoint_point(tag)][1]
+        automatic = image[mode_point(tag)][1] > 0.0
+        setpoints, values = self._trends[tag]
+        setpoints.append(setpoint)
+        values.append(value)
+        output = session.engine.output(loop.output)
+        if not automatic and not session.external:
+            output = image[manual_output_point(tag)][1] / 100.0
+        return LoopView(
+            tag=tag,
+            unit=point.range.unit,
+            setpoint=setpoint,
+            process_variable=value,
+            output=output,
+            load=session.engine.output(loop.load),
+            mode="automatic" if automatic else "manual",
+            quality=Quality(int(quality)),
+            recent_setpoint=tuple(setpoints),
+            recent_process_variable=tuple(values),
+        )
+
+
+class DirectView:
+    """A view in this process, for virtual time, where drawing holds nobody up.
+
+    Parameters
+    ----------
+    to_stderr : bool
+        Whether standard output is kept free for a document.
+    """
+
+    def __init__(self, *, to_stderr: bool) -> None:
+        self._view = make_view(_console(to_stderr=to_stderr), time.perf_counter_ns)
+        self._last: ViewState | None = None
+
+    def show(self, state: ViewState) -> None:
+        """Show a state when one is due."""
+        self._last = state
+        if self._view.due():
+            self._view.show(state)
+
+    def __enter__(self) -> Self:
+        self._view.__enter__()
+        return self
+
+    def __exit__(self, *_: object) -> None:
+        if self._last is not None:
+            self._view.show(self._last)
+        self._view.__exit__(None, None, None)
+
+
+class ViewProcess:
+    """A view in a process of its own, so that no tick waits for a frame.
+
+    Parameters
+    ----------
+    to_stderr : bool
+        Whether standard output is kept free for a document.
+    """
+
+    def __init__(self, *, to_stderr: bool) -> None:
+        context = multiprocessing.get_context("spawn")
+        receiver, self._pipe = context.Pipe(duplex=False)
+        self._process = context.Process(
+            target=_draw, args=(receiver, to_stderr), name="view", daemon=True
+        )
+        self._receiver = receiver
+        self._latest: ViewState | None = None
+        self._changed = threading.Condition()
+        self._closed = False
+        self._sender = threading.Thread(target=self._send, name="view sender", daemon=True)
+
+    def show(self, state: ViewState) -> None:
+        """Have a state drawn; one that comes before the last was sent replaces it."""
+        with self._changed:
+            self._latest = state
+            self._changed.notify()
+
+    def __enter__(self) -> Self:
+        self._process.start()
+        self._receiver.close()
+        self._sender.start()
+        return self
+
+    def __exit__(self, *_: object) -> None:
+        with self._changed:
+            self._closed = True
+            self._changed.notify()
+        self._sender.join(_LAST_FRAME)
+        self._pipe.close()
+        self._process.join(_LAST_FRAME)
+        if self._process.is_alive():
+            self._process.kill()
+            self._process.join()
+
+    def _send(self) -> None:
+        while True:
+            with self._changed:
+                self._changed.wait_for(lambda: self._latest is not None or self._closed)
+                state, self._latest = self._latest, None
+            if state is None:
+                return
+            try:
+                self._pipe.send(state)
+            except OSError:
+                return  # the view has gone; the run goes on without it
+
+
+def _draw(receiver: Connection, to_stderr: bool) -> None:
+    """Draw what comes up the pipe until it closes; the body of the view's process."""
+    signal.signal(signal.SIGINT, signal.SIG_IGN)
+    with make_view(_console(to_stderr=to_stderr), time.perf_counter_ns) as view:
+        while True:
+            try:
+                view.show(receiver.recv())
+            except EOFError:
+                return
+
+
+def _console(*, to_stderr: bool) -> Console:
+    return make_console(sys.stderr if to_stderr else None)

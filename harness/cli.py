@@ -1,0 +1,302 @@
+"""The command ``dryrig``. Everything heavy is imported by the call that needs it."""
+
+from __future__ import annotations
+
+import argparse
+import json
+import sys
+from pathlib import Path
+from typing import TYPE_CHECKING
+
+from harness.errors import DryrigError, ExitCode
+
+if TYPE_CHECKING:
+    from collections.abc import Callable, Sequence
+
+    from harness.app.loading import LinkChoice
+
+_CAUTION = (
+    "Outputs of a controller under test must be isolated from the field. Nothing here is evidence "
+    "for a safety function; local codes and licensed practice decide."
+)
+
+
+def main(arguments: Sequence[str] | None = None) -> int:
+    """Run the command line.
+
+    Parameters
+    ----------
+    arguments : sequence of str or None
+        Arguments; None takes those of the process.
+
+    Returns
+    -------
+    int
+        0 pass, 1 fail, 2 wrong configuration or use, 3 invalid run, 130 interrupted [-].
+    """
+    options = build_parser().parse_args(arguments)
+    run: Callable[[argparse.Namespace], int] = options.run
+    try:
+        return int(run(options))
+    except DryrigError as error:
+        print(error, file=sys.stderr)  # noqa: T201
+        return int(error.exit_code)
+    except KeyboardInterrupt:
+        return int(ExitCode.INTERRUPTED)
+    except BrokenPipeError:
+        # The reader of our output has gone; there is nobody left to tell.
+        sys.stderr.close()
+        return int(ExitCode.INTERRUPTED)
+
+
+def build_parser() -> argparse.ArgumentParser:
+    """Return the parser of the command line."""
+    parser = argparse.ArgumentParser(
+        prog="dryrig",
+        description="A simulated plant in real time, to test a level controller against before "
+        "site start-up.",
+        epilog=_CAUTION,
+    )
+    commands = parser.add_subparsers(metavar="COMMAND", required=True)
+    _add_check(commands)
+    _add_model(commands)
+    _add_serve(commands)
+    _add_control(commands)
+    _add_trial(commands)
+    _add_score(commands)
+    return parser
+
+
+def _add_check(commands: argparse._SubParsersAction[argparse.ArgumentParser]) -> None:
+    parser = commands.add_parser("check", help="check a rig and a trial; say how long it takes")
+    parser.add_argument("rig", type=Path, metavar="RIG", help="rig file")
+    parser.add_argument("trial", type=Path, nargs="?", metavar="TRIAL", help="trial file")
+    _add_pace(parser)
+    _add_json(parser)
+    parser.set_defaults(run=_check)
+
+
+def _add_model(commands: argparse._SubParsersAction[argparse.ArgumentParser]) -> None:
+    parser = commands.add_parser("model", help="operating point, gains and time constants")
+    parser.add_argument("rig", type=Path, metavar="RIG", help="rig file")
+    _add_json(parser)
+    parser.set_defaults(run=_model)
+
+
+def _add_serve(commands: argparse._SubParsersAction[argparse.ArgumentParser]) -> None:
+    parser = commands.add_parser(
+        "serve", help="run a rig live with its links open", epilog=_CAUTION
+    )
+    parser.add_argument("rig", type=Path, metavar="RIG", help="rig file")
+    parser.add_argument(
+        "--for",
+        type=float,
+        dest="duration",
+        metavar="SECONDS",
+        help="stop after this wall time",
+    )
+    parser.add_argument(
+        "--builtin", action="store_true", help="close the loops with the built-in block"
+    )
+    parser.add_argument(
+        "--out", type=Path, metavar="FOLDER", help="record into a run folder there"
+    )
+    _add_pace(parser)
+    _add_links(parser)
+    _add_json(parser)
+    parser.set_defaults(run=_serve)
+
+
+def _add_control(commands: argparse._SubParsersAction[argparse.ArgumentParser]) -> None:
+    parser = commands.add_parser(
+        "control", help="run the soft PLC against a rig that is served"
+    )
+    parser.add_argument("rig", type=Path, metavar="RIG", help="rig file, for the map")
+    parser.add_argument(
+        "--link", required=True, metavar="LINK", help="modbus, opcua, or the name of a link"
+    )
+    parser.add_argument(
+        "--loop", metavar="TAG", help="loop to close; the rig's first if not given"
+    )
+    parser.add_argument("--host", help="where the rig listens, if not as in the rig file")
+    parser.add_argument("--port", type=int, help="its port, if not as in the rig file")
+    parser.add_argument(
+        "--scan", type=float, metavar="SECONDS", help="scan period in plant time"
+    )
+    _add_faults(parser)
+    _add_pace(parser)
+    parser.set_defaults(run=_control)
+
+
+def _add_faults(parser: argparse.ArgumentParser) -> None:
+    """Add deliberate mistakes, with which a test shows that the score finds them."""
+    for name, kind, default in (
+        ("--fault-gain", float, 1.0),
+        ("--fault-integral-time", float, 1.0),
+        ("--fault-bias", float, 0.0),
+        ("--fault-silent-after", float, None),
+    ):
+        parser.add_argument(name, type=kind, default=default, help=argparse.SUPPRESS)
+    parser.add_argument("--fault-reversed", action="store_true", help=argparse.SUPPRESS)
+
+
+def _add_trial(commands: argparse._SubParsersAction[argparse.ArgumentParser]) -> None:
+    parser = commands.add_parser(
+        "trial", help="run a trial, score it and write the report", epilog=_CAUTION
+    )
+    parser.add_argument("rig", type=Path, metavar="RIG", help="rig file")
+    parser.add_argument("trial", type=Path, metavar="TRIAL", help="trial file")
+    parser.add_argument(
+        "--clock",
+        choices=("virtual", "paced"),
+        help="virtual for the built-in controller, paced for one outside, unless said otherwise",
+    )
+    parser.add_argument("--controller", choices=("builtin", "external"), default="builtin")
+    parser.add_argument(
+        "--controller-pace",
+        type=float,
+        default=1.0,
+        metavar="PACE",
+        help="pace at which an external controller's own clock is scaled; it must be the rig's",
+    )
+    parser.add_argument("--phases", metavar="NAME[,NAME...]", help="run these phases only")
+    parser.add_argument("--out", type=Path, default=Path("runs"), metavar="FOLDER")
+    _add_pace(parser)
+    _add_links(parser)
+    _add_json(parser)
+    parser.set_defaults(run=_trial)
+
+
+def _add_score(commands: argparse._SubParsersAction[argparse.ArgumentParser]) -> None:
+    parser = commands.add_parser("score", help="score a stored run again")
+    parser.add_argument("folder", type=Path, metavar="RUN", help="run folder")
+    _add_json(parser)
+    parser.set_defaults(run=_score)
+
+
+def _add_pace(parser: argparse.ArgumentParser) -> None:
+    parser.add_argument(
+        "--pace", type=float, default=1.0, help="plant seconds per wall second (default 1)"
+    )
+
+
+def _add_json(parser: argparse.ArgumentParser) -> None:
+    parser.add_argument(
+        "--json", action="store_true", help="a JSON document on standard output"
+    )
+
+
+def _add_links(parser: argparse.ArgumentParser) -> None:
+    parser.add_argument(
+        "--link", metavar="LINK", help="open this link only: modbus, opcua, a name"
+    )
+    parser.add_argument("--host", help="address to listen on (default as in the rig file)")
+    parser.add_argument("--modbus-port", type=int, metavar="PORT")
+    parser.add_argument("--opcua-port", type=int, metavar="PORT")
+
+
+def _link_choice(options: argparse.Namespace) -> LinkChoice:
+    from harness.app.loading import LinkChoice  # noqa: PLC0415  kept out of --help
+
+    return LinkChoice(
+        only=options.link,
+        host=options.host,
+        modbus_port=options.modbus_port,
+        opcua_port=options.opcua_port,
+    )
+
+
+def _check(options: argparse.Namespace) -> int:
+    from harness.app.check import check  # noqa: PLC0415  kept out of --help
+    from harness.app.printing import print_check  # noqa: PLC0415
+
+    document = check(options.rig, options.trial, options.pace)
+    _tell(document, options, print_check)
+    return ExitCode.PASS
+
+
+def _model(options: argparse.Namespace) -> int:
+    from harness.app.model import model  # noqa: PLC0415  kept out of --help
+    from harness.app.printing import print_model  # noqa: PLC0415
+
+    _tell(model(options.rig), options, print_model)
+    return ExitCode.PASS
+
+
+def _serve(options: argparse.Namespace) -> int:
+    from harness.app.serve import ServeOptions, serve  # noqa: PLC0415  kept out of --help
+
+    serve(
+        ServeOptions(
+            rig=options.rig,
+            pace=options.pace,
+            duration=options.duration,
+            links=_link_choice(options),
+            builtin=options.builtin,
+            out=options.out,
+            json=options.json,
+        )
+    )
+    return ExitCode.PASS
+
+
+def _control(options: argparse.Namespace) -> int:
+    from harness.app.control import control  # noqa: PLC0415  kept out of --help
+
+    control(options)
+    return ExitCode.PASS
+
+
+def _trial(options: argparse.Namespace) -> int:
+    from harness.app.printing import print_result  # noqa: PLC0415  kept out of --help
+    from harness.app.trial import TrialOptions, run_trial  # noqa: PLC0415
+
+    names = tuple(name.strip() for name in (options.phases or "").split(",") if name.strip())
+    external = options.controller == "external"
+    result = run_trial(
+        TrialOptions(
+            rig=options.rig,
+            trial=options.trial,
+            clock=options.clock or ("paced" if external else "virtual"),
+            pace=options.pace,
+            controller=options.controller,
+            controller_pace=options.controller_pace,
+            phases=names,
+            out=options.out,
+            links=_link_choice(options),
+            json=options.json,
+        )
+    )
+    if options.json:
+        sys.stdout.write(result.text)
+    else:
+        print_result(result)
+    return result.exit_code
+
+
+def _score(options: argparse.Namespace) -> int:
+    from harness.app.printing import print_result  # noqa: PLC0415  kept out of --help
+    from harness.app.score import score  # noqa: PLC0415
+
+    result = score(options.folder)
+    if options.json:
+        sys.stdout.write(result.text)
+    else:
+        print_result(result)
+    return result.exit_code
+
+
+def _tell(
+    document: dict[str, object],
+    options: argparse.Namespace,
+    show: Callable[[dict[str, object]], None],
+) -> None:
+    if options.json:
+        text = json.dumps(document, indent=2, ensure_ascii=False, allow_nan=False)
+        sys.stdout.write(text + "\n")
+    else:
+        show(document)
+
+
+if __name__ == "__main__":
+    sys.exit(main())
