@@ -48,7 +48,8 @@ class IdealBlock:
         self.integral_time = math.inf
         self.integral = output
         self.output = output
-        self._held = 0
+        # As after a held scan: the first scan in automatic continues from the output.
+        self._held = 1
 
     def order(self, settings: ControllerSettings) -> None:
         """Take new settings.

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import dataclasses
 from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
@@ -27,7 +28,10 @@ if TYPE_CHECKING:
 _HORIZON = 12.0  # of the total lag, doubled until the response has died out [-]
 _DOUBLINGS = 5
 _TYPICAL_CHANGE = 0.05  # of output or span, where a phase changes nothing [-]
-_LOOK_DELAY = 1.0  # dominant time constants from the first right moment to the verdict [-]
+_LOOK_DELAY = 1.2  # dominant time constants from the first right moment to the verdict [-]
+_AT_REST = 1e-3  # of its range: a response that moves less over its last third is at rest [-]
+# An exponential is within a hundredth after 4.6 time constants; the dwell of five ends no sooner.
+_TIMES_TO_BOUND = 5.0
 _MID = 0.5  # of output or span: where a linear prediction stands does not matter [-]
 
 
@@ -40,7 +44,8 @@ class PhasePlan:
     dominant_time : float
         Time constant of the tail of its response [s].
     effect : float
-        Change of the process variable that it makes: lasting, or at its peak [fraction of span].
+        Lasting change of the process variable that its step asks for, or would make without a
+        controller [fraction of span].
     duration : float
         Expected time until it counts as steady [s].
     """
@@ -156,37 +161,16 @@ def plan_phase(
     ModelError
         When the predicted loop does not come to rest.
     """
-    stand_in = phase
-    if phase.kind is PhaseKind.SETTLE:
-        kind = PhaseKind.OUTPUT_STEP
-        if phase.mode is Mode.AUTOMATIC:
-            kind = PhaseKind.SETPOINT_STEP
-        stand_in = type(phase)(
-            name=phase.name,
-            loop=phase.loop,
-            kind=kind,
-            mode=phase.mode,
-            change=_TYPICAL_CHANGE,
-            time_limit=phase.time_limit,
-        )
+    stand_in = _stand_in(phase)
+    effect = _effect(stand_in, models)
     horizon = _HORIZON * max(models.output.total_lag, models.load.total_lag)
     for _ in range(_DOUBLINGS):
         rows = max(10, round(horizon / tick))
         response, _ = predict_phase(stand_in, loop, models, settings, schedule, tick, rows)
-        error = np.asarray(response - response[-1], dtype=np.float64)
         time = np.arange(rows, dtype=np.float64) * tick
-        # The end of a response that has died out is its final value; a running one betrays
-        # itself by moving over the last third.
-        still_moving = np.ptp(response[-rows // 3 :]) > rule.remaining / 10 * np.ptp(response)
-        if np.isfinite(response).all() and not still_moving:
-            try:
-                dominant = tail_time_constant(time, error)
-            except DataError:
-                horizon *= 2
-                continue
-            effect = float(np.max(np.abs(response)))
-            left = np.flatnonzero(np.abs(error) > rule.remaining * effect)
-            last = float(time[left[-1]]) if len(left) else 0.0
+        dominant, reached = _tail(time, response, rule.remaining * effect)
+        if dominant is not None:
+            last = 0.0 if phase.kind is PhaseKind.SETTLE else reached
             duration = max(rule.dwell * dominant, last + _LOOK_DELAY * dominant)
             return PhasePlan(dominant_time=dominant, effect=effect, duration=duration)
         horizon *= 2
@@ -194,3 +178,40 @@ def plan_phase(
         f"phase {phase.name!r}: the predicted loop does not come to rest within {horizon:.0f} s; "
         "it is unstable or nearly so. Take a longer closed-loop time, or check the settings"
     )
+
+
+def _stand_in(phase: Phase) -> Phase:
+    """Return the phase itself, or a typical step for one that only settles."""
+    if phase.kind is not PhaseKind.SETTLE:
+        return phase
+    automatic = phase.mode is Mode.AUTOMATIC
+    kind = PhaseKind.SETPOINT_STEP if automatic else PhaseKind.OUTPUT_STEP
+    return dataclasses.replace(phase, kind=kind, change=_TYPICAL_CHANGE)
+
+
+def _effect(phase: Phase, models: LoopModels) -> float:
+    """Return the lasting change of the process variable that a step asks for or would make alone."""
+    match phase.kind:
+        case PhaseKind.OUTPUT_STEP:
+            return abs(models.output.gain * phase.change)
+        case PhaseKind.LOAD_STEP:
+            return abs(models.load.gain * phase.change)
+        case _:
+            return abs(phase.change)
+
+
+def _tail(time: Floats, response: Floats, bound: float) -> tuple[float | None, float]:
+    """Return the dominant time of a response that has died out, and when it is within a bound."""
+    error = np.asarray(response - response[-1], dtype=np.float64)
+    # A response that has not come to rest betrays itself by moving over the last third.
+    still = np.ptp(response[-len(response) // 3 :]) <= _AT_REST * np.ptp(response)
+    if not (np.isfinite(response).all() and still):
+        return None, 0.0
+    left = np.flatnonzero(np.abs(error) > bound)
+    reached = float(time[left[-1]]) if len(left) else float(time[1])
+    try:
+        tail = tail_time_constant(time, error)
+    except DataError:
+        return None, 0.0
+    # A lobe can stretch the tail's own measure beyond what the whole response allows.
+    return min(tail, reached / _TIMES_TO_BOUND), reached

@@ -438,6 +438,8 @@ class Engine:
         self.state[s + place.DELAY_LINE : s + self._stride] = initial
         self.state[s + place.GAIN] = 0.0
         self.state[s + place.INTEGRAL_TIME] = np.inf
+        # As after a held scan: the first scan in automatic continues from the output.
+        self.state[s + place.HELD] = 1
         transmitter = self.rig.transmitter(loop.process_variable)
         true = self.state[self.table[at.AT_TRUE] + self._transmitters[transmitter.tag]]
         fraction = transmitter.range.to_fraction(float(true))

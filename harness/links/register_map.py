@@ -124,7 +124,7 @@ def scaling_text(point: Point, item: RegisterItem) -> str:
     Returns
     -------
     str
-        E.g. ``"0 to 27648 for 0 to 4 m"``.
+        E.g. ``"0 to 32000 for 0 to 4 m"``.
     """
     limits = point.range
     span = f"for {limits.lower:g} to {limits.upper:g} {limits.unit}".rstrip()

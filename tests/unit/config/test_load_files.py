@@ -169,7 +169,7 @@ def test_links_of_a_rig():
     )
     assert modbus.items[1].split_writes
     assert modbus.items[4].scaling is Scaling.CURRENT
-    assert (modbus.items[5].counts_low, modbus.items[5].counts_high) == (0, 27648)
+    assert (modbus.items[5].counts_low, modbus.items[5].counts_high) == (0, 32000)
     assert modbus.items[6].factor == 1000.0
     assert modbus.items[7].encoding is Encoding.BIT
     assert opcua == OpcUaServerLink(

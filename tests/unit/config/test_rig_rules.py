@@ -803,27 +803,27 @@ CASES = (
     ),
     Case(
         "counts crossed",
-        "counts = [0, 27648]",
-        "counts = [27648, 0]",
+        "counts = [0, 32000]",
+        "counts = [32000, 0]",
         (
-            "122: link[0].items[5].counts: [27648, 0] is crossed; the first end lies below the second",
+            "122: link[0].items[5].counts: [32000, 0] is crossed; the first end lies below the second",
         ),
     ),
     Case(
         "counts beyond the type",
-        "counts = [0, 27648]",
+        "counts = [0, 32000]",
         "counts = [0, 40000]",
         ("122: link[0].items[5].counts: [0, 40000] does not fit int16, -32768 to 32767",),
     ),
     Case(
         "default counts beyond the type",
-        ", counts = [0, 27648]",
+        ", counts = [0, 32000]",
         "",
         ("122: link[0].items[5].encoding: [0, 65535] does not fit int16, -32768 to 32767",),
     ),
     Case(
         "counts as float",
-        'address = 8, encoding = "int16", scaling = "counts", counts = [0, 27648]',
+        'address = 8, encoding = "int16", scaling = "counts", counts = [0, 32000]',
         'address = 10, encoding = "float32", scaling = "counts"',
         ('122: link[0].items[5].scaling: "counts" are integers; the encoding is float32',),
     ),

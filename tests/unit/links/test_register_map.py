@@ -33,7 +33,7 @@ def test_a_good_map_has_no_problems():
     good = (
         item(address=0),
         item(address=2, encoding=Encoding.UINT16, scaling=Scaling.CURRENT),
-        item(address=3, encoding=Encoding.INT16, scaling=Scaling.COUNTS, counts_high=27648),
+        item(address=3, encoding=Encoding.INT16, scaling=Scaling.COUNTS, counts_high=32000),
         item("FV-1", 65534, Encoding.UINT32, factor=100.0, split_writes=True),
         item("MODE", 0, Encoding.BIT),  # bits have addresses of their own
         item("MODE", 65535, Encoding.BIT),
