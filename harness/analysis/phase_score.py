@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import dataclasses
 import math
 from dataclasses import dataclass
 from typing import TYPE_CHECKING
@@ -207,14 +208,9 @@ def _nonlinear(score: LoopScore, span: PhaseSpan, setpoint: float) -> _Series:
         setpoint=setpoint,
         loads=loads,
     )
-    return _Series(
-        process_variable=series.process_variable,
-        output=series.output,
-        initial=series.initial,
-        initial_output=series.initial_output,
-        final=final,
-        offset=final - setpoint,
-    )
+    # Bands and integrals are about the end that the replay itself comes to, as for the
+    # measured trace; where it must come to rest in the end is the offset.
+    return dataclasses.replace(series, offset=final - setpoint)
 
 
 def _linear(score: LoopScore, span: PhaseSpan, setpoint: float, nonlinear: _Series) -> _Series:
@@ -280,6 +276,11 @@ def _metrics(
             initial_output=series.initial_output,
             tail=tail,
         )
+        # From the value before the step, which under a P block is not where it ends.
+        deviation = series.process_variable - series.initial
+        top = int(np.argmax(np.abs(deviation)))
+        metrics["peak_deviation"] = float(deviation[top])
+        metrics["peak_time"] = float(time[top])
     if series.offset is not None:
         metrics["offset"] = series.offset
     return metrics

@@ -6,7 +6,7 @@ from typing import TYPE_CHECKING
 
 from rich.table import Table
 
-from harness.reporting.document import named_parts, number, part, parts, text, texts
+from harness.reporting.document import named_parts, number, part, parts, text
 from harness.reporting.tables import verdict_table
 from harness.reporting.terminal import make_console
 from harness.reporting.words import duration
@@ -27,11 +27,6 @@ def print_result(result: RunResult) -> None:
     """
     console = make_console()
     console.print(verdict_table(result.document))
-    for reason in texts(result.document, "reasons"):
-        console.print(f"invalid: {reason}", markup=False)
-    for phase in parts(result.document, "phases"):
-        for finding in texts(phase, "findings"):
-            console.print(f"{text(phase, 'name')}: {finding}", markup=False)
     console.print(f"report: {result.folder / 'report.html'}", soft_wrap=True, markup=False)
 
 

@@ -11,8 +11,8 @@ from asyncua.ua.status_codes import StatusCodes
 
 from harness.domain.signals import Quality
 from harness.errors import LinkError
-from harness.links.opcua.stack import GOOD, data_value, status, variant_type
 from harness.links.opcua.mapping import NodePlan, NodeType, representable, status_of
+from harness.links.opcua.stack import GOOD, data_value, status, variant_type
 
 if TYPE_CHECKING:
     from collections.abc import Callable, Sequence

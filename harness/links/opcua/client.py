@@ -17,8 +17,8 @@ from asyncua.ua.uaerrors import UaError, UaStatusCodeError
 from harness.domain.signals import Quality
 from harness.errors import LinkError, PeerError, UsageError
 from harness.links.client import Reading
-from harness.links.opcua.stack import GOOD, node_id, quieten, status_name
 from harness.links.opcua.mapping import NAMESPACE_URI, quality_of
+from harness.links.opcua.stack import GOOD, node_id, quieten, status_name
 
 if TYPE_CHECKING:
     from collections.abc import Awaitable, Iterable, Mapping, Sequence

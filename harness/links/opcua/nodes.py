@@ -9,8 +9,8 @@ from asyncua.ua.attribute_ids import AttributeIds
 from asyncua.ua.object_ids import ObjectIds
 from asyncua.ua.status_codes import StatusCodes
 
-from harness.links.opcua.stack import node_id, status, variant_type
 from harness.links.opcua.mapping import NAMESPACE_URI, UNITS_NAMESPACE, NodePlan, NodeType
+from harness.links.opcua.stack import node_id, status, variant_type
 
 if TYPE_CHECKING:
     from collections.abc import Sequence

@@ -14,10 +14,10 @@ from asyncua.server.server import Server
 
 from harness.errors import LinkError
 from harness.links.opcua.board import Board
-from harness.links.opcua.stack import quieten
 from harness.links.opcua.mapping import plan_address_space
 from harness.links.opcua.nodes import build_nodes
 from harness.links.opcua.session import Desk, RigInternalServer
+from harness.links.opcua.stack import quieten
 
 if TYPE_CHECKING:
     from collections.abc import Callable, Sequence
