@@ -37,13 +37,22 @@ AT_OVERFLOW_PARAMETERS = 23
 AT_TRANSMITTER_PARAMETERS = 24
 PLANT_PARAMETERS = 25
 # Header of the table: offsets into the table itself.
+AT_VESSEL_LINKS = 27
 AT_VALVE_LINKS = 28
 AT_ORIFICE_LINKS = 29
 AT_OVERFLOW_LINKS = 30
 AT_TRANSMITTER_LINKS = 31
 PLANT_TABLE = 32
+# Header of the table: offsets into the scratch array; its first places hold volumes and totals.
+AT_DRY = 33
+AT_PARABOLAS = 34
+AT_VALVES_BEFORE = 35
+AT_INFLOWS = 36
+AT_NORMALS = 37
+AT_KEPT = 38
+WORK = 39  # length of the scratch array
 # Header of the table: left to the harness, see its engine.
-HARNESS_HEADER = 36
+HARNESS_HEADER = 40
 HEADER = 48
 
 # Totals, integrated with the volumes [m3].
@@ -59,7 +68,9 @@ N_PLANT_PARAMETERS = 4
 # Parameters of a vessel.
 AREA = 0  # [m2]
 INVERSE_AREA = 1  # a product is several times faster than a quotient [1/m2]
-VESSEL_STRIDE = 2
+OUTLETS_COEFFICIENT = 2  # of all its outlets together [m2.5/s]
+LOWEST_CREST = 3  # volume at the lowest crest of its overflows, or infinite [m3]
+VESSEL_STRIDE = 4
 
 # Parameters of a valve.
 KV = 0  # [m3/h at 1 bar]
@@ -74,7 +85,8 @@ VALVE_STRIDE = 8
 
 # Parameters of an orifice.
 ORIFICE_COEFFICIENT = 0  # [m2.5/s]
-ORIFICE_STRIDE = 1
+SHARE = 1  # of what leaves its vessel by all outlets [-]
+ORIFICE_STRIDE = 2
 
 # Parameters of an overflow.
 WEIR_COEFFICIENT = 0  # [m1.5/s]
@@ -94,7 +106,14 @@ WEIGHT_MIDDLE = 7
 WEIGHT_END = 8
 INVERSE_SUBJECT_AREA = 9  # of the vessel it looks at; 0 for a valve's flow [1/m2]
 SUBJECT_COEFFICIENT = 10  # of the outlet whose flow it measures, or 0 [m2.5/s]
-TRANSMITTER_STRIDE = 11
+INVERSE_RESOLUTION = 11  # 0 for a transmitter without steps [1/fraction of span]
+TRANSMITTER_STRIDE = 12
+
+# Table of a vessel, in an order in which what feeds a vessel stands before it.
+VESSEL = 0  # number of the vessel
+FIRST_OUTLET = 1  # number of the first of its outlets; they stand side by side
+N_OUTLETS = 2
+VESSEL_LINKS = 3
 
 # Table of a valve, an orifice, an overflow, a transmitter.
 VALVE_DESTINATION = 0
@@ -107,6 +126,11 @@ KIND = 0
 SUBJECT = 1  # vessel for a level or an outlet's flow, valve for a valve's flow
 STREAM = 2
 TRANSMITTER_LINKS = 3
+
+# Scratch of a vessel: what flows in at the four stages of a step.
+STAGES = 4
+# Scratch of a transmitter: the number of a block of noise, and its four numbers.
+NORMALS = 5
 
 MEASURES_LEVEL = 0
 MEASURES_VALVE_FLOW = 1
@@ -161,7 +185,8 @@ class Counts:
     def table_offsets(self) -> dict[int, int]:
         """Return the entries of the table's header that point into the table."""
         order = (
-            (AT_VALVE_LINKS, 0),
+            (AT_VESSEL_LINKS, 0),
+            (AT_VALVE_LINKS, self.vessels * VESSEL_LINKS),
             (AT_ORIFICE_LINKS, self.valves * VALVE_LINKS),
             (AT_OVERFLOW_LINKS, self.orifices * PATH_LINKS),
             (AT_TRANSMITTER_LINKS, self.overflows * PATH_LINKS),
@@ -169,16 +194,18 @@ class Counts:
         )
         return _running(order, HEADER)
 
-    def work_size(self) -> int:
-        """Return the length of the scratch array of the stepper."""
-        integrated = self.vessels + N_TOTALS
-        return (
-            5 * integrated
-            + self.vessels
-            + 3 * self.valves
-            + self.vessels
-            + self.state_offsets()[PLANT_STATE]
+    def work_offsets(self) -> dict[int, int]:
+        """Return the entries of the table's header that point into the scratch array."""
+        order = (
+            (AT_DRY, 5 * (self.vessels + N_TOTALS)),
+            (AT_PARABOLAS, self.vessels),
+            (AT_VALVES_BEFORE, 3 * self.valves),
+            (AT_INFLOWS, 3 * self.valves),
+            (AT_NORMALS, STAGES * self.vessels),
+            (AT_KEPT, NORMALS * self.transmitters),
+            (WORK, self.state_offsets()[PLANT_STATE] + self.vessels),
         )
+        return _running(order, 0)
 
 
 def _running(order: tuple[tuple[int, int], ...], start: int) -> dict[int, int]:

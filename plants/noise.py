@@ -11,13 +11,16 @@ from plants.compile import kernel
 
 _LOW_32 = np.uint64(0xFFFFFFFF)
 _SHIFT_32 = np.uint64(32)
-_SHIFT_11 = np.uint64(11)
-# Philox-2x32 multiplier and Weyl increment: J. K. Salmon, M. A. Moraes, R. O. Dror & D. E. Shaw,
-# Parallel random numbers: as easy as 1, 2, 3, Proc. SC11, 2011 (values from memory; held against
-# the published known answers in the tests).
-_MULTIPLIER = np.uint64(0xD256D193)
-_WEYL = np.uint64(0x9E3779B9)
+# Philox-4x32 multipliers and Weyl increments: J. K. Salmon, M. A. Moraes, R. O. Dror &
+# D. E. Shaw, Parallel random numbers: as easy as 1, 2, 3, Proc. SC11, 2011 (values from memory;
+# held against the published known answers in the tests).
+_MULTIPLIER_0 = np.uint64(0xD2511F53)
+_MULTIPLIER_1 = np.uint64(0xCD9E8D57)
+_WEYL_0 = np.uint64(0x9E3779B9)
+_WEYL_1 = np.uint64(0xBB67AE85)
 _ROUNDS = 10
+# A block of the generator serves this many ticks of one instrument.
+BLOCK_TICKS = 4
 # Limits of the three regions of algorithm AS 241.
 _CENTRAL = 0.425
 _FAR_TAIL = 5.0
@@ -40,29 +43,36 @@ def stream_of(tag: str) -> int:
 
 
 @kernel
-def philox_2x32(
-    counter_low: np.uint64, counter_high: np.uint64, key: np.uint64
-) -> tuple[np.uint64, np.uint64]:
-    """Return 64 random bits of a counter and a key, as two words of 32 bits.
+def philox_4x32(
+    counter_0: np.uint64,
+    counter_1: np.uint64,
+    counter_2: np.uint64,
+    counter_3: np.uint64,
+    key_0: np.uint64,
+    key_1: np.uint64,
+) -> tuple[np.uint64, np.uint64, np.uint64, np.uint64]:
+    """Return 128 random bits of a counter and a key, as four words of 32 bits.
 
     Parameters
     ----------
-    counter_low, counter_high, key : uint64
+    counter_0, counter_1, counter_2, counter_3, key_0, key_1 : uint64
         Words of 32 bits [-].
 
     Returns
     -------
-    tuple of two uint64
-        Words of 32 bits [-]; ten rounds of Philox-2x32 (Salmon et al., SC11, 2011).
+    tuple of four uint64
+        Words of 32 bits [-]; ten rounds of Philox-4x32 (Salmon et al., SC11, 2011).
     """
-    low = counter_low
-    high = counter_high
     for _ in range(_ROUNDS):
-        product = low * _MULTIPLIER
-        low = (product >> _SHIFT_32) ^ key ^ high
-        high = product & _LOW_32
-        key = (key + _WEYL) & _LOW_32
-    return low, high
+        even = counter_0 * _MULTIPLIER_0
+        odd = counter_2 * _MULTIPLIER_1
+        counter_0 = (odd >> _SHIFT_32) ^ counter_1 ^ key_0
+        counter_1 = odd & _LOW_32
+        counter_2 = (even >> _SHIFT_32) ^ counter_3 ^ key_1
+        counter_3 = even & _LOW_32
+        key_0 = (key_0 + _WEYL_0) & _LOW_32
+        key_1 = (key_1 + _WEYL_1) & _LOW_32
+    return counter_0, counter_1, counter_2, counter_3
 
 
 @kernel
@@ -126,23 +136,62 @@ def normal_quantile(probability: float) -> float:
 
 
 @kernel
-def standard_normal(seed: int, stream: int, tick: int) -> float:
-    """Return a standard normal number that depends on its three arguments only.
+def _normal_of_word(word: np.uint64) -> float:
+    """Return the normal number of a word of 32 bits; at most 6.3 away from zero."""
+    return normal_quantile((float(word) + 0.5) * 2.3283064365386963e-10)  # 2**-32
+
+
+@kernel
+def normal_block(seed: int, stream: int, block: int) -> tuple[float, float, float, float]:
+    """Return four standard normal numbers that depend on the three arguments only.
 
     Parameters
     ----------
     seed : int
-        Seed of the run, 0 to 2**32 - 1 [-].
+        Seed of the run, 0 to 2**63 - 1 [-].
+    stream : int
+        Stream of the instrument, 0 to 2**32 - 1, see ``stream_of`` [-].
+    block : int
+        Number of the block, 0 to 2**63 - 1 [-].
+
+    Returns
+    -------
+    tuple of four float
+        Numbers for the ticks ``4 block`` to ``4 block + 3`` [-].
+    """
+    counter, key = np.uint64(block), np.uint64(seed)
+    words = philox_4x32(
+        counter & _LOW_32,
+        counter >> _SHIFT_32,
+        np.uint64(stream),
+        np.uint64(0),
+        key & _LOW_32,
+        key >> _SHIFT_32,
+    )
+    return (
+        _normal_of_word(words[0]),
+        _normal_of_word(words[1]),
+        _normal_of_word(words[2]),
+        _normal_of_word(words[3]),
+    )
+
+
+@kernel
+def standard_normal(seed: int, stream: int, tick: int) -> float:
+    """Return the standard normal number of a tick.
+
+    Parameters
+    ----------
+    seed : int
+        Seed of the run, 0 to 2**63 - 1 [-].
     stream : int
         Stream of the instrument, see ``stream_of`` [-].
     tick : int
-        Tick, 0 to 2**32 - 1 [ticks].
+        Tick, from 0 [ticks].
 
     Returns
     -------
     float
         The number [-].
     """
-    high, low = philox_2x32(np.uint64(tick) & _LOW_32, np.uint64(stream), np.uint64(seed))
-    bits = ((high << _SHIFT_32) | low) >> _SHIFT_11  # 53 bits
-    return normal_quantile((float(bits) + 0.5) * 1.1102230246251565e-16)  # 2**-53
+    return normal_block(seed, stream, tick // BLOCK_TICKS)[tick % BLOCK_TICKS]

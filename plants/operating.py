@@ -8,7 +8,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from plants import layout as at
-from plants.stepper import rates, valve_flow
+from plants.network import rates, valve_flow
 
 Floats = NDArray[np.float64]
 Integers = NDArray[np.int64]
@@ -42,12 +42,11 @@ def flows_into(
     """
     n_vessels = int(table[at.N_VESSELS])
     n = n_vessels + at.N_TOTALS
-    work = np.zeros(2 * n + n_vessels + len(valve_flows))
+    work = np.zeros(int(table[at.WORK]))
     work[:n_vessels] = volumes
-    dry = 2 * n
-    flows = dry + n_vessels
-    work[flows:] = valve_flows
-    rates(table, parameters, work, 0, flows, n, dry)
+    flows = int(table[at.AT_PARABOLAS])
+    work[flows : flows + len(valve_flows)] = valve_flows
+    rates(table, parameters, work, 0, flows, n)
     return work[n : 2 * n]
 
 

@@ -4,6 +4,8 @@ from __future__ import annotations
 
 import math
 
+import numpy as np
+
 from plants.compile import kernel
 
 # NAMUR NE 43: measurement 3.8 to 20.5 mA; failure at most 3.6 or at least 21.0 mA.
@@ -55,7 +57,7 @@ def damping_weights(interval: float, damping: float) -> tuple[float, float, floa
 
 
 @kernel
-def quantised(fraction: float, resolution: float) -> float:
+def quantised(fraction: float, resolution: float, inverse: float) -> float:
     """Return a value rounded to the resolution of the instrument.
 
     Parameters
@@ -64,6 +66,8 @@ def quantised(fraction: float, resolution: float) -> float:
         Value [fraction of span].
     resolution : float
         Step; 0 for none [fraction of span].
+    inverse : float
+        Reciprocal of the step [1/fraction of span].
 
     Returns
     -------
@@ -72,7 +76,8 @@ def quantised(fraction: float, resolution: float) -> float:
     """
     if resolution <= 0.0:
         return fraction
-    return math.floor(fraction / resolution + 0.5) * resolution
+    steps: float = np.floor(fraction * inverse + 0.5)
+    return steps * resolution
 
 
 @kernel

@@ -22,7 +22,7 @@ from plants.valve import EQUAL_PERCENTAGE, LINEAR
 if TYPE_CHECKING:
     from numpy.typing import NDArray
 
-    from harness.domain.rig import ControlValve, Loop, Orifice, Rig, Transmitter
+    from harness.domain.rig import ControlValve, Loop, Orifice, Rig, Transmitter, Vessel
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -96,7 +96,8 @@ def assemble(rig: Rig) -> Arrays:
         overflows=len(rig.overflows),
         transmitters=len(rig.transmitters),
     )
-    header = counts.state_offsets() | counts.parameter_offsets() | counts.table_offsets()
+    header = counts.state_offsets() | counts.parameter_offsets()
+    header |= counts.table_offsets() | counts.work_offsets()
     header |= {
         at.N_VESSELS: counts.vessels,
         at.N_VALVES: counts.valves,
@@ -118,22 +119,23 @@ def assemble(rig: Rig) -> Arrays:
         place.N_COLUMNS: len(columns_of(rig)),
         place.LOOP_STATE_STRIDE: stride,
     }
-    orifices = upstream_first(rig)
+    vessels = upstream_first(rig)
+    orifices = _outlets_of(rig, vessels)
     table = np.zeros(header[at.PLANT_TABLE] + len(rig.loops) * place.LOOP_LINKS, dtype=np.int64)
     for entry, value in header.items():
         table[entry] = value
-    table[at.HEADER :] = _links(rig, orifices)
+    table[at.HEADER :] = _vessel_links(rig, vessels) + _links(rig, orifices)
     parameters = np.array(_parameters(rig, orifices), dtype=np.float64)
     return Arrays(
         table=table,
         parameters=parameters,
         state_size=header[at.PLANT_STATE] + len(rig.loops) * stride,
-        work_size=counts.work_size(),
+        work_size=header[at.WORK],
     )
 
 
-def upstream_first(rig: Rig) -> tuple[Orifice, ...]:
-    """Return the outlets so that what feeds a vessel stands before what leaves it.
+def upstream_first(rig: Rig) -> tuple[Vessel, ...]:
+    """Return the vessels so that what feeds a vessel by an outlet stands before it.
 
     Parameters
     ----------
@@ -142,28 +144,51 @@ def upstream_first(rig: Rig) -> tuple[Orifice, ...]:
 
     Returns
     -------
-    tuple of Orifice
-        The same outlets, sorted.
+    tuple of Vessel
+        The same vessels, sorted.
 
     Raises
     ------
     ModelError
         When outlets form a ring.
     """
-    left = list(rig.orifices)
-    ordered: list[Orifice] = []
+    left = list(rig.vessels)
+    ordered: list[Vessel] = []
     while left:
-        fed = {path.destination for path in left}
-        ready = [path for path in left if path.origin not in fed]
+        tags = {vessel.tag for vessel in left}
+        inside = [path for path in rig.orifices if path.origin in tags]
+        fed = {path.destination for path in inside}
+        ready = [vessel for vessel in left if vessel.tag not in fed]
         if not ready:
-            tags = ", ".join(path.tag for path in left)
+            outlets = ", ".join(path.tag for path in inside if path.destination in tags)
             raise ModelError(
-                f"rig {rig.name}: outlets {tags} form a ring; gravity outlets must lead downwards: "
-                "remove one of them"
+                f"rig {rig.name}: outlets {outlets} form a ring; gravity outlets must lead "
+                "downwards: remove one of them"
             )
         ordered += ready
-        left = [path for path in left if path not in ready]
+        left = [vessel for vessel in left if vessel not in ready]
     return tuple(ordered)
+
+
+def _outlets_of(rig: Rig, vessels: tuple[Vessel, ...]) -> tuple[Orifice, ...]:
+    return tuple(
+        path for vessel in vessels for path in rig.orifices if path.origin == vessel.tag
+    )
+
+
+def _outlet_coefficient(rig: Rig, path: Orifice) -> float:
+    return orifice_coefficient(path.discharge_coefficient, path.area, rig.gravity)
+
+
+def _vessel_links(rig: Rig, vessels: tuple[Vessel, ...]) -> list[int]:
+    numbers = {vessel.tag: i for i, vessel in enumerate(rig.vessels)}
+    links: list[int] = []
+    first = 0
+    for vessel in vessels:
+        outlets = sum(path.origin == vessel.tag for path in rig.orifices)
+        links += [numbers[vessel.tag], first, outlets]
+        first += outlets
+    return links
 
 
 def _links(rig: Rig, orifices: tuple[Orifice, ...]) -> list[int]:
@@ -202,11 +227,12 @@ def _links(rig: Rig, orifices: tuple[Orifice, ...]) -> list[int]:
 def _parameters(rig: Rig, orifices: tuple[Orifice, ...]) -> list[float]:
     values = [rig.tick, rig.gravity, 0.0, 0.0]
     for vessel in rig.vessels:
-        values += [vessel.shape.area, 1.0 / vessel.shape.area]
+        values += _vessel_parameters(rig, vessel)
     for valve in rig.valves:
         values += _valve_parameters(rig, valve)
     for path in orifices:
-        values.append(orifice_coefficient(path.discharge_coefficient, path.area, rig.gravity))
+        coefficient = _outlet_coefficient(rig, path)
+        values += [coefficient, coefficient / _outlets_coefficient(rig, path.origin)]
     for weir in rig.overflows:
         coefficient = weir_coefficient(weir.discharge_coefficient, weir.width, rig.gravity)
         values += [coefficient, weir.crest, weir.fraction]
@@ -218,6 +244,23 @@ def _parameters(rig: Rig, orifices: tuple[Orifice, ...]) -> list[float]:
         shown = shown_range(transmitter)
         values += [shown.lower, shown.span, shown.span / transmitter.range.span]
     return values
+
+
+def _outlets_coefficient(rig: Rig, vessel: str) -> float:
+    return sum(
+        (_outlet_coefficient(rig, path) for path in rig.orifices if path.origin == vessel), 0.0
+    )
+
+
+def _vessel_parameters(rig: Rig, vessel: Vessel) -> list[float]:
+    area = vessel.shape.area
+    crests = [weir.crest for weir in rig.overflows if weir.origin == vessel.tag]
+    return [
+        area,
+        1.0 / area,
+        _outlets_coefficient(rig, vessel.tag),
+        min(crests, default=math.inf) * area,
+    ]
 
 
 def _valve_parameters(rig: Rig, valve: ControlValve) -> list[float]:
@@ -240,9 +283,7 @@ def _transmitter_parameters(rig: Rig, transmitter: Transmitter) -> list[float]:
     for path in rig.orifices:
         if path.tag == transmitter.subject:
             vessel = path.origin
-            coefficient = orifice_coefficient(
-                path.discharge_coefficient, path.area, rig.gravity
-            )
+            coefficient = _outlet_coefficient(rig, path)
     inverse_areas = {vessel.tag: 1.0 / vessel.shape.area for vessel in rig.vessels}
     return [
         1.0 / calibrated.span,
@@ -253,6 +294,7 @@ def _transmitter_parameters(rig: Rig, transmitter: Transmitter) -> list[float]:
         *damping_weights(rig.tick, transmitter.damping),
         inverse_areas.get(vessel, 0.0),
         coefficient,
+        1.0 / transmitter.resolution if transmitter.resolution > 0.0 else 0.0,
     ]
 
 

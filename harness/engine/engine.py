@@ -13,8 +13,9 @@ from harness.engine.assemble import assemble, columns_of
 from harness.engine.kernel import advance, write_row
 from harness.errors import ModelError
 from plants import layout as at
+from plants.instruments import sample
+from plants.network import valve_flow
 from plants.operating import steady_volumes
-from plants.stepper import sample, valve_flow
 from plants.transmitter import BAD, fraction_of_current
 from plants.vessel import cylinder_level, cylinder_volume
 
@@ -423,11 +424,11 @@ class Engine:
 
     def _start_instruments(self) -> None:
         """Let the damping of every transmitter stand at its true value, and take sample 0."""
-        sample(self.table, self.parameters, self.state, 0)
+        sample(self.table, self.parameters, self.state, self._work, 0)
         n = len(self.rig.transmitters)
         true, damped = int(self.table[at.AT_TRUE]), int(self.table[at.AT_DAMPED])
         self.state[damped : damped + n] = self.state[true : true + n]
-        sample(self.table, self.parameters, self.state, 0)
+        sample(self.table, self.parameters, self.state, self._work, 0)
 
     def _start_loop(self, tag: str) -> None:
         loop = self.rig.loop(tag)

@@ -9,7 +9,8 @@ from harness.controllers.block import block_scan
 from harness.engine import places as place
 from plants import layout as at
 from plants.compile import kernel
-from plants.stepper import plant_tick, sample
+from plants.instruments import sample
+from plants.stepper import plant_tick
 from plants.transmitter import BAD, fraction_of_current
 
 Floats = NDArray[np.float64]
@@ -147,4 +148,4 @@ def advance(
             write_row(table, parameters, state, rows[i], stride)
         plant_tick(table, parameters, state, work)
         counters[place.TICK] = tick + 1
-        sample(table, parameters, state, tick + 1)
+        sample(table, parameters, state, work, tick + 1)
