@@ -112,7 +112,16 @@ def _loop(run: RunScore, tag: str) -> dict[str, object]:
         for path in ("output", "load")
         if isinstance(model := models.get(path), dict)
     }
-    document: dict[str, object] = {"models": paths, "tuning": _tuning(run, loop)}
+    shown = shown_range(data.rig.transmitter(loop.process_variable))
+    document: dict[str, object] = {
+        "process_variable": loop.process_variable,
+        "output": loop.output,
+        "load": loop.load,
+        "range": {"low": shown.lower, "high": shown.upper, "unit": shown.unit},
+        "scan": loop.scan,
+        "models": paths,
+        "tuning": _tuning(run, loop),
+    }
     if tag in run.loops:
         score = run.loops[tag]
         document["controller"] = {

@@ -340,8 +340,8 @@ def _findings(
     for name, metric in judged.items():
         if metric.verdict is Outcome.NOT_DECIDABLE:
             findings.append(
-                f"{_words(name).capitalize()} is not decidable: a lobe of the prediction ends so "
-                "near the edge of the band that noise decides whether it counts."
+                f"{_words(name).capitalize()} cannot be decided: the predicted response turns "
+                "back so close to the edge of the band that noise decides which crossing is last."
             )
     gap = _prediction_gap(judged)
     if gap:
@@ -355,14 +355,16 @@ def _law_findings(score: LoopScore, span: PhaseSpan) -> list[str]:
     if law is None:
         return [
             "The controller's output does not follow a P or PI law of the process variable it was "
-            "given: look at the wiring of the input, its range, and what else moves the output."
+            "given: look at the tag or register it reads, at the range it takes that to have, at "
+            "its mode, and at what else writes the output."
         ]
     findings = []
     ratio = law.gain / ordered.gain
     if ratio < 0.0:
         findings.append(
-            "The controller acts the wrong way: its output moves against what "
-            f"{score.loop.action.value} action asks for."
+            f"The controller acts the wrong way: {score.loop.action.value} action was ordered, and "
+            "its output moves as with the other. Look at its action setting and at the sign of its "
+            "error."
         )
     elif abs(ratio - 1.0) > _LAW_TOLERANCE:
         findings.append(
@@ -370,7 +372,26 @@ def _law_findings(score: LoopScore, span: PhaseSpan) -> list[str]:
             f"{ordered.gain:.3g} %/% ordered: look at the unit of its gain and at its ranges."
         )
     findings += _integral_findings(law, ordered)
-    return findings
+    return findings or [_elsewhere(score, law)]
+
+
+def _elsewhere(score: LoopScore, law: ReadLaw) -> str:
+    """Return where to look when the law is the ordered one and the response still is not."""
+    tick = score.data.rig.tick
+    seen = f"gain {law.gain:.3g} %/%"
+    if law.integral_time is not None and score.settings.law is ControlLaw.PI:
+        seen += f", Ti {law.integral_time:.3g} s"
+    timing = ""
+    if math.isfinite(score.log.period) and math.isfinite(score.log.delay):
+        timing = (
+            f" (period {score.log.period * tick:.3g} s, delay {score.log.delay * tick:.3g} s as "
+            "measured)"
+        )
+    return (
+        f"The controller follows the law and the settings ordered ({seen}), so the cause lies "
+        f"elsewhere: look at its scan and delay{timing}, at limits and rate limits of its output, "
+        "at a bias or filter of its own, and at what else moved the plant."
+    )
 
 
 def _integral_findings(law: ReadLaw, ordered: ControllerSettings) -> list[str]:

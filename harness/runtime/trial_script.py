@@ -243,8 +243,11 @@ class _TrialRunner:
             document["linearised"] = model_document(getattr(work.linearised, path))
             data[path] = document
         output = work.models.output
-        lags = " and ".join(f"{lag:.4g}" for lag in output.time_constants)
-        text = f"{source}: gain {output.gain:.4g}, lags {lags} s, dead time {output.dead_time:.3g} s"
+        lags = " + ".join(f"{lag:.3g}" for lag in output.time_constants)
+        text = (
+            f"{source}: gain {output.gain:.4g} %/%, total lag {output.total_lag:.4g} s "
+            f"(lags {lags} s, dead time {output.dead_time:.2g} s)"
+        )
         self._session.event(EventKind.MODELS, work.loop.tag, text, data)
 
     # Phases.
@@ -257,7 +260,7 @@ class _TrialRunner:
         session.event(
             EventKind.PHASE_STARTED,
             phase.name,
-            f"{phase.kind.value.replace('_', ' ')} of {100 * phase.change:+.3g} % in {phase.mode.value}",
+            _phase_words(phase),
             {
                 "index": index,
                 "loop": phase.loop,
@@ -272,7 +275,7 @@ class _TrialRunner:
         session.event(
             EventKind.ORDER_KNOWN,
             phase.name,
-            f"in the controller {session.tick - order} ticks after the order",
+            _known_words(phase, (session.tick - order) * session.rig.tick),
             {"order": order},
         )
         rows += yield from self._until_steady(phase, work, plan)
@@ -331,7 +334,13 @@ class _TrialRunner:
             rows.append(block)
             taken += len(block)
             detector.feed((block[:, true] - shown.lower) / shown.span)
-        session.event(EventKind.PHASE_ENDED, phase.name, detector.reason, {"steady": True})
+        text = f"steady after {taken * tick:.5g} s"
+        if phase.kind is not PhaseKind.SETTLE and detector.remaining is not None:
+            text += (
+                f": at most {100 * detector.remaining:.2g} % of the step is still to come "
+                f"({100 * rule.confidence:g} % confidence)"
+            )
+        session.event(EventKind.PHASE_ENDED, phase.name, text, {"steady": True})
         return rows
 
     @staticmethod
@@ -348,6 +357,24 @@ class _TrialRunner:
             if not record:
                 record.extend(lead_in)
             record.extend(rows)
+
+
+def _phase_words(phase: Phase) -> str:
+    """Return what a phase does, in words."""
+    if phase.kind is PhaseKind.SETTLE:
+        return f"wait for a steady state, in {phase.mode.value}"
+    return f"{phase.kind.value.replace('_', ' ')} of {100 * phase.change:+.3g} %, in {phase.mode.value}"
+
+
+def _known_words(phase: Phase, after: float) -> str:
+    """Return since when a phase's step acts; ``after`` is the time since its order [s]."""
+    match phase.kind:
+        case PhaseKind.SETTLE:
+            return "nothing was ordered"
+        case PhaseKind.LOAD_STEP:
+            return "the load acts from here on"
+        case _:
+            return f"the controller has it {after:.3g} s after the order"
 
 
 def model_document(model: LagModel) -> dict[str, object]:
