@@ -56,9 +56,19 @@ class ExchangeSink(Protocol):
         ...
 
     def activity(
-        self, link: str, connection: int, peer: str, image_tick: int, arrival_ns: int
+        self,
+        link: str,
+        connection: int,
+        peer: str,
+        image_tick: int,
+        arrival_ns: int,
+        points: tuple[str, ...] = (),
     ) -> None:
-        """Take note that a valid request (read or write) came on a connection."""
+        """Take note that a valid request (read or write) came on a connection.
+
+        ``points`` names what the peer got to read by it. The same names as in an earlier call
+        should be the same tuple, for this is called tens of thousands of times a second.
+        """
         ...
 
     def connection(self, link: str, connection: int, peer: str, connected: bool) -> None:

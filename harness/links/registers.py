@@ -32,6 +32,7 @@ CATCH_UP_TICKS = (
     2  # a write is latched in the next tick, and seen in the image of the one after
 )
 _WORD = 2  # bytes in a register
+_AREAS_MAX = 1_000  # areas whose points are kept; only a scanner reads more [-]
 _NEVER = -2  # tick of a bank that holds no image yet; an image before the first has -1
 
 Pending = dict[int, dict[int, bytes]]  # by item: halves of a split value, by 0 or 1
@@ -113,9 +114,11 @@ class RegisterBank:
         self._bits = _Cells(items, bits=True)
         self._overlays: dict[int, _Overlay] = {}
         self.tick = _NEVER
-        # Replies to reads of the present content, by request: clients that poll flat out ask
-        # the same again and again between two ticks. Emptied whenever the content changes.
-        self.replies: dict[bytes, bytes] = {}
+        # Replies to reads of the present content and the points in them, by request: clients
+        # that poll flat out ask the same again and again between two ticks. Emptied whenever
+        # the content changes.
+        self.replies: dict[bytes, tuple[bytes, tuple[str, ...]]] = {}
+        self._points_at: dict[tuple[int, int, bool], tuple[str, ...]] = {}
 
     def load(self, snapshot: Snapshot) -> None:
         """Take an image; the same tick again costs nothing.
@@ -182,6 +185,31 @@ class RegisterBank:
             raise AddressRefusedError(cells.absent(address, count))
         digits = cells.content[address : address + count]
         return int(digits[::-1], 2).to_bytes((count + 7) // 8, "little")
+
+    def points_at(self, address: int, count: int, *, bits: bool = False) -> tuple[str, ...]:
+        """Return the points that stand at addresses of the map, each once.
+
+        Parameters
+        ----------
+        address, count : int
+            First register or bit, counted from 0, and number of them; all in the map [-].
+        bits : bool
+            Whether bits are meant.
+
+        Returns
+        -------
+        tuple of str
+            Their names by address; the same tuple for the same addresses.
+        """
+        area = (address, count, bits)
+        names = self._points_at.get(area)
+        if names is None:
+            cells = self._bits if bits else self._registers
+            items = cells.touched(address, count)
+            names = tuple(dict.fromkeys(self._items[index].point for index in items))
+            if len(self._points_at) < _AREAS_MAX:
+                self._points_at[area] = names
+        return names
 
     def check_writable_registers(self, address: int, count: int) -> None:
         """Raise AddressRefusedError unless a peer may write all of these registers."""

@@ -252,6 +252,7 @@ class LinkProcess:
             writes=[request for part in parts for request in part.writes],
             activity=[each for part in parts for each in part.activity],
             events=[event for part in parts for event in part.events],
+            readers={name: who for part in parts for name, who in part.readers.items()},
         )
 
     def _cause(self) -> str:

@@ -2,21 +2,22 @@
 
 Nothing that a peer does may fill the pipe between the two, or hold up the links. Reads are
 condensed to one line a connection, repeated refusals to one with a count; only writes are all
-kept, for each of them must reach a tick. A thread of its own empties the box, so that a tick's
-process that is busy elsewhere holds up that thread alone.
+kept, for each of them must reach a tick. Who read which point last is for people to look at: it
+is told a few times a second, not with every message. A thread of its own empties the box, so
+that a tick's process that is busy elsewhere holds up that thread alone.
 """
 
 from __future__ import annotations
 
 import threading
 from collections import deque
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from enum import StrEnum
 from itertools import islice
 from typing import TYPE_CHECKING
 
 if TYPE_CHECKING:
-    from collections.abc import Callable, Sequence
+    from collections.abc import Callable, Mapping, Sequence
 
     from harness.domain.signals import Exchange
 
@@ -24,6 +25,10 @@ if TYPE_CHECKING:
 _MOST_EXCHANGES = 300  # written values in a message, unless one request has more [-]
 _MOST_EVENTS = 100  # events in a message [-]
 _LONGEST_TEXT = 300  # of a refusal [characters]
+_READERS_NS = 200_000_000  # between two tellings of who read which point [ns]
+_MOST_AREAS = (
+    1_000  # different sets of points read between two tellings; only a scanner has more
+)
 _MOST_WAITING = 1_000  # different events kept while nobody takes them; then only counted [-]
 
 
@@ -95,6 +100,25 @@ class LinkActivity:
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
+class Contact:
+    """Who dealt with a point, and when.
+
+    Parameters
+    ----------
+    link : str
+        Name of the link.
+    peer : str
+        ``host:port`` of the other end, or the session's name.
+    arrival_ns : int
+        ``perf_counter_ns`` of the request [ns].
+    """
+
+    link: str
+    peer: str
+    arrival_ns: int
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
 class LinkNews:
     """All that happened on the links since it was last asked.
 
@@ -106,15 +130,18 @@ class LinkNews:
         Condensed requests.
     events : sequence of LinkEvent
         Connections and refusals.
+    readers : mapping of str to Contact
+        Who read a point last, by its name; only points that were read since the last telling.
     """
 
     writes: Sequence[Sequence[Exchange]] = ()
     activity: Sequence[LinkActivity] = ()
     events: Sequence[LinkEvent] = ()
+    readers: Mapping[str, Contact] = field(default_factory=dict)
 
     def __bool__(self) -> bool:
         """Return whether there is anything in it."""
-        return bool(self.writes or self.activity or self.events)
+        return bool(self.writes or self.activity or self.events or self.readers)
 
 
 NO_NEWS = LinkNews()
@@ -152,6 +179,8 @@ class NewsBox:
         self._writes: deque[Sequence[Exchange]] = deque()
         self._activity: dict[tuple[str, int], _Requests] = {}
         self._events: dict[_EventKey, _Happening] = {}
+        self._areas: dict[tuple[str, ...], tuple[str, str, int]] = {}
+        self._readers_told_ns = now_ns() - _READERS_NS
         self._closed = False
 
     def writes(self, exchanges: Sequence[Exchange]) -> None:
@@ -161,10 +190,18 @@ class NewsBox:
             self._changed.notify()
 
     def activity(
-        self, link: str, connection: int, peer: str, image_tick: int, arrival_ns: int
+        self,
+        link: str,
+        connection: int,
+        peer: str,
+        image_tick: int,
+        arrival_ns: int,
+        points: tuple[str, ...] = (),
     ) -> None:
-        """Take note of a valid request."""
+        """Take note of a valid request, and of the points that it read."""
         with self._changed:
+            if points and (points in self._areas or len(self._areas) < _MOST_AREAS):
+                self._areas[points] = (link, peer, arrival_ns)
             requests = self._activity.get((link, connection))
             if requests is not None:
                 requests.count += 1
@@ -192,7 +229,8 @@ class NewsBox:
     def wait(self, quiet: float) -> LinkNews | None:
         """Wait for news and take it; for the one thread that sends it on.
 
-        Writes and events are there at once, reads after a while in which more are condensed.
+        Writes and events are there at once, reads after a while in which more are condensed,
+        and who read which point at the latest when it is time to tell of it again.
 
         Parameters
         ----------
@@ -205,11 +243,35 @@ class NewsBox:
             News for one message; None when the box is closed and empty.
         """
         with self._changed:
-            self._changed.wait_for(lambda: self._urgent() or bool(self._activity))
-            if not self._urgent():
+            self._changed.wait_for(
+                lambda: self._urgent() or bool(self._activity), self._until_readers()
+            )
+            if self._activity and not self._urgent():
                 self._changed.wait_for(self._urgent, timeout=quiet)
             news = self._take()
             return news if news or not self._closed else None
+
+    def _until_readers(self) -> float | None:
+        """Return how long it is until readers are to be told of; None when there are none [s]."""
+        if not self._areas:
+            return None
+        return max(0, self._readers_told_ns + _READERS_NS - self._now_ns()) / 1e9
+
+    def _readers(self) -> dict[str, Contact]:
+        """Take who read which point last, if it is time to tell of it."""
+        now_ns = self._now_ns()
+        if not (self._closed or now_ns - self._readers_told_ns >= _READERS_NS):
+            return {}
+        self._readers_told_ns = now_ns
+        readers: dict[str, Contact] = {}
+        # In order of arrival, so that of several readers of a point the last one stays.
+        for points, (link, peer, arrival_ns) in sorted(
+            self._areas.items(), key=lambda area: area[1][2]
+        ):
+            contact = Contact(link=link, peer=peer, arrival_ns=arrival_ns)
+            readers |= dict.fromkeys(points, contact)
+        self._areas.clear()
+        return readers
 
     def _urgent(self) -> bool:
         return bool(self._writes or self._events) or self._closed
@@ -247,7 +309,9 @@ class NewsBox:
         self._activity.clear()
         keys = list(islice(self._events, _MOST_EVENTS))
         events = [self._made(key, self._events.pop(key)) for key in keys]
-        return LinkNews(writes=writes, activity=activity, events=events)
+        return LinkNews(
+            writes=writes, activity=activity, events=events, readers=self._readers()
+        )
 
     @staticmethod
     def _made(key: _EventKey, happening: _Happening) -> LinkEvent:

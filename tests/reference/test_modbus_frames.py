@@ -41,7 +41,7 @@ class Deaf:
     def writes(self, exchanges):
         """Take nothing."""
 
-    def activity(self, link, connection, peer, image_tick, arrival_ns):
+    def activity(self, link, connection, peer, image_tick, arrival_ns, points=()):
         """Take nothing."""
 
     def connection(self, link, connection, peer, connected):

@@ -80,7 +80,7 @@ class Tally:
     def writes(self, exchanges):
         self.requests.append([(one.function, one.point, one.value) for one in exchanges])
 
-    def activity(self, link, connection, peer, image_tick, arrival_ns):
+    def activity(self, link, connection, peer, image_tick, arrival_ns, points=()):
         self.active += 1
 
     def connection(self, link, connection, peer, connected):

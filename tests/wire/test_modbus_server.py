@@ -53,7 +53,7 @@ class Notes:
     def writes(self, exchanges):
         self.written.extend(exchanges)
 
-    def activity(self, link, connection, peer, image_tick, arrival_ns):
+    def activity(self, link, connection, peer, image_tick, arrival_ns, points=()):
         self.active += 1
 
     def connection(self, link, connection, peer, connected):

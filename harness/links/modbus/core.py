@@ -109,6 +109,7 @@ class ServerSession:
         self._rest = b""
         self._pending: Pending = {}
         self._arrival_ns = 0
+        self._read: tuple[str, ...] = ()  # points that the request in hand reads
         self._told: set[str] = set()
         self.image_tick = -1
         self._handlers: dict[int, Callable[[bytes], bytes]] = {
@@ -180,15 +181,22 @@ class ServerSession:
             bank = self._bank
             if self._image.tick() != bank.tick:
                 bank.load(self._image.read())
-            reply = bank.replies.get(pdu)
-            if reply is None:
+            kept = bank.replies.get(pdu)
+            if kept is None:
+                self._read = ()
                 reply = handler(pdu)
             else:
+                reply, self._read = kept
                 self.image_tick = bank.tick
         except (requests.RefusalError, PeerError, LinkError) as error:
             return self._refuse(function, _code_of(error), error)
         self._sink.activity(
-            self._link, self._connection, self._peer, self.image_tick, self._arrival_ns
+            self._link,
+            self._connection,
+            self._peer,
+            self.image_tick,
+            self._arrival_ns,
+            self._read,
         )
         return reply
 
@@ -202,11 +210,15 @@ class ServerSession:
 
     def _read_bits(self, pdu: bytes) -> bytes:
         address, count = requests.read_request(pdu, READ_BITS_MAX)
-        return self._show(pdu, self._bank.read_bits(address, count))
+        content = self._bank.read_bits(address, count)
+        self._read = self._bank.points_at(address, count, bits=True)
+        return self._show(pdu, content)
 
     def _read_registers(self, pdu: bytes) -> bytes:
         address, count = requests.read_request(pdu, READ_REGISTERS_MAX)
-        return self._show(pdu, self._bank.read_registers(address, count))
+        content = self._bank.read_registers(address, count)
+        self._read = self._bank.points_at(address, count)
+        return self._show(pdu, content)
 
     def _show(self, pdu: bytes, content: bytes) -> bytes:
         """Return the reply to a read, and keep it for as long as the content stands."""
@@ -214,7 +226,7 @@ class ServerSession:
         reply = bytes((pdu[0], len(content))) + content
         self.image_tick = bank.tick
         if len(bank.replies) < _REPLIES_MAX:
-            bank.replies[pdu] = reply
+            bank.replies[pdu] = reply, self._read
         return reply
 
     def _write_coil(self, pdu: bytes) -> bytes:
@@ -260,6 +272,7 @@ class ServerSession:
         self._bank.read_registers(address, count)  # both addresses are checked before the write
         self._tell(pdu[0], self._bank.write_registers(write_address, data, self._pending))
         content = self._bank.read_registers(address, count)
+        self._read = self._bank.points_at(address, count)
         self.image_tick = self._bank.tick
         return bytes((pdu[0], len(content))) + content
 

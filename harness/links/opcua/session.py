@@ -20,6 +20,7 @@ from asyncua.ua.status_codes import StatusCodes
 
 from harness.domain.signals import Exchange
 from harness.links.opcua.stack import GOOD, node_id, status, status_name
+from harness.links.opcua.subscribed import SubscribedPoints
 
 if TYPE_CHECKING:
     from collections.abc import Callable, Iterable, Iterator, Sequence
@@ -69,6 +70,8 @@ class Desk:
         Returns the time for arrival stamps [ns].
     connections : iterator of int
         Numbers for connections, each once [-].
+    subscribed : SubscribedPoints
+        What monitored items show.
     """
 
     link: str
@@ -76,6 +79,7 @@ class Desk:
     sink: ExchangeSink
     now_ns: Callable[[], int]
     connections: Iterator[int] = field(default_factory=lambda: itertools.count(1))
+    subscribed: SubscribedPoints = field(default_factory=SubscribedPoints)
 
 
 class RigSession(InternalSession):
@@ -97,6 +101,9 @@ class RigSession(InternalSession):
         self._desk = desk
         self._connection = next(desk.connections)
         self._image_tick = -1
+        # Points in notifications that went out since the client last asked for one. Only with
+        # its next request they count as read: that the server sent them shows nothing yet.
+        self._delivered: dict[str, None] = {}
 
     def activate_session(
         self, params: ua.ActivateSessionParameters, peer_certificate: bytes | None
@@ -117,6 +124,10 @@ class RigSession(InternalSession):
     async def close_session(self, delete_subs: bool = True) -> None:
         """Close the session and tell the sink once."""
         was_active = self.state is SessionState.Activated
+        if delete_subs:
+            self._desk.subscribed.closed(
+                one.data.SubscriptionId for one in self._own_subscriptions()
+            )
         await super().close_session(delete_subs)
         if was_active:
             self._desk.sink.connection(self._desk.link, self._connection, self.name, False)
@@ -125,12 +136,15 @@ class RigSession(InternalSession):
         """Answer a Read and remember which tick the client saw."""
         arrival_ns = self._desk.now_ns()
         results = await super().read(params)
-        if any(
-            item.AttributeId == AttributeIds.Value and self._desk.board.shows(item.NodeId)
+        board = self._desk.board
+        read = tuple(
+            board.plan(item.NodeId).name
             for item in params.NodesToRead
-        ):
-            self._image_tick = self._desk.board.tick
-            self._note_activity(arrival_ns)
+            if item.AttributeId == AttributeIds.Value and board.shows(item.NodeId)
+        )
+        if read:
+            self._image_tick = board.tick
+            self._note_activity(arrival_ns, read)
         return results
 
     async def write(self, params: ua.WriteParameters) -> list[ua.StatusCode]:
@@ -157,7 +171,9 @@ class RigSession(InternalSession):
     ) -> tuple[int, list[ua.StatusCode]]:
         """Take a client's request for the next notification, which shows that it is there."""
         answer = super().publish(acks)
-        self._note_activity(self._desk.now_ns())
+        delivered = tuple(self._delivered)
+        self._delivered.clear()
+        self._note_activity(self._desk.now_ns(), delivered)
         return answer
 
     async def create_subscription(
@@ -192,7 +208,10 @@ class RigSession(InternalSession):
         """
         plain = [item for item in params.ItemsToCreate if not _has_deadband(item)]
         wanted, params.ItemsToCreate = params.ItemsToCreate, plain
-        results = iter(await super().create_monitored_items(params))
+        made = await super().create_monitored_items(params)
+        for item, result in zip(plain, made, strict=True):
+            self._note_item(params.SubscriptionId, item, result)
+        results = iter(made)
         return [
             ua.MonitoredItemCreateResult(StatusCode=_filter_refused())
             if _has_deadband(item)
@@ -206,7 +225,14 @@ class RigSession(InternalSession):
         """Modify items; refuse a deadband as at creation."""
         plain = [item for item in params.ItemsToModify if not _has_deadband(item)]
         wanted, params.ItemsToModify = params.ItemsToModify, plain
-        results = iter(await super().modify_monitored_items(params))
+        changed = await super().modify_monitored_items(params)
+        for item, result in zip(plain, changed, strict=True):
+            if result.StatusCode.is_good():
+                handle = item.RequestedParameters.ClientHandle
+                self._desk.subscribed.modified(
+                    params.SubscriptionId, item.MonitoredItemId, handle
+                )
+        results = iter(changed)
         return [
             ua.MonitoredItemModifyResult(StatusCode=_filter_refused())
             if _has_deadband(item)
@@ -214,16 +240,58 @@ class RigSession(InternalSession):
             for item in wanted
         ]
 
+    async def delete_monitored_items(
+        self, params: ua.DeleteMonitoredItemsParameters
+    ) -> list[ua.StatusCode]:
+        """Delete items."""
+        codes = await super().delete_monitored_items(params)
+        self._desk.subscribed.deleted(params.SubscriptionId, params.MonitoredItemIds)
+        return codes
+
+    async def delete_subscriptions(self, ids: list[int]) -> list[ua.StatusCode]:
+        """Delete subscriptions."""
+        codes = await super().delete_subscriptions(ids)
+        self._desk.subscribed.closed(ids)
+        return codes
+
+    def _note_item(
+        self,
+        subscription: int,
+        item: ua.MonitoredItemCreateRequest,
+        result: ua.MonitoredItemCreateResult,
+    ) -> None:
+        """Remember which point an item shows; others than values of points show none."""
+        node = item.ItemToMonitor
+        board = self._desk.board
+        if (
+            result.StatusCode.is_good()
+            and node.AttributeId == AttributeIds.Value
+            and board.shows(node.NodeId)
+        ):
+            self._desk.subscribed.created(
+                subscription,
+                result.MonitoredItemId,
+                item.RequestedParameters.ClientHandle,
+                board.plan(node.NodeId).name,
+            )
+
     def _own_subscriptions(self) -> Sequence[Any]:
         everyone = self.subscription_service.subscriptions.values()
         return [one for one in everyone if one.session_id == self.session_id]
 
     def _noting(self, deliver: Callable[..., Any]) -> Callable[..., Any]:
-        """Return the same delivery, which also notes the tick that the client gets to see."""
+        """Return the same delivery, which also notes what the client gets to see, and its tick."""
 
         async def deliver_and_note(result: ua.PublishResult, *rest: Any) -> None:
-            if result.NotificationMessage.NotificationData:
+            data = result.NotificationMessage.NotificationData or ()
+            if data:
                 self._image_tick = self._desk.board.tick
+            for part in data:
+                # Events and changes of status, which this server does not send, have no items.
+                items = getattr(part, "MonitoredItems", None) or ()
+                handles = (item.ClientHandle for item in items)
+                names = self._desk.subscribed.names(result.SubscriptionId, handles)
+                self._delivered.update(dict.fromkeys(names))
             await deliver(result, *rest)
 
         return deliver_and_note
@@ -243,9 +311,9 @@ class RigSession(InternalSession):
             image_tick=self._image_tick,
         )
 
-    def _note_activity(self, arrival_ns: int) -> None:
+    def _note_activity(self, arrival_ns: int, read: tuple[str, ...] = ()) -> None:
         self._desk.sink.activity(
-            self._desk.link, self._connection, self.name, self._image_tick, arrival_ns
+            self._desk.link, self._connection, self.name, self._image_tick, arrival_ns, read
         )
 
     def _refuse(self, text: str) -> None:

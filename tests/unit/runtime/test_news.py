@@ -5,7 +5,7 @@ from __future__ import annotations
 import threading
 
 from harness.domain.signals import Exchange
-from harness.runtime.news import LinkEventKind, LinkNews, NewsBox
+from harness.runtime.news import Contact, LinkEventKind, LinkNews, NewsBox
 
 NOW_NS = 1_000
 
@@ -50,6 +50,48 @@ def test_reads_of_a_connection_become_one_line_with_the_last_stamps() -> None:
     assert (second.connection, second.requests, second.arrival_ns) == (2, 1_000, 1_004)
     assert not news.writes
     assert not news.events
+
+
+def test_of_several_readers_of_a_point_the_last_one_is_told_of() -> None:
+    news_box = box()
+    both, level = ("LT-102", "FT-101"), ("LT-102",)
+    news_box.activity("modbus", 1, "a:1", 7, 40, both)
+    news_box.activity("modbus", 2, "b:1", 7, 60, level)
+    news_box.activity("opcua", 1, "c:1", 7, 50, both)
+    news_box.activity("modbus", 2, "b:1", 7, 70)  # a write reads nothing
+    (news,) = take_all(news_box)
+    assert news.readers == {
+        "LT-102": Contact(link="modbus", peer="b:1", arrival_ns=60),
+        "FT-101": Contact(link="opcua", peer="c:1", arrival_ns=50),
+    }
+
+
+def test_readers_are_told_of_a_few_times_a_second_and_none_is_lost() -> None:
+    now = [0]
+    news_box = NewsBox(lambda: now[0])
+    news_box.activity("modbus", 1, "a:1", 7, 1, ("LT-102",))
+    first = news_box.wait(0.0)
+    assert first is not None
+    assert list(first.readers) == ["LT-102"]
+    now[0] = 50_000_000
+    news_box.activity("modbus", 1, "a:1", 8, 2, ("FT-101",))
+    early = news_box.wait(0.0)
+    assert early is not None
+    assert [each.image_tick for each in early.activity] == [8]
+    assert not early.readers
+    now[0] = 200_000_000
+    due = news_box.wait(3_600.0)  # nothing else happens: it is told of on its own
+    assert due is not None
+    assert list(due.readers) == ["FT-101"]
+    assert not due.activity
+
+
+def test_a_scanner_of_areas_does_not_fill_the_box() -> None:
+    news_box = box()
+    for k in range(5_000):
+        news_box.activity("modbus", 1, "a:1", 7, k, (f"point {k}",))
+    (news,) = take_all(news_box)
+    assert len(news.readers) == 1_000
 
 
 def test_the_activity_that_came_with_a_write_is_in_its_message() -> None:

@@ -75,14 +75,16 @@ class FakeSink:
 
     exchanges: list = field(default_factory=list)
     activities: list = field(default_factory=list)
+    reads: list = field(default_factory=list)
     connections: list = field(default_factory=list)
     refusals: list = field(default_factory=list)
 
     def writes(self, exchanges):
         self.exchanges.append(list(exchanges))
 
-    def activity(self, link, connection, peer, image_tick, arrival_ns):
+    def activity(self, link, connection, peer, image_tick, arrival_ns, points=()):
         self.activities.append((link, connection, peer, image_tick, arrival_ns))
+        self.reads.append(points)
 
     def connection(self, link, connection, peer, connected):
         self.connections.append((link, connection, peer, connected))
@@ -91,7 +93,13 @@ class FakeSink:
         self.refusals.append((link, connection, peer, text))
 
     def clear(self):
-        for told in (self.exchanges, self.activities, self.connections, self.refusals):
+        for told in (
+            self.exchanges,
+            self.activities,
+            self.reads,
+            self.connections,
+            self.refusals,
+        ):
             told.clear()
 
 

@@ -189,6 +189,47 @@ async def test_a_subscription_hears_every_change_and_bad_quality(bench, client):
     await subscription.delete()
 
 
+async def seen_by(bench, name):
+    """Wait until a client is known to have got a point to see."""
+    async with asyncio.timeout(5):
+        while not any(name in points for points in bench.sink.reads):  # noqa: ASYNC110  the sink is not ours to signal from
+            await asyncio.sleep(0.01)
+
+
+async def test_a_notification_counts_as_read_with_the_next_request(bench, client):
+    notes = Notes()
+    subscription = await client.create_subscription(20, notes)
+    names = ("LT-102", "FV-101")
+    await subscription.subscribe_data_change(
+        [client.get_node(ua.NodeId(name, 2)) for name in names]
+    )
+    await seen_by(bench, "LT-102")
+    await seen_by(bench, "FV-101")
+    bench.sink.clear()
+    bench.image.advance(values={"LT-102": 0.25})
+    await bench.server.publish()
+    await seen_by(bench, "LT-102")
+    assert not any("FV-101" in points for points in bench.sink.reads)  # it did not change
+    await subscription.delete()
+
+
+async def test_an_item_that_is_gone_is_read_no_more(bench, client):
+    notes = Notes()
+    subscription = await client.create_subscription(20, notes)
+    level, valve = await subscription.subscribe_data_change(
+        [client.get_node(ua.NodeId(name, 2)) for name in ("LT-102", "FV-101")]
+    )
+    await seen_by(bench, "LT-102")
+    await subscription.unsubscribe(level)
+    bench.sink.clear()
+    bench.image.advance(values={"LT-102": 0.5, "FV-101": 50.0})
+    await bench.server.publish()
+    await seen_by(bench, "FV-101")
+    assert not any("LT-102" in points for points in bench.sink.reads)
+    await subscription.unsubscribe(valve)
+    await subscription.delete()
+
+
 async def test_a_subscriber_that_wrote_is_known_to_have_seen_the_tick(bench, client, item):
     notes = Notes()
     subscription = await client.create_subscription(20, notes)
@@ -284,6 +325,7 @@ async def test_reading_the_server_itself_is_no_sign_of_the_controller(bench, cli
     ((link, _, _, image_tick, arrival_ns),) = bench.sink.activities
     assert (link, image_tick) == ("opc", bench.image.tick())
     assert arrival_ns >= 1000
+    assert bench.sink.reads == [("LT-102",)]
 
 
 async def test_build_information_is_ours(client):

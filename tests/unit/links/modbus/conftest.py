@@ -47,14 +47,16 @@ class Notebook:
     def __init__(self):
         self.written = []
         self.active = []
+        self.read = []
         self.connections = []
         self.refusals = []
 
     def writes(self, exchanges):
         self.written.append(tuple(exchanges))
 
-    def activity(self, link, connection, peer, image_tick, arrival_ns):
+    def activity(self, link, connection, peer, image_tick, arrival_ns, points=()):
         self.active.append((link, connection, peer, image_tick, arrival_ns))
+        self.read.append(points)
 
     def connection(self, link, connection, peer, connected):
         self.connections.append((link, connection, peer, connected))

@@ -363,6 +363,35 @@ def test_every_valid_request_is_activity(rig):
     assert rig.notebook.active == [("modbus", 1, "10.0.0.1:1", 9, ARRIVAL)] * 3
 
 
+def test_a_read_is_told_of_with_the_points_in_it(rig):
+    for request_ in (
+        "03 0000 0003",
+        "03 0000 0003",  # from the replies that are kept
+        "04 0001 0001",
+        "01 0002 0001",
+        "06 0002 0001",
+        "17 0000 0002 0003 0001 02 00AA",
+    ):
+        ask(rig.session, request_)
+    assert rig.notebook.read == [
+        ("word 0", "word 1", "word 2"),
+        ("word 0", "word 1", "word 2"),
+        ("word 1",),
+        ("bit 2",),
+        (),
+        ("word 0", "word 1"),
+    ]
+    first, again, *_ = rig.notebook.read
+    assert first is again  # the same tuple, which is cheap to look up
+
+
+def test_a_refused_read_reads_nothing(rig):
+    ask(rig.session, "03 0000 0001")
+    ask(rig.session, "03 9C40 0001")
+    ask(rig.session, "06 0002 0001")
+    assert rig.notebook.read == [("word 0",), ()]
+
+
 def test_the_same_refusal_is_told_of_once(rig):
     for _ in range(5):
         ask(rig.session, "03 9C40 0001")
