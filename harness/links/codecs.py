@@ -4,8 +4,8 @@ Rounding is half up, and what does not fit the type is clamped to the type's end
 0 to 65535 counts is 32768. A failed transmitter is never shown as a plausible level:
 
 - as loop current, it shows its failure current (NAMUR NE 43: 3.6 mA and below, or 21.0 mA and above);
-- as counts, the failure current on the count scale, clamped by the type: -691 for 3.6 mA on
-  0 to 32000 in an int16, 0 on 0 to 65535 in a uint16, where nothing lower exists;
+- as counts, the failure current on the count scale, clamped by the type: -750 for 3.6 mA on
+  0 to 30000 in an int16, 0 on 0 to 65535 in a uint16, where nothing lower exists;
 - as float32 in engineering units, NaN: there is no current to look at, and any number would be
   taken for a level;
 - as integer in engineering units, the value that its failure current stands for, clamped.
