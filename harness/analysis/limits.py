@@ -121,7 +121,8 @@ def _verdict(
 ) -> Outcome:
     if name in _SHOWN:
         return Outcome.SHOWN
-    if name in undecidable:
+    if name in undecidable and measured is not None:
+        # One that never settled failed, wherever the prediction's lobe lies.
         return Outcome.NOT_DECIDABLE
     if limit is None:
         # Predicted to be never reached: reaching it is no fault, not reaching it neither.
