@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import math
 import sys
 import time
 from contextlib import ExitStack
@@ -11,24 +12,25 @@ from typing import TYPE_CHECKING
 
 from rich.live import Live
 
-from harness.app.compute import ProcessComputer
 from harness.app.loading import LinkChoice, read_rig
+from harness.app.output import write_output
+from harness.app.run_files import make_run_folder
 from harness.app.stamps import new_run_id, utc_now, versions
+from harness.app.stopping import StopRequest
 from harness.app.trial import say_compiling, warm_up
 from harness.domain.points import points_of
-from harness.domain.rig import ModbusServerLink
 from harness.domain.run import Closing, EventKind, RunEnd, RunHeader
 from harness.domain.signals import Quality
 from harness.engine.engine import Engine
-from harness.errors import UsageError
-from harness.links.register_map import describe_map
-from harness.recording.folder import create_run_folder
+from harness.errors import ExitCode, InvalidRunError, UsageError
+from harness.links.raw import RawView
 from harness.recording.process import RecorderProcess
 from harness.reporting.tables import TagLine, tag_table
 from harness.reporting.terminal import make_console
 from harness.reporting.words import CAUTIONS
 from harness.runtime.clock import PacedClock
 from harness.runtime.link_process import LinkProcess
+from harness.runtime.requests import NothingToCompute
 from harness.runtime.session import Pacing, Session
 
 if TYPE_CHECKING:
@@ -38,6 +40,8 @@ if TYPE_CHECKING:
 
     from harness.domain.rig import Rig
     from harness.domain.run import Event
+    from harness.links.raw import Raw
+    from harness.runtime.news import Contact
 
 _FRAME_NS = 500_000_000  # between two tables [ns]
 _NS_PER_S = 1e9
@@ -74,7 +78,7 @@ class ServeOptions:
     json: bool
 
 
-def serve(options: ServeOptions) -> None:
+def serve(options: ServeOptions) -> ExitCode:
     """Serve a rig.
 
     Parameters
@@ -82,12 +86,22 @@ def serve(options: ServeOptions) -> None:
     options : ServeOptions
         What to serve, and how.
 
+    Returns
+    -------
+    ExitCode
+        PASS at the end of the set time, and at Ctrl-C where none was set, for that is how such
+        a session ends; INTERRUPTED at Ctrl-C before the set time was over.
+
     Raises
     ------
     ConfigurationError
         With every problem of the rig.
+    InvalidRunError
+        When the links are lost on this side.
     LinkError
         When a link cannot be opened.
+    RecordError
+        When the record cannot be written.
     UsageError
         When the rig has no link, or the pace is not positive.
     """
@@ -103,19 +117,23 @@ def serve(options: ServeOptions) -> None:
     for caution in CAUTIONS:
         console.print(f"Caution: {caution}")
     with ExitStack() as stack:
+        stop = stack.enter_context(StopRequest())
         points = points_of(rig, external=not options.builtin)
         links = stack.enter_context(LinkProcess(rig.links, points, rig.name))
         for name, (host, port) in links.addresses.items():
             console.print(f"link {name}: listening on {host}:{port}")
-        computer = stack.enter_context(ProcessComputer())
-        pacing = Pacing(clock=PacedClock(), pace=options.pace, links=links, computer=computer)
+        clock = PacedClock()
+        pacing = Pacing(
+            clock=clock, pace=options.pace, links=links, computer=NothingToCompute()
+        )
         recorder = None
         if options.out is not None:
             header = _header(options, rig, text, engine)
-            folder = create_run_folder(options.out, header)
+            folder = make_run_folder(options.out, header)
             console.print(f"recording to {folder}")
             recorder = stack.enter_context(RecorderProcess.create(folder, header))
-        table = stack.enter_context(_Table(console, rig, live=console.is_terminal))
+        view = RawView(points, rig.links)
+        table = stack.enter_context(_Table(console, view, live=console.is_terminal))
         session = Session(
             engine,
             recorder,
@@ -123,38 +141,58 @@ def serve(options: ServeOptions) -> None:
             external=not options.builtin,
             on_event=table.event,
             on_look=table.look,
+            stop_asked=stop.asked,
         )
-        end = _run(session, options)
-        session.hand_over()
-        if recorder is not None:
-            recorder.close(
-                Closing(
-                    end=end,
-                    reason="",
-                    last_tick=session.tick - 1,
-                    rows=session.rows_taken,
-                )
-            )
+        stop.defer(clock.stop)
+        try:
+            end = _run(session, options)
+        except InvalidRunError as error:
+            session.event(EventKind.INVALID, "run", str(error))
+            _close(session, recorder, RunEnd.INVALID, str(error))
+            raise
+        _close(session, recorder, end, "")
     if options.json:
-        print(json.dumps(live_document(session), indent=2, allow_nan=False))  # noqa: T201
+        document = live_document(session, time.perf_counter_ns())
+        write_output(json.dumps(document, indent=2, allow_nan=False) + "\n")
+    return ExitCode.INTERRUPTED if end is RunEnd.INTERRUPTED else ExitCode.PASS
 
 
-def live_document(session: Session) -> dict[str, object]:
+def _close(
+    session: Session, recorder: RecorderProcess | None, end: RunEnd, reason: str
+) -> None:
+    if recorder is not None:
+        recorder.close(
+            Closing(end=end, reason=reason, last_tick=session.tick - 1, rows=session.rows_taken)
+        )
+
+
+def live_document(session: Session, now_ns: int) -> dict[str, object]:
     """Return the present values of a live session, JSON-able.
 
     Parameters
     ----------
     session : Session
         The session.
+    now_ns : int
+        Time on the clock of the arrivals [ns].
+
+    Returns
+    -------
+    dict
+        For each point its value, unit, current [mA], raw content, quality, and who read and
+        wrote it last, over which link and how long ago [s]; null for never and for none.
     """
+    view = RawView(session.points, session.rig.links)
     values = {}
     for name, (point, value, current, quality) in session.image().items():
         values[name] = {
-            "value": value,
+            "value": value if math.isfinite(value) else None,
             "unit": point.range.unit,
-            "current_ma": current if current == current else None,  # noqa: PLR0124  not a number
+            "current_ma": current if math.isfinite(current) else None,
+            "raw": _raw_document(view.of(name, value, current, quality)),
             "quality": Quality(int(quality)).name.lower(),
-            "written_by": session.last_writer.get(name),
+            "read_by": _contact_document(session.last_reader.get(name), now_ns),
+            "written_by": _contact_document(session.last_writer.get(name), now_ns),
         }
     return {
         "schema": 1,
@@ -179,6 +217,8 @@ def _run(session: Session, options: ServeOptions) -> RunEnd:
         session.event(EventKind.NOTE, "run", "ended by the user")
         # Without a set length Ctrl-C is how a live session is meant to end.
         return RunEnd.COMPLETE if options.duration is None else RunEnd.INTERRUPTED
+    finally:
+        session.hand_over()
     return RunEnd.COMPLETE
 
 
@@ -204,12 +244,11 @@ def _header(options: ServeOptions, rig: Rig, text: str, engine: Engine) -> RunHe
 class _Table:
     """The table of tags on a terminal; events as lines where output is piped."""
 
-    def __init__(self, console: Console, rig: Rig, *, live: bool) -> None:
+    def __init__(self, console: Console, view: RawView, *, live: bool) -> None:
         self._console = console
-        self._rig = rig
+        self._view = view
         self._live = Live(console=console, auto_refresh=False) if live else None
         self._last_ns = 0
-        self._addresses = _addresses(rig)
 
     def __enter__(self) -> _Table:
         if self._live is not None:
@@ -231,19 +270,15 @@ class _Table:
         if self._live is None or now_ns - self._last_ns < _FRAME_NS:
             return
         self._last_ns = now_ns
-        readers = "; ".join(
-            f"{activity.peer} {(now_ns - activity.arrival_ns) / _NS_PER_S:.1f} s ago"
-            for activity in session.last_reader.values()
-        )
         lines = [
             TagLine(
                 name=name,
                 value=value,
                 unit=point.range.unit,
-                raw=_raw(current, self._addresses.get(name, "")),
+                raw=raw_text(self._view.of(name, value, current, quality), current),
                 quality=Quality(int(quality)),
-                read_by=readers,
-                written_by=session.last_writer.get(name, ""),
+                read_by=contact_text(session.last_reader.get(name), now_ns),
+                written_by=contact_text(session.last_writer.get(name), now_ns),
             )
             for name, (point, value, current, quality) in session.image().items()
         ]
@@ -251,16 +286,60 @@ class _Table:
         self._live.update(tag_table(lines, title), refresh=True)
 
 
-def _raw(current: float, address: str) -> str:
-    return f"{current:.3f} mA" if current == current else address  # noqa: PLR0124  not a number
+def raw_text(raw: Raw | None, current: float) -> str:
+    """Return what a peer gets to see of a point, in a few characters.
+
+    Parameters
+    ----------
+    raw : Raw or None
+        The content on the wire.
+    current : float
+        Loop current; NaN where there is none [mA].
+    """
+    parts = [f"{current:.3f} mA"] if math.isfinite(current) else []
+    if raw is not None:
+        number = "" if raw.number is None else f"{raw.number} = "
+        where = f" at {raw.address}" if raw.address.isdigit() else ""
+        parts.append(f"{number}{raw.content}{where}")
+    return ", ".join(parts)
 
 
-def _addresses(rig: Rig) -> dict[str, str]:
-    """Return where each point lies on the first Modbus link that shows it."""
-    found: dict[str, str] = {}
-    points = points_of(rig, external=True)
-    for link in rig.links:
-        if isinstance(link, ModbusServerLink):
-            for row in describe_map(points, link.items):
-                found.setdefault(row.point, f"register {row.address}")
-    return found
+def contact_text(contact: Contact | None, now_ns: int) -> str:
+    """Return who dealt with a point, over which link and how long ago; empty for nobody.
+
+    Parameters
+    ----------
+    contact : Contact or None
+        Who, and when.
+    now_ns : int
+        Time on the clock of the arrivals [ns].
+    """
+    if contact is None:
+        return ""
+    return f"{contact.link} {contact.peer}, {_ago(contact, now_ns):.1f} s ago"
+
+
+def _ago(contact: Contact, now_ns: int) -> float:
+    return max(0, now_ns - contact.arrival_ns) / _NS_PER_S
+
+
+def _raw_document(raw: Raw | None) -> dict[str, object] | None:
+    if raw is None:
+        return None
+    return {
+        "link": raw.link,
+        "address": raw.address,
+        "encoding": raw.encoding,
+        "content": raw.content,
+        "number": raw.number,
+    }
+
+
+def _contact_document(contact: Contact | None, now_ns: int) -> dict[str, object] | None:
+    if contact is None:
+        return None
+    return {
+        "link": contact.link,
+        "peer": contact.peer,
+        "seconds_ago": round(_ago(contact, now_ns), 3),
+    }

@@ -18,7 +18,7 @@ from harness.errors import InvalidRunError
 from harness.runtime.clock import NS_PER_S, TickSchedule
 from harness.runtime.controller_watch import ControllerWatch
 from harness.runtime.image_values import ImageValues
-from harness.runtime.news import LinkEventKind
+from harness.runtime.news import Contact, LinkEventKind
 from harness.runtime.requests import Advance
 
 if TYPE_CHECKING:
@@ -33,7 +33,7 @@ if TYPE_CHECKING:
     from harness.recording.port import RecordWriter
     from harness.runtime.clock import Clock
     from harness.runtime.link_process import LinkProcess
-    from harness.runtime.news import LinkActivity, LinkEvent, LinkNews
+    from harness.runtime.news import LinkEvent, LinkNews
     from harness.runtime.requests import Compute, Request, Script
 
     Floats = NDArray[np.float64]
@@ -112,8 +112,8 @@ class Session:
         self.points = points_of(engine.rig, external)
         self.refusals = 0
         self.rows_taken = 0
-        self.last_writer: dict[str, str] = {}
-        self.last_reader: dict[str, LinkActivity] = {}
+        self.last_writer: dict[str, Contact] = {}
+        self.last_reader: dict[str, Contact] = {}
         self._recorder = recorder
         self._pacing = pacing
         self._on_event = on_event
@@ -377,8 +377,8 @@ class Session:
             for exchange in request:
                 taken.append((self.tick, exchange))
                 self._latch(exchange)
+        self.last_reader.update(news.readers)
         for activity in news.activity:
-            self.last_reader[activity.link] = activity
             for watch in self.watches.values():
                 watch.active(activity)
         for event in news.events:
@@ -387,7 +387,9 @@ class Session:
             self._recorder.exchanges(taken)
 
     def _latch(self, exchange: Exchange) -> None:
-        self.last_writer[exchange.point] = exchange.peer
+        self.last_writer[exchange.point] = Contact(
+            link=exchange.link, peer=exchange.peer, arrival_ns=exchange.arrival_ns
+        )
         loop = self._loop_of_output.get(exchange.point)
         if loop is not None:
             watch = self.watches[loop.tag]
