@@ -15,9 +15,10 @@ from harness.domain.models import ControllerSettings
 from harness.domain.rig import Action
 from harness.domain.run import EventKind
 from harness.engine.engine import Engine
-from harness.errors import ModelError
 
 if TYPE_CHECKING:
+    from collections.abc import Callable
+
     from numpy.typing import NDArray
 
     from harness.analysis.run_data import RunData
@@ -34,16 +35,13 @@ class IdealBlock:
     ----------
     loop : Loop
         The loop: action and limits.
-    scan : float
-        Scan period that the block reckons with [s].
     output : float
         Output to start from [-].
     """
 
-    def __init__(self, loop: Loop, scan: float, output: float) -> None:
+    def __init__(self, loop: Loop, output: float) -> None:
         self._sign = 1.0 if loop.action is Action.REVERSE else -1.0
         self._limits = (loop.output_low, loop.output_high)
-        self._scan = scan
         self.gain = 0.0
         self.integral_time = math.inf
         self.integral = output
@@ -68,6 +66,7 @@ class IdealBlock:
         setpoint: float,
         mode: int,
         manual_output: float,
+        duration: float,
         *,
         bad: bool,
     ) -> float:
@@ -81,6 +80,8 @@ class IdealBlock:
             MANUAL or AUTOMATIC [-].
         manual_output : float
             Output in manual [-].
+        duration : float
+            Time since the scan before [s].
         bad : bool
             Whether the input is bad.
 
@@ -99,7 +100,7 @@ class IdealBlock:
             self.integral_time,
             self._sign,
             *self._limits,
-            self._scan,
+            duration,
             self.integral,
             self.output,
             self._held,
@@ -145,9 +146,10 @@ def replay(
         The prediction.
     """
     engine = Engine(data.rig, built_in=False)
-    block = IdealBlock(loop, loop.scan, engine.output(loop.output))
+    block = IdealBlock(loop, engine.output(loop.output))
     orders = _Orders(data, loop)
-    reads = {int(read): int(acted) for read, acted in zip(log.read, log.acted, strict=True)}
+    reads = dict(zip(log.read.tolist(), log.acted.tolist(), strict=True))
+    durations = dict(zip(log.read.tolist(), log.durations.tolist(), strict=True))
     ticks = sorted({0, *reads, *reads.values(), *settings, *orders.changes()})
     ticks = [tick for tick in ticks if tick < data.rows]
     rows = np.empty((data.rows, len(engine.columns)))
@@ -162,7 +164,12 @@ def replay(
             mode = orders.mode(tick)
             process_variable, bad = engine.transmitted(loop.process_variable)
             pending[reads[tick]] = block.scan(
-                process_variable, orders.setpoint(tick), mode, orders.manual(tick), bad=bad
+                process_variable,
+                orders.setpoint(tick),
+                mode,
+                orders.manual(tick),
+                durations[tick],
+                bad=bad,
             )
             if mode == AUTOMATIC and last_mode == MANUAL:
                 bias[tick] = block.integral
@@ -225,7 +232,7 @@ def static_balance(
     """Return where a proportional block comes to rest on the nonlinear rig.
 
     The output is ``bias + Kc e`` and the level is the one at which inflow equals outflow with
-    that output: one scalar root.
+    that output: one scalar root, or a limit of the output where the block wants to be beyond it.
 
     Parameters
     ----------
@@ -252,7 +259,7 @@ def static_balance(
     Raises
     ------
     ModelError
-        When the balance has no solution within the output limits.
+        When the rig has no steady state at some output within the limits.
     """
     engine = Engine(data.rig, built_in=False)
     transmitter = data.rig.transmitter(loop.process_variable)
@@ -265,15 +272,17 @@ def static_balance(
     def excess(output: float) -> float:
         return output - bias - settings.gain * sign * (setpoint - level(output))
 
-    low = max(loop.output_low, 1e-3)
-    high = loop.output_high
-    if excess(low) * excess(high) > 0.0:
-        raise ModelError(
-            f"loop {loop.tag}: with gain {settings.gain:.3g} and bias {bias:.3f} no output within "
-            f"{low:.3f} and {high:.3f} balances the rig at setpoint {setpoint:.3f}"
-        )
-    output = float(brentq(excess, low, high, xtol=1e-12))
+    output = _root_within(excess, loop.output_low, loop.output_high)
     return level(output), output
+
+
+def _root_within(rising: Callable[[float], float], low: float, high: float) -> float:
+    """Return the root of a rising function, or the limit that it lies beyond."""
+    if rising(low) >= 0.0:
+        return low
+    if rising(high) <= 0.0:
+        return high
+    return float(brentq(rising, low, high, xtol=1e-12))
 
 
 def settings_of(data: RunData, loop: Loop) -> dict[int, ControllerSettings]:

@@ -95,7 +95,9 @@ class _Series:
     offset: float | None = None
 
 
-def score_phase(score: LoopScore, span: PhaseSpan) -> tuple[PhaseVerdict, PhaseCurves]:
+def score_phase(
+    score: LoopScore, span: PhaseSpan, held: str | None = None
+) -> tuple[PhaseVerdict, PhaseCurves]:
     """Score one phase in automatic.
 
     Parameters
@@ -104,6 +106,8 @@ def score_phase(score: LoopScore, span: PhaseSpan) -> tuple[PhaseVerdict, PhaseC
         The loop.
     span : PhaseSpan
         The phase.
+    held : str or None
+        Why its outputs came too seldom to be judged.
 
     Returns
     -------
@@ -133,7 +137,7 @@ def score_phase(score: LoopScore, span: PhaseSpan) -> tuple[PhaseVerdict, PhaseC
         _undecidable(score, span, nonlinear, measured),
     )
     outcome = worst([metric.verdict for metric in judged.values()])
-    if not span.steady:
+    if held is not None or not span.steady:
         outcome = Outcome.INVALID
     verdict = PhaseVerdict(
         name=span.name,
@@ -144,7 +148,7 @@ def score_phase(score: LoopScore, span: PhaseSpan) -> tuple[PhaseVerdict, PhaseC
         end_tick=span.end,
         metrics=judged,
         outcome=outcome,
-        findings=phase_findings(score, span, judged, outcome),
+        findings=phase_findings(score, span, judged, outcome, held),
     )
     return verdict, _curves(score, span, linear, setpoint, metrics[2])
 
@@ -218,7 +222,7 @@ def _linear(score: LoopScore, span: PhaseSpan, setpoint: float, nonlinear: _Seri
     process_variable, output = predict_sampled(
         score.models,
         score.settings,
-        schedule_of(score.log, loop, data.rig.tick),
+        schedule_of(score.log, loop, data.rig.tick, span.zero),
         data.rig.tick,
         data.setpoint(loop)[window],
         load[window],

@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from harness.analysis.document import RunScore, verdict_document
+from harness.analysis.findings import phase_findings
 from harness.analysis.limits import worst
 from harness.analysis.nonlinear import replay, settings_of
 from harness.analysis.phase_score import LoopScore, score_phase
@@ -74,17 +75,19 @@ def score_run(data: RunData) -> Scored:
     loops: dict[str, LoopScore] = {}
     margins: dict[str, Margins] = {}
     for span in spans:
-        if not _scored(span) or span.end - span.zero < 2:  # noqa: PLR2004  nothing to measure
-            verdicts.append(_unscored(span))
-            continue
-        if span.loop not in loops:
+        short = span.end - span.zero < 2  # noqa: PLR2004  nothing to measure
+        if span.loop not in loops and not short and _needs_law(span):
             loops[span.loop] = _loop_score(data, data.rig.loop(span.loop))
             margins[span.loop] = _margins(loops[span.loop])
-        verdict, drawn = score_phase(loops[span.loop], span)
+        if short or not _scored(span):
+            verdicts.append(_unscored(span, None if short else loops.get(span.loop)))
+            continue
+        held = _held(loops[span.loop], margins[span.loop], span)
+        if held is not None:
+            reasons.append(f"phase {span.name!r}: {held}")
+        verdict, drawn = score_phase(loops[span.loop], span, held)
         verdicts.append(verdict)
         curves.append(drawn)
-    for tag, score in loops.items():
-        reasons += _hold_reasons(score, margins[tag], spans)
     missing = [p.name for p in data.trial.phases if p.name not in {s.name for s in spans}]
     if missing:
         reasons.append(f"not run: {', '.join(missing)}")
@@ -107,7 +110,17 @@ def _scored(span: PhaseSpan) -> bool:
     return span.mode == Mode.AUTOMATIC.value and span.kind != PhaseKind.SETTLE.value
 
 
-def _unscored(span: PhaseSpan) -> PhaseVerdict:
+def _needs_law(span: PhaseSpan) -> bool:
+    """Return whether the controller's settings matter to what is said of a phase."""
+    return _scored(span) or (span.mode == Mode.AUTOMATIC.value and not span.steady)
+
+
+def _unscored(span: PhaseSpan, score: LoopScore | None) -> PhaseVerdict:
+    findings: tuple[str, ...] = ()
+    if not span.steady:
+        findings = (f"The phase did not end steady: {span.reason}.",)
+        if score is not None and span.mode == Mode.AUTOMATIC.value:
+            findings = phase_findings(score, span, {}, Outcome.INVALID)
     return PhaseVerdict(
         name=span.name,
         loop=span.loop,
@@ -117,7 +130,7 @@ def _unscored(span: PhaseSpan) -> PhaseVerdict:
         end_tick=span.end,
         metrics={},
         outcome=Outcome.SHOWN if span.steady else Outcome.INVALID,
-        findings=() if span.steady else (f"The phase did not end steady: {span.reason}.",),
+        findings=findings,
     )
 
 
@@ -203,23 +216,21 @@ def _lateness_reasons(data: RunData) -> list[str]:
     ]
 
 
-def _hold_reasons(
-    score: LoopScore, margins: Margins, spans: tuple[PhaseSpan, ...]
-) -> list[str]:
-    """Return why the controller's outputs came too seldom for a judgement."""
+def _held(score: LoopScore, margins: Margins, span: PhaseSpan) -> str | None:
+    """Return why the controller's outputs came too seldom in a phase for a judgement."""
     if not score.data.external or margins.delay_margin is None or margins.delay_margin <= 0.0:
-        return []
+        return None
     tick = score.data.rig.tick
-    allowed = max(_HOLD_SHARE * margins.delay_margin, 2.0 * score.scan)
-    reasons = []
-    for span in spans:
-        if span.loop != score.loop.tag or not _scored(span):
-            continue
-        held = score.log.within(span.zero, span.end).longest_hold * tick
-        if held > allowed:
-            reasons.append(
-                f"phase {span.name!r}: an output of {score.loop.output} was held for {held:.3g} s; "
-                f"a tenth of the delay margin is {allowed:.3g} s. Look at the link and at the "
-                "controller's scan"
-            )
-    return reasons
+    allowed = max(_HOLD_SHARE * margins.delay_margin, 2.0 * score.loop.scan)
+    held = score.log.longest_hold_within(span.zero, span.end) * tick
+    delay = score.log.within(span.zero, span.end).delay * tick
+    if held > allowed:
+        what = f"an output of {score.loop.output} was held for {held:.3g} s"
+    elif delay > allowed:
+        what = f"{score.loop.output} answered what the controller read {delay:.3g} s before"
+    else:
+        return None
+    return (
+        f"{what}; {allowed:.3g} s at most may be (a tenth of the delay "
+        "margin, at least two scans). Look at the link and at the controller's scan"
+    )
