@@ -1,3 +1,4 @@
+# ruff: noqa: ARG001, ARG005  the overrides take what a controller is given, needed or not
 """Controllers with one deliberate mistake each: none may pass, and each is called by its name.
 
 They close the loop of the demo rig in virtual time, tick by tick, through the same exchange log
@@ -46,9 +47,7 @@ def test_nothing_is_found_on_a_right_controller(verdict_of):
     assert findings_of(document) == []
 
 
-@pytest.mark.parametrize(
-    ("period", "delay"), [(1, 1), (2, 0), (3, 2), (10, 4)], ids=lambda value: str(value)
-)
+@pytest.mark.parametrize(("period", "delay"), [(1, 1), (2, 0), (3, 2), (10, 4)], ids=str)
 def test_a_right_controller_may_scan_as_it_likes(verdict_of, period, delay):
     """The prediction takes period and delay as measured, whatever the rig file says."""
     document = verdict_of(period=period, delay=delay)
