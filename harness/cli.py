@@ -4,17 +4,21 @@ from __future__ import annotations
 
 import argparse
 import json
+import math
 import sys
+import traceback
 from pathlib import Path
 from typing import TYPE_CHECKING
 
-from harness.errors import DryrigError, ExitCode
+from harness.errors import DryrigError, ExitCode, UsageError
 
 if TYPE_CHECKING:
     from collections.abc import Callable, Sequence
 
     from harness.app.loading import LinkChoice
+    from harness.app.run_files import RunResult
 
+_LAST_PORT = 65_535  # RFC 9293, section 3.1: a port is a 16 bit number [-]
 _CAUTION = (
     "Outputs of a controller under test must be isolated from the field. Nothing here is evidence "
     "for a safety function; local codes and licensed practice decide."
@@ -43,10 +47,15 @@ def main(arguments: Sequence[str] | None = None) -> int:
         return int(error.exit_code)
     except KeyboardInterrupt:
         return int(ExitCode.INTERRUPTED)
-    except BrokenPipeError:
-        # The reader of our output has gone; there is nobody left to tell.
-        sys.stderr.close()
-        return int(ExitCode.INTERRUPTED)
+    except Exception as error:  # noqa: BLE001  it would end with 1, as if a controller had failed
+        traceback.print_exc()
+        print(  # noqa: T201
+            f"dryrig: {error!r}: this is a defect of the program, not of your files or your "
+            "controller; please report it with the lines above. A run so far is kept and counts "
+            "as invalid",
+            file=sys.stderr,
+        )
+        return int(ExitCode.INVALID)
 
 
 def build_parser() -> argparse.ArgumentParser:
@@ -71,7 +80,7 @@ def _add_check(commands: argparse._SubParsersAction[argparse.ArgumentParser]) ->
     parser = commands.add_parser("check", help="check a rig and a trial; say how long it takes")
     parser.add_argument("rig", type=Path, metavar="RIG", help="rig file")
     parser.add_argument("trial", type=Path, nargs="?", metavar="TRIAL", help="trial file")
-    _add_pace(parser)
+    _add_pace(parser, 1.0)
     _add_json(parser)
     parser.set_defaults(run=_check)
 
@@ -85,12 +94,16 @@ def _add_model(commands: argparse._SubParsersAction[argparse.ArgumentParser]) ->
 
 def _add_serve(commands: argparse._SubParsersAction[argparse.ArgumentParser]) -> None:
     parser = commands.add_parser(
-        "serve", help="run a rig live with its links open", epilog=_CAUTION
+        "serve",
+        help="run a rig live with its links open",
+        description="Run a rig live with its links open, until Ctrl-C (exit code 0), or for a "
+        "set time (Ctrl-C before its end: 130).",
+        epilog=_CAUTION,
     )
     parser.add_argument("rig", type=Path, metavar="RIG", help="rig file")
     parser.add_argument(
         "--for",
-        type=float,
+        type=_above_zero,
         dest="duration",
         metavar="SECONDS",
         help="stop after this wall time",
@@ -101,7 +114,7 @@ def _add_serve(commands: argparse._SubParsersAction[argparse.ArgumentParser]) ->
     parser.add_argument(
         "--out", type=Path, metavar="FOLDER", help="record into a run folder there"
     )
-    _add_pace(parser)
+    _add_pace(parser, 1.0)
     _add_links(parser)
     _add_json(parser)
     parser.set_defaults(run=_serve)
@@ -119,12 +132,14 @@ def _add_control(commands: argparse._SubParsersAction[argparse.ArgumentParser]) 
         "--loop", metavar="TAG", help="loop to close; the rig's first if not given"
     )
     parser.add_argument("--host", help="where the rig listens, if not as in the rig file")
-    parser.add_argument("--port", type=int, help="its port, if not as in the rig file")
     parser.add_argument(
-        "--scan", type=float, metavar="SECONDS", help="scan period in plant time"
+        "--port", type=_port_to_reach, help="its port, if not as in the rig file"
+    )
+    parser.add_argument(
+        "--scan", type=_above_zero, metavar="SECONDS", help="scan period in plant time"
     )
     _add_faults(parser)
-    _add_pace(parser)
+    _add_pace(parser, 1.0)
     parser.set_defaults(run=_control)
 
 
@@ -154,14 +169,27 @@ def _add_trial(commands: argparse._SubParsersAction[argparse.ArgumentParser]) ->
     parser.add_argument("--controller", choices=("builtin", "external"), default="builtin")
     parser.add_argument(
         "--controller-pace",
-        type=float,
-        default=1.0,
+        type=_above_zero,
         metavar="PACE",
         help="pace at which an external controller's own clock is scaled; it must be the rig's",
     )
-    parser.add_argument("--phases", metavar="NAME[,NAME...]", help="run these phases only")
-    parser.add_argument("--out", type=Path, default=Path("runs"), metavar="FOLDER")
-    _add_pace(parser)
+    parser.add_argument(
+        "--wait",
+        type=_above_zero,
+        metavar="SECONDS",
+        help="how long to wait for an external controller (default 30)",
+    )
+    parser.add_argument(
+        "--phases", type=_names, metavar="NAME[,NAME...]", help="run these phases only"
+    )
+    parser.add_argument(
+        "--out",
+        type=Path,
+        default=Path("runs"),
+        metavar="FOLDER",
+        help="where the run folder goes (default runs)",
+    )
+    _add_pace(parser, None)
     _add_links(parser)
     _add_json(parser)
     parser.set_defaults(run=_trial)
@@ -174,9 +202,12 @@ def _add_score(commands: argparse._SubParsersAction[argparse.ArgumentParser]) ->
     parser.set_defaults(run=_score)
 
 
-def _add_pace(parser: argparse.ArgumentParser) -> None:
+def _add_pace(parser: argparse.ArgumentParser, default: float | None) -> None:
     parser.add_argument(
-        "--pace", type=float, default=1.0, help="plant seconds per wall second (default 1)"
+        "--pace",
+        type=_above_zero,
+        default=default,
+        help="plant seconds per wall second (default 1)",
     )
 
 
@@ -191,8 +222,60 @@ def _add_links(parser: argparse.ArgumentParser) -> None:
         "--link", metavar="LINK", help="open this link only: modbus, opcua, a name"
     )
     parser.add_argument("--host", help="address to listen on (default as in the rig file)")
-    parser.add_argument("--modbus-port", type=int, metavar="PORT")
-    parser.add_argument("--opcua-port", type=int, metavar="PORT")
+    for kind in ("modbus", "opcua"):
+        parser.add_argument(
+            f"--{kind}-port",
+            type=_port,
+            metavar="PORT",
+            help="port to listen on, 0 for any free one (default as in the rig file)",
+        )
+
+
+def _above_zero(text: str) -> float:
+    """Return a finite number above zero."""
+    try:
+        value = float(text)
+    except ValueError:
+        value = math.nan
+    if not (math.isfinite(value) and value > 0.0):
+        raise argparse.ArgumentTypeError(
+            f'"{text}" is not a finite number above 0; give e.g. 10'
+        )
+    return value
+
+
+def _port(text: str) -> int:
+    """Return a TCP port, or 0 for any."""
+    try:
+        value = int(text)
+    except ValueError:
+        value = -1
+    if not 0 <= value <= _LAST_PORT:
+        raise argparse.ArgumentTypeError(
+            f'"{text}" is not a TCP port; give a whole number up to {_LAST_PORT}'
+        )
+    return value
+
+
+def _port_to_reach(text: str) -> int:
+    """Return a TCP port that a peer can listen on."""
+    value = _port(text)
+    if value == 0:
+        raise argparse.ArgumentTypeError(
+            "0 stands for any free port, which nobody can reach; give the port that the rig said "
+            "it listens on"
+        )
+    return value
+
+
+def _names(text: str) -> tuple[str, ...]:
+    """Return names between commas, at least one."""
+    names = tuple(name.strip() for name in text.split(",") if name.strip())
+    if not names:
+        raise argparse.ArgumentTypeError(
+            f'"{text}" names no phase; leave the option out to run all of them'
+        )
+    return names
 
 
 def _link_choice(options: argparse.Namespace) -> LinkChoice:
@@ -226,7 +309,7 @@ def _model(options: argparse.Namespace) -> int:
 def _serve(options: argparse.Namespace) -> int:
     from harness.app.serve import ServeOptions, serve  # noqa: PLC0415  kept out of --help
 
-    serve(
+    return serve(
         ServeOptions(
             rig=options.rig,
             pace=options.pace,
@@ -237,7 +320,6 @@ def _serve(options: argparse.Namespace) -> int:
             json=options.json,
         )
     )
-    return ExitCode.PASS
 
 
 def _control(options: argparse.Namespace) -> int:
@@ -248,40 +330,64 @@ def _control(options: argparse.Namespace) -> int:
 
 
 def _trial(options: argparse.Namespace) -> int:
-    from harness.app.printing import print_result  # noqa: PLC0415  kept out of --help
-    from harness.app.trial import TrialOptions, run_trial  # noqa: PLC0415
+    from harness.app.trial import TrialOptions, run_trial  # noqa: PLC0415  kept out of --help
 
-    names = tuple(name.strip() for name in (options.phases or "").split(",") if name.strip())
     external = options.controller == "external"
+    _refuse_idle_options(options, external=external)
+    # A pace means nothing in virtual time, so that asking for one asks for paced time.
+    paced = external or options.pace is not None
+    waiting = {} if options.wait is None else {"wait": options.wait}
     result = run_trial(
         TrialOptions(
             rig=options.rig,
             trial=options.trial,
-            clock=options.clock or ("paced" if external else "virtual"),
-            pace=options.pace,
+            clock=options.clock or ("paced" if paced else "virtual"),
+            pace=options.pace or 1.0,
             controller=options.controller,
-            controller_pace=options.controller_pace,
-            phases=names,
+            controller_pace=options.controller_pace or 1.0,
+            phases=options.phases or (),
             out=options.out,
             links=_link_choice(options),
             json=options.json,
+            **waiting,
         )
     )
-    if options.json:
-        sys.stdout.write(result.text)
-    else:
-        print_result(result)
-    return result.exit_code
+    return _show(result, options)
+
+
+def _refuse_idle_options(options: argparse.Namespace, *, external: bool) -> None:
+    """Raise where an option would be passed over without a word."""
+    if options.clock == "virtual" and options.pace is not None:
+        raise UsageError(
+            f"trial: --pace {options.pace:g} with --clock virtual: virtual time runs as fast as "
+            "the computer can; leave --pace out, or take --clock paced"
+        )
+    if external:
+        return
+    for name in ("link", "host", "modbus_port", "opcua_port", "controller_pace", "wait"):
+        value = getattr(options, name)
+        if value is not None:
+            raise UsageError(
+                f"trial: --{name.replace('_', '-')} {value} with --controller builtin: the "
+                "built-in controller uses no link and no clock of its own; leave the option out, "
+                "or take --controller external"
+            )
 
 
 def _score(options: argparse.Namespace) -> int:
-    from harness.app.printing import print_result  # noqa: PLC0415  kept out of --help
-    from harness.app.score import score  # noqa: PLC0415
+    from harness.app.score import score  # noqa: PLC0415  kept out of --help
 
-    result = score(options.folder)
+    return _show(score(options.folder), options)
+
+
+def _show(result: RunResult, options: argparse.Namespace) -> int:
     if options.json:
-        sys.stdout.write(result.text)
+        from harness.app.output import write_output  # noqa: PLC0415  kept out of --help
+
+        write_output(result.text)
     else:
+        from harness.app.printing import print_result  # noqa: PLC0415  kept out of --help
+
         print_result(result)
     return result.exit_code
 
@@ -292,8 +398,10 @@ def _tell(
     show: Callable[[dict[str, object]], None],
 ) -> None:
     if options.json:
+        from harness.app.output import write_output  # noqa: PLC0415  kept out of --help
+
         text = json.dumps(document, indent=2, ensure_ascii=False, allow_nan=False)
-        sys.stdout.write(text + "\n")
+        write_output(text + "\n")
     else:
         show(document)
 

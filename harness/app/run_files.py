@@ -12,14 +12,17 @@ from harness.analysis.score import score_run
 from harness.app.loading import only_phases
 from harness.config.load import rig_from_text, trial_from_text
 from harness.domain.verdict import Outcome
-from harness.errors import ExitCode, RecordError
+from harness.errors import ExitCode, RecordError, UsageError
 from harness.recording.export import export_csv, write_file
+from harness.recording.folder import create_run_folder
 from harness.recording.reader import RunFolder
+from harness.recording.schema import TRACE_FILE
 from harness.reporting.html import render_report
 from harness.reporting.junit import render_junit
 
 if TYPE_CHECKING:
     from harness.analysis.score import Scored
+    from harness.domain.run import RunHeader
 
 PHASES = "phases"  # key of the header's extra facts: the phases of a trial that was cut
 _SEPARATOR = "\n"
@@ -69,6 +72,32 @@ def phases_extra(phases: tuple[str, ...]) -> dict[str, str]:
     return {PHASES: _SEPARATOR.join(phases)} if phases else {}
 
 
+def make_run_folder(out: Path, header: RunHeader) -> Path:
+    """Make the folder of a run.
+
+    Parameters
+    ----------
+    out : Path
+        Where run folders go.
+    header : RunHeader
+        First document of the run.
+
+    Returns
+    -------
+    Path
+        The folder.
+
+    Raises
+    ------
+    UsageError
+        When no folder can be made there.
+    """
+    try:
+        return create_run_folder(out, header)
+    except RecordError as error:
+        raise UsageError(str(error)) from error
+
+
 def read_run(folder: Path) -> RunData:
     """Read a run folder for scoring.
 
@@ -84,13 +113,23 @@ def read_run(folder: Path) -> RunData:
 
     Raises
     ------
+    UsageError
+        When it is no run folder, or that of a live session.
     RecordError
-        When it is no run of a trial.
+        When the record is garbled.
     """
+    if not (folder / TRACE_FILE).is_file():
+        raise UsageError(
+            f"{folder} is not a run folder: it holds no {TRACE_FILE}; name the folder that "
+            "`dryrig trial` said its report is in"
+        )
     run = RunFolder.open(folder)
     header = run.header
     if not header.trial_text:
-        raise RecordError(f"{folder} is the record of a live session: it has no trial to score")
+        raise UsageError(
+            f"{folder} is the record of a live session of `dryrig serve`, which has no trial to be "
+            "scored by; name the folder of a `dryrig trial`"
+        )
     rig = rig_from_text(header.rig_text, "rig.toml")
     trial = trial_from_text(header.trial_text, "trial.toml", rig)
     cut = header.extra.get(PHASES, "")

@@ -9,22 +9,22 @@ from pathlib import Path
 from typing import TYPE_CHECKING
 
 from harness.app.compute import ProcessComputer
-from harness.app.forecast import forecast
+from harness.app.forecast import Forecast, forecast
 from harness.app.loading import LinkChoice, read_rig, read_trial
-from harness.app.run_files import RunResult, phases_extra, score_folder
+from harness.app.run_files import RunResult, make_run_folder, phases_extra, score_folder
 from harness.app.stamps import new_run_id, utc_now, versions
+from harness.app.stopping import StopRequest
 from harness.app.trial_view import DirectView, TrialView, ViewProcess
 from harness.domain.points import points_of
 from harness.domain.run import Closing, EventKind, RunEnd, RunHeader
 from harness.engine.engine import Engine
 from harness.errors import DryrigError, RecordError, UsageError
-from harness.recording.folder import create_run_folder
 from harness.recording.process import RecorderProcess
 from harness.recording.writer import Recorder
 from harness.runtime.clock import PacedClock
 from harness.runtime.link_process import LinkProcess
 from harness.runtime.session import Pacing, Session
-from harness.runtime.trial_script import trial_script
+from harness.runtime.trial_script import WAIT_FOR_CONTROLLER, trial_script
 from plants.compile import is_compiled
 
 if TYPE_CHECKING:
@@ -34,6 +34,7 @@ if TYPE_CHECKING:
     from harness.recording.port import RecordWriter
 
 _VIRTUAL = "virtual"
+_INTERRUPTED = "interrupted by the user"
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -60,6 +61,8 @@ class TrialOptions:
         Changes of the links.
     json : bool
         Whether standard output is kept for the document.
+    wait : float
+        Longest wait for an external controller to be there, and to take an order [wall s].
     """
 
     rig: Path
@@ -72,6 +75,7 @@ class TrialOptions:
     phases: tuple[str, ...] = ()
     links: LinkChoice = field(default_factory=LinkChoice)
     json: bool = False
+    wait: float = WAIT_FOR_CONTROLLER
 
 
 def run_trial(options: TrialOptions) -> RunResult:
@@ -85,7 +89,7 @@ def run_trial(options: TrialOptions) -> RunResult:
     Returns
     -------
     RunResult
-        Verdict and folder; an interrupted run is scored as far as it got and raises.
+        Verdict and folder.
 
     Raises
     ------
@@ -95,6 +99,10 @@ def run_trial(options: TrialOptions) -> RunResult:
         When the options do not go together.
     KeyboardInterrupt
         After an interrupted run has been closed and its folder told.
+    LinkError
+        When a link cannot be opened; no folder is made.
+    RecordError
+        When the record cannot be written; what was committed until then is kept.
     """
     _check(options)
     rig, rig_text = read_rig(options.rig, options.links)
@@ -105,14 +113,17 @@ def run_trial(options: TrialOptions) -> RunResult:
             f"{options.rig}: an external controller needs a link, and this rig has none"
         )
     say_compiling()
-    expected = {name: plan.duration for name, plan in forecast(rig, trial).phases.items()}
+    expected = forecast(rig, trial)
     engine = Engine(rig, built_in=not external)
     warm_up(engine)
     header = _header(options, rig, rig_text, trial, trial_text, engine)
-    folder = create_run_folder(options.out, header)
-    interrupted = _carry_out(options, rig, trial, engine, header, folder, expected)
+    folder, interrupted = _carry_out(options, trial, engine, header, expected)
     if interrupted:
-        print(f"interrupted; what was recorded is in {folder}", file=sys.stderr)  # noqa: T201
+        print(  # noqa: T201
+            f"interrupted; what was recorded is kept in {folder}, and "
+            f"`dryrig score {folder}` says how far it got",
+            file=sys.stderr,
+        )
         raise KeyboardInterrupt
     return score_folder(folder)
 
@@ -191,30 +202,25 @@ def _header(
 
 def _carry_out(
     options: TrialOptions,
-    rig: Rig,
     trial: Trial,
     engine: Engine,
     header: RunHeader,
-    folder: Path,
-    expected: dict[str, float],
-) -> bool:
-    """Run the script to its end, however that comes; return whether it was interrupted."""
-    paced = options.clock != _VIRTUAL
+    expected: Forecast,
+) -> tuple[Path, bool]:
+    """Run the script to its end, however that comes; return folder, and whether interrupted."""
     external = options.controller == "external"
     with ExitStack() as stack:
-        pacing = _pacing(stack, options, rig, external=external) if paced else None
+        stop = stack.enter_context(StopRequest())
+        clock = PacedClock()
+        paced = options.clock != _VIRTUAL
+        pacing = _pacing(stack, options, engine.rig, clock) if paced else None
+        folder = make_run_folder(options.out, header)
         recorder: RecordWriter
         if paced:
             recorder = stack.enter_context(RecorderProcess.create(folder, header))
         else:
-            now_ns = PacedClock().now_ns
-            recorder = stack.enter_context(Recorder.create(folder, header, now_ns))
-        port: ViewPort = (
-            stack.enter_context(ViewProcess(to_stderr=options.json))
-            if paced
-            else stack.enter_context(DirectView(to_stderr=options.json))
-        )
-        view = TrialView(port, rig.name, trial, expected)
+            recorder = stack.enter_context(Recorder.create(folder, header, clock.now_ns))
+        view = TrialView(_view(stack, options), engine.rig.name, trial, expected)
         session = Session(
             engine,
             recorder,
@@ -222,39 +228,55 @@ def _carry_out(
             external=external,
             on_event=view.take_event,
             on_look=view.look,
+            stop_asked=stop.asked,
         )
-        end = _run_script(session, trial)
+        stop.defer(clock.stop)
+        end = _run_script(session, trial, recorder, options.wait)
         view.look(session)
-        recorder.close(
-            Closing(
-                end=end[0], reason=end[1], last_tick=session.tick - 1, rows=session.rows_taken
-            )
-        )
-    return end[0] is RunEnd.INTERRUPTED
+    return folder, end is RunEnd.INTERRUPTED or stop.asked()
 
 
-def _run_script(session: Session, trial: Trial) -> tuple[RunEnd, str]:
+def _view(stack: ExitStack, options: TrialOptions) -> ViewPort:
+    if options.clock == _VIRTUAL:
+        return stack.enter_context(DirectView(to_stderr=options.json))
+    return stack.enter_context(ViewProcess(to_stderr=options.json))
+
+
+def _run_script(session: Session, trial: Trial, recorder: RecordWriter, wait: float) -> RunEnd:
+    """Run the script and close the record, which says how the run ended."""
     try:
-        session.run(trial_script(session, trial))
+        session.run(trial_script(session, trial, wait))
     except KeyboardInterrupt:
-        session.event(EventKind.NOTE, "run", "interrupted by the user")
-        return RunEnd.INTERRUPTED, "interrupted by the user"
+        session.event(EventKind.NOTE, "run", _INTERRUPTED)
+        return _close(session, recorder, RunEnd.INTERRUPTED, _INTERRUPTED)
     except RecordError:
         raise
     except DryrigError as error:
         # Whatever a trial runs into, its record is closed and says why it cannot be judged.
         session.event(EventKind.INVALID, "run", str(error))
-        return RunEnd.INVALID, str(error)
-    return RunEnd.COMPLETE, ""
+        return _close(session, recorder, RunEnd.INVALID, str(error))
+    except Exception as error:
+        reason = f"the program met a defect of its own: {error!r}"
+        session.event(EventKind.INVALID, "run", reason)
+        _close(session, recorder, RunEnd.INVALID, reason)
+        raise
+    return _close(session, recorder, RunEnd.COMPLETE, "")
 
 
-def _pacing(stack: ExitStack, options: TrialOptions, rig: Rig, *, external: bool) -> Pacing:
+def _close(session: Session, recorder: RecordWriter, end: RunEnd, reason: str) -> RunEnd:
+    recorder.close(
+        Closing(end=end, reason=reason, last_tick=session.tick - 1, rows=session.rows_taken)
+    )
+    return end
+
+
+def _pacing(stack: ExitStack, options: TrialOptions, rig: Rig, clock: PacedClock) -> Pacing:
     links = None
-    if external:
-        points = points_of(rig, external)
+    if options.controller == "external":
+        points = points_of(rig, external=True)
         links = stack.enter_context(LinkProcess(rig.links, points, rig.name))
         for name, (host, port) in links.addresses.items():
             print(f"link {name}: listening on {host}:{port}", file=sys.stderr, flush=True)  # noqa: T201
     computer = stack.enter_context(ProcessComputer())
     computer.wait_until_warm()
-    return Pacing(clock=PacedClock(), pace=options.pace, links=links, computer=computer)
+    return Pacing(clock=clock, pace=options.pace, links=links, computer=computer)

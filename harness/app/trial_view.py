@@ -13,6 +13,7 @@ from typing import TYPE_CHECKING, Protocol, Self
 from harness.domain.points import manual_output_point, mode_point, setpoint_point
 from harness.domain.run import EventKind
 from harness.domain.signals import Quality
+from harness.recording.process import interrupts_blocked
 from harness.reporting.terminal import make_console, make_view
 from harness.reporting.view_state import LoopView, PhaseState, PhaseView, ViewState
 
@@ -21,6 +22,7 @@ if TYPE_CHECKING:
 
     from rich.console import Console
 
+    from harness.app.forecast import Forecast
     from harness.domain.run import Event
     from harness.domain.trial import Trial
     from harness.runtime.session import Session
@@ -50,17 +52,16 @@ class TrialView:
         Name of the rig.
     trial : Trial
         The trial.
-    expected : dict of str to float
-        Expected duration of each phase; 0 for not known [s].
+    expected : Forecast
+        Expected durations.
     """
 
-    def __init__(
-        self, port: ViewPort, rig_name: str, trial: Trial, expected: dict[str, float]
-    ) -> None:
+    def __init__(self, port: ViewPort, rig_name: str, trial: Trial, expected: Forecast) -> None:
         self._port = port
         self._rig_name = rig_name
         self._trial = trial
-        self._expected = dict(expected)
+        self._expected = {name: plan.duration for name, plan in expected.phases.items()}
+        self._transfer = expected.transfer
         self._started: dict[str, float] = {}
         self._ended: dict[str, tuple[float, bool]] = {}
         self._events: deque[str] = deque(maxlen=_EVENTS)
@@ -106,7 +107,7 @@ class TrialView:
                 trial=self._trial.name,
                 pace=session.pace,
                 elapsed=session.time,
-                expected=sum(self._expected.values()),
+                expected=sum(self._expected.values()) + self._transfer,
                 phases=tuple(self._phase(phase.name, session) for phase in self._trial.phases),
                 loops=tuple(self._loop(tag, session) for tag in self._trends),
                 events=tuple(self._events),
@@ -210,7 +211,8 @@ class ViewProcess:
             self._changed.notify()
 
     def __enter__(self) -> Self:
-        self._process.start()
+        with interrupts_blocked():
+            self._process.start()
         self._receiver.close()
         self._sender.start()
         return self

@@ -85,7 +85,7 @@ class RecorderProcess:
             name="recorder",
             daemon=True,
         )
-        with _interrupts_blocked():
+        with interrupts_blocked():
             process.start()
         child_receives.close()
         child_sends.close()
@@ -289,7 +289,7 @@ class _Backlog:
 
 
 @contextmanager
-def _interrupts_blocked() -> Iterator[None]:
+def interrupts_blocked() -> Iterator[None]:
     """Start a child deaf to Ctrl-C from its first instruction, where the system can."""
     if not hasattr(signal, "pthread_sigmask"):
         yield

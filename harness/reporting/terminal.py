@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import os
 import sys
 from typing import TYPE_CHECKING, Protocol, Self, TextIO
 
@@ -119,7 +120,7 @@ def make_console(stream: TextIO | None = None) -> Console:
     reconfigure = getattr(target, "reconfigure", None)
     if reconfigure is not None:
         reconfigure(errors="replace")
-    return Console(file=target, highlight=False)
+    return _Console(file=target, highlight=False)
 
 
 def make_view(console: Console, now_ns: Callable[[], int]) -> View:
@@ -133,6 +134,18 @@ def make_view(console: Console, now_ns: Callable[[], int]) -> View:
         Monotonic wall clock [ns].
     """
     return LiveView(console, now_ns) if console.is_terminal else PlainView(console, now_ns)
+
+
+class _Console(Console):
+    """A console whose reader may go: the rest is said to nobody, and the run goes on."""
+
+    def on_broken_pipe(self) -> None:
+        """Fall silent; the base class would end the program, as if the run had failed."""
+        self.quiet = True
+        # The interpreter flushes at its end, and would complain of the broken pipe there.
+        nowhere = os.open(os.devnull, os.O_WRONLY)
+        os.dup2(nowhere, self.file.fileno())
+        os.close(nowhere)
 
 
 class _Pacing:

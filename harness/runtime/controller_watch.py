@@ -19,6 +19,7 @@ class ControllerWatch:
 
     The controller is the connection that last wrote the loop's output; until one has, nobody
     is. Any valid request on that connection counts as a sign of life, a read as well as a write.
+    Where the rig gives the heartbeat a time limit, that counts from the first write of the output.
 
     Parameters
     ----------
@@ -37,6 +38,7 @@ class ControllerWatch:
     _heartbeat_ns: int | None = field(default=None, init=False)
     _heartbeat: float | None = field(default=None, init=False)
     _silent: bool = field(default=False, init=False)
+    _known: set[tuple[str, int]] = field(default_factory=set, init=False)
 
     @property
     def found(self) -> bool:
@@ -61,19 +63,28 @@ class ControllerWatch:
         return self._read_tick
 
     def output_written(self, exchange: Exchange) -> bool:
-        """Take a write of the loop's output; return whether it makes another peer the controller.
+        """Take a write of the loop's output; its connection is the controller's from now on.
 
         Parameters
         ----------
         exchange : Exchange
             The write.
+
+        Returns
+        -------
+        bool
+            Whether this connection writes the output for the first time: two that write it in
+            turns are each told once.
         """
         connection = (exchange.link, exchange.connection)
-        new = connection != self._connection
+        new = connection not in self._known
+        self._known.add(connection)
         self._connection = connection
         self._peer = exchange.peer
         self._last_ns = max(self._last_ns, exchange.arrival_ns)
         self._read_tick = max(self._read_tick, exchange.image_tick)
+        if self._heartbeat_ns is None:
+            self._heartbeat_ns = exchange.arrival_ns  # stands still until it beats
         return new
 
     def heartbeat_written(self, exchange: Exchange) -> None:

@@ -9,6 +9,7 @@ from typing import TYPE_CHECKING
 
 from harness.domain.rig import OpcUaServerLink
 from harness.errors import InvalidRunError, LinkError
+from harness.recording.process import interrupts_blocked
 from harness.runtime.image import ImageWriter
 from harness.runtime.link_child import WAKE, LinkSetup, LinksFailed, LinksOpen, run_links
 from harness.runtime.news import NO_NEWS, LinkNews
@@ -103,7 +104,8 @@ class LinkProcess:
             target=run_links, args=(setup, child_up, child_down), name="links", daemon=True
         )
         try:
-            self._process.start()
+            with interrupts_blocked():
+                self._process.start()
             # Only when the child alone holds its ends does either side see the other go.
             child_up.close()
             child_down.close()

@@ -6,6 +6,8 @@ from collections.abc import Callable, Generator
 from dataclasses import dataclass
 from typing import Any
 
+from harness.errors import UsageError
+
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Advance:
@@ -34,6 +36,31 @@ class Compute:
 
     function: Callable[..., Any]
     arguments: tuple[Any, ...]
+
+
+class NothingToCompute:
+    """Stands where a computer is asked for and no script will ask for a computation."""
+
+    def begin(self, request: Compute) -> None:
+        """Refuse a computation.
+
+        Parameters
+        ----------
+        request : Compute
+            Function and arguments.
+
+        Raises
+        ------
+        UsageError
+            Always.
+        """
+        raise UsageError(
+            f"{request.function}: this session has nobody to compute it; give it a computer"
+        )
+
+    def result(self) -> tuple[bool, Any]:
+        """Return that nothing is done."""
+        return False, None
 
 
 Request = Advance | Compute

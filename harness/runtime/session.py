@@ -94,6 +94,8 @@ class Session:
         Told every event.
     on_look : callable or None
         Called a few times a second of wall time, for a live view.
+    stop_asked : callable or None
+        Looked at before each tick; when it says so, the run ends with a KeyboardInterrupt there.
     """
 
     def __init__(
@@ -105,19 +107,24 @@ class Session:
         external: bool = False,
         on_event: Callable[[Event], None] | None = None,
         on_look: Callable[[Session], None] | None = None,
+        stop_asked: Callable[[], bool] | None = None,
     ) -> None:
         self.engine = engine
         self.rig = engine.rig
         self.external = external
         self.points = points_of(engine.rig, external)
         self.refusals = 0
+        self.last_refusal = ""
+        self.connected: dict[tuple[str, int], str] = {}
         self.rows_taken = 0
         self.last_writer: dict[str, Contact] = {}
         self.last_reader: dict[str, Contact] = {}
+        self.losses: dict[str, str] = {}
         self._recorder = recorder
         self._pacing = pacing
         self._on_event = on_event
         self._on_look = on_look
+        self._stop_asked = stop_asked
         self._image = ImageValues(engine, self.points)
         self._by_name = {point.name: point for point in self.points}
         pace = pacing.pace if pacing else 1.0
@@ -263,6 +270,8 @@ class Session:
         ------
         InvalidRunError
             When the run cannot be judged: controller silent, links gone.
+        KeyboardInterrupt
+            When a stop was asked for; the tick before it is whole.
         """
         answer: object = None
         try:
@@ -288,6 +297,7 @@ class Session:
             The rows.
         """
         if self._pacing is None:
+            self._heed_stop()
             first = self.tick
             rows = self.engine.record(ticks)
             self.rows_taken += ticks
@@ -303,12 +313,11 @@ class Session:
 
     def hand_over(self) -> None:
         """Give all rows that were kept back to the recorder."""
-        if self._kept and self._recorder is not None:
-            self._recorder.rows(
-                0, self._kept_first, np.array(self._kept), np.array(self._kept_lateness)
-            )
-        self._kept.clear()
-        self._kept_lateness.clear()
+        rows, lateness = self._kept, self._kept_lateness
+        # Let go of first: should the recorder fail, they are not handed over a second time.
+        self._kept, self._kept_lateness = [], []
+        if rows and self._recorder is not None:
+            self._recorder.rows(0, self._kept_first, np.array(rows), np.array(lateness))
 
     def image(self) -> dict[str, tuple[Point, float, float, float]]:
         """Return every point with its value, current and quality, for people to look at."""
@@ -343,6 +352,7 @@ class Session:
                 first_tick=tick,
             )
         late_ns = clock.wait_until(self._schedule.deadline_ns(tick))
+        self._heed_stop()
         if pacing.links is not None:
             pacing.links.publish(tick, *self._image.take())
             news = pacing.links.drain()
@@ -357,6 +367,10 @@ class Session:
             self._last_look_ns = now_ns
             self._on_look(self)
         return row
+
+    def _heed_stop(self) -> None:
+        if self._stop_asked is not None and self._stop_asked():
+            raise KeyboardInterrupt
 
     def _keep(self, tick: int, row: Floats, lateness: float, now_ns: int) -> None:
         if self._recorder is None:
@@ -393,11 +407,13 @@ class Session:
         loop = self._loop_of_output.get(exchange.point)
         if loop is not None:
             watch = self.watches[loop.tag]
+            before = watch.peer
             if watch.output_written(exchange):
                 self.event(
                     EventKind.CONTROLLER_FOUND,
                     loop.tag,
-                    f"{watch.peer} writes {loop.output}",
+                    f"{watch.peer} writes {loop.output}"
+                    + (f", which {before} wrote before" if before else ""),
                     {"link": exchange.link, "peer": exchange.peer},
                 )
             self.engine.set_output(loop.output, exchange.value / 100.0)
@@ -413,10 +429,16 @@ class Session:
             LinkEventKind.GONE: EventKind.PEER_GONE,
             LinkEventKind.REFUSED: EventKind.REFUSED,
         }
-        if event.kind is LinkEventKind.REFUSED:
-            self.refusals += event.count
         times = f" ({event.count} times)" if event.count > 1 else ""
         text = f"{event.peer}: {event.text}{times}" if event.text else event.peer
+        match event.kind:
+            case LinkEventKind.REFUSED:
+                self.refusals += event.count
+                self.last_refusal = text
+            case LinkEventKind.CONNECTED:
+                self.connected[event.link, event.connection] = event.peer
+            case LinkEventKind.GONE:
+                self.connected.pop((event.link, event.connection), None)
         self.event(kinds[event.kind], event.link, text, {"connection": event.connection})
 
     def _watch_controllers(self, now_ns: int) -> None:
@@ -434,22 +456,13 @@ class Session:
         if valve.fail_position is not None:
             self.engine.set_output(valve.tag, valve.fail_position)
             where = f"goes to {100 * valve.fail_position:g} %"
-        self.event(EventKind.CONTROLLER_SILENT, loop.tag, f"{why}; {valve.tag} {where}")
+        text = f"{why}; {valve.tag} {where}"
+        self.losses[loop.tag] = text
+        self.event(EventKind.CONTROLLER_SILENT, loop.tag, text)
 
 
 def _short(value: object) -> str:
     return f"{value:.5g}" if isinstance(value, float) else str(value)
-
-
-def silent_loops(session: Session) -> str:
-    """Return the loops whose controller is lost, as text; empty when there is none.
-
-    Parameters
-    ----------
-    session : Session
-        The session.
-    """
-    return ", ".join(tag for tag, watch in session.watches.items() if watch.silent)
 
 
 def require_controllers(session: Session) -> None:
@@ -465,9 +478,13 @@ def require_controllers(session: Session) -> None:
     InvalidRunError
         When a loop's controller is silent.
     """
-    lost = silent_loops(session)
+    lost = [
+        f"loop {tag}: {session.losses[tag]}"
+        for tag, watch in session.watches.items()
+        if watch.silent
+    ]
     if lost:
         raise InvalidRunError(
-            f"the controller of {lost} fell silent; what it would have done cannot be judged. "
-            "See the events of the run for when and why"
+            f"{'; '.join(lost)}. What the controller would have done cannot be judged: see whether "
+            "it still scans and its link still holds, and run again"
         )

@@ -36,7 +36,7 @@ if TYPE_CHECKING:
 
     Floats = NDArray[np.float64]
 
-_WAIT_FOR_CONTROLLER = 30.0  # wall seconds for a controller to be found or to take an order [s]
+WAIT_FOR_CONTROLLER = 30.0  # for a controller to be found or to take an order [wall s]
 _LEAD_IN = 30  # rows before a step that a fit gets to see the start from [ticks]
 _CONFIDENCE = 0.95  # of the limits of a fit [-]
 
@@ -56,7 +56,7 @@ class _LoopWork:
     load_record: list[Floats] = field(default_factory=list)
 
 
-def trial_script(session: Session, trial: Trial) -> Script:
+def trial_script(session: Session, trial: Trial, wait: float = WAIT_FOR_CONTROLLER) -> Script:
     """Return the script of a trial.
 
     Parameters
@@ -65,20 +65,23 @@ def trial_script(session: Session, trial: Trial) -> Script:
         Who carries it out.
     trial : Trial
         The trial.
+    wait : float
+        Longest wait for an external controller to be there, and to take an order [wall s].
 
     Yields
     ------
     Request
         Time to pass, and computations.
     """
-    runner = _TrialRunner(session, trial)
+    runner = _TrialRunner(session, trial, wait)
     yield from runner.run()
 
 
 class _TrialRunner:
-    def __init__(self, session: Session, trial: Trial) -> None:
+    def __init__(self, session: Session, trial: Trial, wait: float) -> None:
         self._session = session
         self._trial = trial
+        self._wait = wait
         self._columns = [column.name for column in session.engine.columns]
         self._works: dict[str, _LoopWork] = {}
 
@@ -113,28 +116,42 @@ class _TrialRunner:
             return
         for tag in dict.fromkeys(phase.loop for phase in self._trial.phases):
             watch = session.watches[tag]
-            loop = session.rig.loop(tag)
+            output = session.rig.loop(tag).output
+            if not watch.found:
+                text = f"waiting up to {self._wait:g} s for a controller to write {output}"
+                session.event(EventKind.NOTE, tag, text)
             waited = 0
             while not watch.found:
-                if waited * session.rig.tick / session.pace > _WAIT_FOR_CONTROLLER:
-                    raise InvalidRunError(
-                        f"loop {tag}: no controller wrote {loop.output} within "
-                        f"{_WAIT_FOR_CONTROLLER:g} s; start the controller, and check host, port, "
-                        "unit and the address it writes to"
-                    )
+                if waited * session.rig.tick / session.pace > self._wait:
+                    raise InvalidRunError(self._nobody(tag, output))
                 yield Advance(ticks=1)
                 waited += 1
+
+    def _nobody(self, tag: str, output: str) -> str:
+        session = self._session
+        links = ", ".join(link.name for link in session.rig.links)
+        seen = "nobody is connected"
+        if session.connected:
+            seen = f"connected: {', '.join(session.connected.values())}"
+        if session.last_refusal:
+            seen += f"; last refused: {session.last_refusal}"
+        return (
+            f"loop {tag}: no controller wrote {output} over {links} within {self._wait:g} s; {seen}. "
+            "Start the controller, check host, port, unit and the address that it writes to, or "
+            "give it longer with --wait"
+        )
 
     def _known(self, loop: Loop, order: int) -> Generator[Request, Any, list[Floats]]:
         """Wait until the controller is known to have an order; return the rows until then."""
         session = self._session
         rows: list[Floats] = []
         while not session.knows(loop, order):
-            if len(rows) * session.rig.tick / max(session.pace, 1e-9) > _WAIT_FOR_CONTROLLER:
+            if len(rows) * session.rig.tick / max(session.pace, 1e-9) > self._wait:
                 raise InvalidRunError(
-                    f"loop {loop.tag}: the controller did not read the order of tick {order} "
-                    f"within {_WAIT_FOR_CONTROLLER:g} s, though it is alive; does it read setpoint, "
-                    "mode and manual output from the rig?"
+                    f"loop {loop.tag}: the controller wrote {loop.output} without having read the "
+                    f"rig since the order of tick {order}, for {self._wait:g} s; have it read "
+                    "setpoint, mode, manual output and settings in every scan, on the connection "
+                    "that it writes on"
                 )
             rows.append((yield Advance(ticks=1)))
             require_controllers(session)
