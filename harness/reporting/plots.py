@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import io
 import re
-from itertools import pairwise
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -28,13 +27,16 @@ STYLES: dict[str, dict[str, Any]] = {
         "linewidth": 1.2,
         "linestyle": (0, (5, 1.4, 1, 1.4)),
     },
-    "design_target": {"color": FAINT, "linewidth": 0.9, "linestyle": (0, (2, 2))},
+    "design_target": {"color": FAINT, "linewidth": 0.9, "linestyle": (0, (7, 3))},
     "load": {"color": "#009e73", "linewidth": 1.1, "linestyle": (0, (8, 1.5, 2, 1.5))},
 }
 ORDER = ("transmitted", "design_target", "predicted_linear", "measured", "predicted_nonlinear")
 BAND_COLOUR = "#e4ebe6"
 MOST_POINTS = 1200  # of a curve; more than the pixels it is printed with
+LATE = 0.8  # of the time drawn; a word on the right of what is later would not fit
 WIDTH, HEIGHT = 7.1, 3.75  # [inch]; the printable width of A4
+# Where the axes stand; a layout that is worked out instead doubles the time of a drawing.
+PLACE = {"left": 0.085, "right": 0.985, "top": 0.985, "bottom": 0.115, "hspace": 0.07}
 SETTINGS: dict[Any, Any] = {
     "svg.fonttype": "none",  # text stays text: it can be searched and read aloud
     "font.family": "sans-serif",
@@ -53,7 +55,12 @@ SETTINGS: dict[Any, Any] = {
 }
 
 
-def phase_drawing(curves: PhaseCurves, settled: float | None = None) -> str:
+def phase_drawing(
+    curves: PhaseCurves,
+    settled: float | None = None,
+    *,
+    process_variable: str = "Process variable",
+) -> str:
     """Return the drawing of one phase: process variable above, outputs beneath.
 
     Parameters
@@ -62,6 +69,8 @@ def phase_drawing(curves: PhaseCurves, settled: float | None = None) -> str:
         Curves; those without any finite value are left out.
     settled : float or None
         Measured settling time into the band drawn, to be marked [s].
+    process_variable : str
+        What to write at its axis.
 
     Returns
     -------
@@ -73,11 +82,14 @@ def phase_drawing(curves: PhaseCurves, settled: float | None = None) -> str:
     from matplotlib.figure import Figure  # noqa: PLC0415
 
     with rc_context({**SETTINGS, "svg.hashsalt": f"phase {curves.name}"}):
-        figure = Figure(figsize=(WIDTH, HEIGHT), layout="constrained")
-        grid = {"height_ratios": [2.5, 1.0], "hspace": 0.02}
+        figure = Figure(figsize=(WIDTH, HEIGHT))
+        grid = {"height_ratios": [2.5, 1.0], **PLACE}
         upper, lower = figure.subplots(2, 1, sharex=True, gridspec_kw=grid)
         _draw_process_variable(upper, curves, settled)
         _draw_outputs(lower, curves)
+        upper.set_ylabel(f"{process_variable} [{curves.unit}]")
+        lower.set_ylabel("Valves [%]")
+        figure.align_ylabels((upper, lower))
         for axes in (upper, lower):
             _frame(axes, curves.time)
         buffer = io.StringIO()
@@ -125,15 +137,18 @@ def thinned(
         Points of the curve, in order and in the same units.
     """
     count = time.size
-    if count <= most:
+    size = -(-2 * count // most)
+    if size <= 2:  # noqa: PLR2004  least and greatest of two are both
         return time, values
-    edges = np.linspace(0, count, most // 2 + 1).astype(int)
-    kept = {0, count - 1}
-    for start, end in pairwise(edges):
-        part = values[start:end]
-        if np.isfinite(part).any():
-            kept.update((start + int(np.nanargmin(part)), start + int(np.nanargmax(part))))
-    order = np.array(sorted(kept))
+    bins = -(-count // size)
+    padded = np.full(bins * size, np.nan)
+    padded[:count] = values
+    table = padded.reshape(bins, size)
+    known = np.isfinite(table)
+    starts = size * np.flatnonzero(known.any(axis=1))
+    least = np.where(known, table, np.inf).argmin(axis=1)[known.any(axis=1)]
+    greatest = np.where(known, table, -np.inf).argmax(axis=1)[known.any(axis=1)]
+    order = np.unique(np.concatenate((starts + least, starts + greatest, [0, count - 1])))
     return time[order], values[order]
 
 
@@ -158,15 +173,16 @@ def _draw_process_variable(axes: Any, curves: PhaseCurves, settled: float | None
         if has_values(values):
             axes.plot(*thinned(curves.time, values), **STYLES[name])
     axes.plot(curves.time, curves.setpoint, drawstyle="steps-post", **STYLES["setpoint"])
-    axes.set_ylabel(f"Process variable [{curves.unit}]")
     if settled is not None and 0 <= settled <= curves.time[-1]:
         axes.axvline(settled, color=FAINT, linewidth=0.7, zorder=1)
+        late = settled > LATE * curves.time[-1]
         axes.annotate(
-            "measured: settled",
+            f"settled at {settled:.1f} s",
             (settled, 1.0),
             xycoords=("data", "axes fraction"),
-            xytext=(3, -9),
+            xytext=(-3 if late else 3, -9),
             textcoords="offset points",
+            horizontalalignment="right" if late else "left",
             fontsize=7.5,
             color="#56616c",
         )
@@ -181,7 +197,6 @@ def _draw_outputs(axes: Any, curves: PhaseCurves) -> None:
     for name, values in drawn.items():
         if has_values(values):
             axes.plot(*thinned(curves.time, 100.0 * values), **STYLES[name])
-    axes.set_ylabel("Output [%]")
     axes.set_xlabel("Time since metric time zero [s]")
 
 

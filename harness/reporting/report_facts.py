@@ -1,50 +1,69 @@
-"""The part of the report that states facts: conditions, models, tuning, lateness, events."""
+"""The part of the report that states facts: conditions, models, tuning, margins."""
 
 from __future__ import annotations
 
+import hashlib
 import math
 from typing import TYPE_CHECKING
 
 from harness.reporting.document import Document, named_parts, number, numbers, part, text
 from harness.reporting.markup import Markup, element, joined, table
-from harness.reporting.words import figure, humanised, quantity
+from harness.reporting.report_front import BUILT_IN, utc_words
+from harness.reporting.words import duration, figure, humanised, quantity, shown_unit
 
 if TYPE_CHECKING:
-    from collections.abc import Iterator, Mapping, Sequence
+    from collections.abc import Iterator, Mapping
 
-    from harness.domain.run import Event, RunHeader
+    from harness.domain.run import RunHeader
 
-MOST_EVENTS = 200  # in the report; the record holds all
 CONDITION_UNITS = {"tick": "s", "scan": "s", "period": "s", "delay": "s"}
 NO_FIGURE = "\N{EN DASH}"
 PATHS = {"output": "controller output to process variable", "load": "load to process variable"}
 PARAMETERS = {
-    "gain": ("Gain", "% of span per % of output"),
-    "gain_engineering": ("Gain", "engineering units"),
     "total_lag": ("Total lag, dead time included", "s"),
+    "gain": ("Gain", "%/%"),
+    "gain_engineering": ("Gain, engineering units", ""),
     "time_constant_1": ("Time constant 1", "s"),
     "time_constant_2": ("Time constant 2", "s"),
     "dead_time": ("Dead time", "s"),
 }
+SOURCES = {
+    "identified": "Identified from the steps in manual",
+    "linearised": "Linearised plant at the operating point; nothing was identified",
+    "given": "Given in the trial file",
+}
+CONTROLLERS = {BUILT_IN: "the rig's own reference block"}
+TOLD = {  # conditions that the table says in its own words
+    *("started_utc", "controller", "clock", "pace", "tick", "seed"),
+    *("rows", "duration", "end", "versions", "run"),
+}
+DIGEST = 16  # of the 64 characters of a file's digest: enough to tell two files apart
 
 
 def conditions(document: Mapping[str, object], header: RunHeader) -> Markup:
     """Return the table of what the run ran under."""
+    told = part(document, "conditions")
     facts: dict[str, str] = {
         "Run": header.run,
-        "Started (UTC)": header.started_utc,
-        "Clock": header.clock,
-        "Pace": _pace(header.pace),
+        "Started": utc_words(header.started_utc),
+        "Controller": CONTROLLERS.get(header.controller, header.controller),
+        "Clock": _clock(header),
         "Tick": f"{header.tick:g} s",
         "Seed of the noise": str(header.seed),
-        "Controller": header.controller,
-        "Versions": ", ".join(f"{name} {version}" for name, version in header.versions.items()),
     }
+    covered, rows = number(told, "duration"), number(told, "rows")
+    if covered is not None and rows is not None:
+        facts["Plant time recorded"] = f"{duration(covered)} in {rows:.0f} rows"
+    if told.get("end"):
+        facts["Run ended"] = text(told, "end")
     facts |= {humanised(name): value for name, value in header.extra.items()}
-    for name, value in part(document, "conditions").items():
-        title = humanised(name)
-        if title not in facts and name not in {"seed", "versions", "run"}:
-            facts[title] = _condition(name, value)
+    for name, value in told.items():
+        if name not in TOLD:
+            facts[humanised(name)] = _condition(name, value)
+    facts["Rig file, SHA-256 from"] = _digest(header.rig_text)
+    if header.trial_text:
+        facts["Trial file, SHA-256 from"] = _digest(header.trial_text)
+    facts["Versions"] = ", ".join(f"{name} {item}" for name, item in header.versions.items())
     return table((), list(facts.items()), css="facts")
 
 
@@ -59,49 +78,24 @@ def loop_sections(document: Mapping[str, object]) -> Markup:
             pieces.append(element("p", "No models were used.", css="note"))
         tuning = part(loop, "tuning")
         if tuning:
-            pieces += [element("h3", f"{tag}: controller settings"), _tuning_tables(tuning)]
+            pieces += [
+                element("h3", f"{tag}: controller settings"),
+                _tuning_tables(tuning, loop),
+            ]
         sections.append(Markup(f'<section class="loop">{joined(pieces)}</section>'))
     return joined(sections)
 
 
-def lateness(document: Mapping[str, object]) -> Markup:
-    """Return how late the ticks were, or that there was no clock to be late against."""
-    facts = part(document, "lateness")
-    if not facts:
-        return element("p", "The run was in virtual time: no tick can be late.")
-    rows = [
-        [title, _milliseconds(number(facts, key))]
-        for key, title in (("p50", "Median"), ("p99", "99 of 100 within"), ("max", "Greatest"))
-    ]
-    rows.append(["Ticks later than half a scan", quantity(number(facts, "late_fraction"), "1")])
-    return table((), rows, css="facts narrow")
+def _clock(header: RunHeader) -> str:
+    """Return how plant time passed."""
+    if header.pace <= 0:
+        return "virtual time: as fast as it goes"
+    return f"{header.clock}, {header.pace:g} plant seconds per second"
 
 
-def event_table(events: Sequence[Event], tick: float) -> Markup:
-    """Return the events with their plant time.
-
-    Parameters
-    ----------
-    events : sequence of Event
-        Events, in order.
-    tick : float
-        Step of the rig [s].
-    """
-    if not events:
-        return element("p", "None were recorded.")
-    rows = [
-        [f"{event.tick * tick:.1f}", str(event.kind), event.subject, event.text]
-        for event in events[:MOST_EVENTS]
-    ]
-    listed = table(("Plant time [s]", "Event", "Subject", "What"), rows, css="events")
-    if len(events) <= MOST_EVENTS:
-        return listed
-    words = f"{len(events) - MOST_EVENTS} more events are in the record."
-    return joined((listed, element("p", words, css="note")))
-
-
-def _pace(pace: float) -> str:
-    return f"{pace:g} plant seconds per second" if pace > 0 else "as fast as it goes"
+def _digest(text: str) -> str:
+    """Return the start of a file's digest, by which the file as used is known again."""
+    return hashlib.sha256(text.encode("utf-8")).hexdigest()[:DIGEST]
 
 
 def _condition(name: str, value: object) -> str:
@@ -116,31 +110,62 @@ def _condition(name: str, value: object) -> str:
 
 
 def _model_table(path: str, model: Document) -> Markup:
-    linearised = part(model, "linearised")
+    """Return the parameters of a path: model, its limits, and the linearised plant beside it."""
     limits = named_parts(model, "limits")
-    levels = {number(limit, "level") for limit in limits.values()} - {None}
-    level = f"{100 * max(item for item in levels if item):g} % limits" if levels else "limits"
+    identified = text(model, "source") != "linearised"
+    linearised = part(model, "linearised") if identified else {}
     here, there = _parameters(model), _parameters(linearised)
     rows = []
     for name, (title, unit) in PARAMETERS.items():
         if name not in here and name not in there:
             continue
-        limit = limits.get(name, {})
-        low, high = number(limit, "low"), number(limit, "high")
-        known = low is not None and high is not None
-        rows.append(
-            [
-                title,
-                unit,
-                element("b", figure(here.get(name), NO_FIGURE)),
-                f"{figure(low)} to {figure(high)}" if known else NO_FIGURE,
-                figure(there.get(name), NO_FIGURE),
-                _difference(here.get(name), there.get(name)),
-            ]
-        )
-    titles = ("Parameter", "Unit", "Model used", level, "Linearised plant", "Difference")
+        shown = text(model, "gain_engineering_unit") if name == "gain_engineering" else unit
+        row: list[object] = [
+            title,
+            shown_unit(shown),
+            element("b", figure(here.get(name), NO_FIGURE)),
+        ]
+        if limits:
+            row.append(_limits(limits.get(name, {})))
+        if linearised:
+            row.append(figure(there.get(name), NO_FIGURE))
+            row.append(_difference(here.get(name), there.get(name), unit))
+        rows.append(row)
+    titles = ["Parameter", "Unit", "Model used"]
+    titles += [_limits_title(limits)] if limits else []
+    titles += ["Linearised plant", "Difference"] if linearised else []
     caption = element("h4", f"From {PATHS.get(path, path)}")
-    return Markup(f'<div class="together">{caption}{table(titles, rows, css="model")}</div>')
+    listed = table(titles, rows, css="model" if limits or linearised else "model narrow")
+    note = element("p", _model_note(model), css="note")
+    return Markup(f'<div class="together">{caption}{listed}{note}</div>')
+
+
+def _model_note(model: Document) -> str:
+    """Return where a model comes from, and what it is worth."""
+    source = text(model, "source")
+    words = SOURCES.get(source, humanised(source))
+    samples, residual = number(model, "samples"), number(model, "residual_rms")
+    if samples is not None and residual is not None:
+        words += f": {samples:.0f} samples, residuals {quantity(residual, '1')} of span rms"
+    words = f"{words}. " if words else ""
+    if len(numbers(model, "time_constants")) > 1 and named_parts(model, "limits"):
+        words += (
+            "The total lag is well determined; how it divides into time constants and dead time "
+            "is less so, as the limits say."
+        )
+    return words
+
+
+def _limits_title(limits: Mapping[str, Document]) -> str:
+    levels = [level for limit in limits.values() if (level := number(limit, "level"))]
+    return f"{100 * max(levels):g} % limits" if levels else "Limits"
+
+
+def _limits(limit: Mapping[str, object]) -> str:
+    low, high = number(limit, "low"), number(limit, "high")
+    if low is None or high is None:
+        return NO_FIGURE
+    return f"{figure(low)} to {figure(high)}"
 
 
 def _parameters(model: Mapping[str, object]) -> dict[str, float]:
@@ -156,26 +181,29 @@ def _parameters(model: Mapping[str, object]) -> dict[str, float]:
     return {name: value for name, value in found.items() if value is not None}
 
 
-def _difference(value: float | None, reference: float | None) -> str:
-    if value is None or reference is None or reference == 0:
+def _difference(value: float | None, reference: float | None, unit: str) -> str:
+    """Return how far a parameter is from the linearised plant's: times in s, gains in per cent."""
+    if value is None or reference is None:
         return NO_FIGURE
-    return f"{100 * (value / reference - 1):+.1f} %"
+    if unit == "s":
+        return f"{value - reference:+.1f} s"
+    return f"{100 * (value / reference - 1):+.1f} %" if reference else NO_FIGURE
 
 
-def _tuning_tables(tuning: Mapping[str, object]) -> Markup:
+def _tuning_tables(tuning: Mapping[str, object], loop: Mapping[str, object]) -> Markup:
+    pieces = [table((), list(_settings(tuning)), css="facts")]
     rule = text(tuning, "rule")
-    aim = number(tuning, "closed_loop_time")
-    words = f"{text(tuning, 'law')} block, {text(tuning, 'action')} acting".strip(", ")
-    if aim is not None:
-        words += f", for a closed-loop time constant of {figure(aim)} s"
     if rule:
-        words += f". Rule: {rule}"
-    pieces = [element("p", words + ".")]
-    pieces.append(table((), list(_settings(tuning)), css="facts"))
+        greek = rule.replace("theta", "θ").replace("tau", "τ")
+        pieces.append(element("p", f"Rule: {greek}.", css="note"))
     margins = list(_margins(part(tuning, "margins")))
     if margins:
-        pieces += [element("h4", "Margins of the loop with these settings")]
-        pieces.append(table((), margins, css="facts"))
+        scan = part(loop, "controller")
+        period, delay = number(scan, "period"), number(scan, "delay")
+        title = "Margins of the loop with these settings"
+        if period is not None and delay is not None:
+            title += f", sampled every {figure(period)} s with a delay of {figure(delay)} s"
+        pieces += [element("h4", title), table((), margins, css="facts")]
     return Markup(f'<div class="together">{joined(pieces)}</div>')
 
 
@@ -183,19 +211,35 @@ def _settings(tuning: Mapping[str, object]) -> Iterator[tuple[str, str]]:
     """Yield the settings in the forms in which controllers ask for them."""
     gain, integral = number(tuning, "gain"), number(tuning, "integral_time")
     engineering = number(tuning, "gain_engineering")
+    form = text(tuning, "form")
+    yield "Control law", f"{text(tuning, 'law')}, {form} form" if form else text(tuning, "law")
+    yield "Action", text(tuning, "action") or NO_FIGURE
     if gain is not None:
         yield "Gain", f"{figure(gain)} % of output per % of span"
         if engineering is not None:
-            yield "Gain, engineering units", figure(engineering)
+            unit = shown_unit(text(tuning, "gain_engineering_unit"))
+            yield "Gain, engineering units", f"{figure(engineering)} {unit}".rstrip()
         if gain != 0:
             yield "Proportional band", f"{figure(100 / abs(gain))} % of span"
     if integral is None or integral == 0:
         yield "Integral action", "none"
-        return
-    yield "Integral time", f"{figure(integral)} s = {figure(integral / 60)} min"
-    yield "Integral rate", f"{figure(60 / integral)} repeats per minute"
-    if gain is not None:
-        yield "Integral gain (parallel form)", f"{figure(gain / integral)} 1/s"
+    else:
+        yield "Integral time", f"{figure(integral)} s = {figure(integral / 60)} min"
+        yield "Integral rate", f"{figure(60 / integral)} repeats per minute"
+        if gain is not None:
+            yield "Integral gain (parallel form)", f"{figure(gain / integral)} %/% per s"
+    yield "Derivative action", "none"
+    aim = number(tuning, "closed_loop_time")
+    if aim is not None:
+        yield "Closed-loop time constant asked for", f"{figure(aim)} s"
+    reduced = _parameters(part(tuning, "reduced"))
+    if reduced:
+        lag = figure(reduced.get("time_constant_1"))
+        dead = figure(reduced.get("dead_time"))
+        words = (
+            f"gain {figure(reduced.get('gain'))} %/%, time constant {lag} s, dead time {dead} s"
+        )
+        yield "Reduced model the rule works on", words
 
 
 def _margins(margins: Mapping[str, object]) -> Iterator[tuple[str, str]]:
@@ -212,7 +256,3 @@ def _margins(margins: Mapping[str, object]) -> Iterator[tuple[str, str]]:
     peak = number(margins, "ms")
     if peak is not None:
         yield "Greatest sensitivity Ms", figure(peak)
-
-
-def _milliseconds(seconds: float | None) -> str:
-    return NO_FIGURE if seconds is None else f"{figure(1000 * seconds)} ms"

@@ -9,15 +9,12 @@ from harness.reporting.document import named_parts, number, part, parts, text, t
 from harness.reporting.markup import Markup, badge, element, gauge, joined, table
 from harness.reporting.plots import has_values, line_sample, phase_drawing
 from harness.reporting.words import (
-    duration,
-    figure,
     figure_in,
     humanised,
     limit_words,
     metric_title,
     metric_words,
     outcome_of,
-    quantity,
     shown_unit,
 )
 
@@ -35,44 +32,22 @@ LEGEND = {
     "setpoint": "setpoint",
     "load": "load valve",
 }
-GLANCE = (("settling_time_2",), ("overshoot", "peak_deviation"), ("iae",), ("offset",))
-
-
-def phase_overview(document: Mapping[str, object]) -> Markup:
-    """Return the table of all phases with their main figures and verdicts."""
-    rows, kinds = [], []
-    for phase in parts(document, "phases"):
-        metrics = named_parts(phase, "metrics")
-        start, end = number(phase, "start"), number(phase, "end")
-        length = duration(end - start) if start is not None and end is not None else ""
-        cells = [_first_measured(metrics, names) for names in GLANCE]
-        what = f"{humanised(text(phase, 'kind')).lower()}, {text(phase, 'mode')}"
-        verdict = badge(text(phase, "verdict") or Outcome.SHOWN)
-        rows.append([text(phase, "name"), what, length, *cells, verdict])
-        kinds.append("" if metrics else "unscored")
-    titles = (
-        "Phase",
-        "What",
-        "Duration",
-        "Settling, 2 %",
-        "Overshoot or peak",
-        "IAE",
-        "Offset",
-    )
-    return table((*titles, "Verdict"), rows, css="overview", row_css=kinds)
 
 
 def phase_sections(document: Mapping[str, object], curves: Sequence[PhaseCurves]) -> Markup:
     """Return a section for each phase that has curves or metrics."""
     drawn = {item.name: item for item in curves}
+    loops = part(document, "loops")
     return joined(
-        _phase_section(phase, drawn.get(text(phase, "name")))
+        _phase_section(phase, drawn.get(text(phase, "name")), part(loops, text(phase, "loop")))
         for phase in parts(document, "phases")
         if text(phase, "name") in drawn or named_parts(phase, "metrics")
     )
 
 
-def _phase_section(phase: Mapping[str, object], curves: PhaseCurves | None) -> Markup:
+def _phase_section(
+    phase: Mapping[str, object], curves: PhaseCurves | None, loop: Mapping[str, object]
+) -> Markup:
     metrics = named_parts(phase, "metrics")
     title = element(
         "h3",
@@ -86,29 +61,43 @@ def _phase_section(phase: Mapping[str, object], curves: PhaseCurves | None) -> M
     if curves is not None:
         settled = number(part(metrics, "settling_time_2"), "measured")
         pieces += [
-            _legend(curves),
-            Markup(f'<div class="plot">{phase_drawing(curves, settled)}</div>'),
+            _legend(curves, text(loop, "load")),
+            Markup(f'<div class="plot">{phase_drawing(curves, settled, **_tags(loop))}</div>'),
         ]
     pieces += [Markup("</div>"), _metrics_table(metrics) if metrics else Markup("")]
     return Markup(f'<section class="phase">{joined(pieces)}</section>')
 
 
+def _tags(loop: Mapping[str, object]) -> dict[str, str]:
+    """Return what to write at the upper axis, where the document has its tag."""
+    name = text(loop, "process_variable")
+    return {"process_variable": name} if name else {}
+
+
 def _when(phase: Mapping[str, object]) -> str:
     kind = humanised(text(phase, "kind"))
+    change = number(phase, "change")
+    kind += f" of {100 * change:+.3g} %" if change else ""
     mode = text(phase, "mode")
     words = [f"{kind}, controller in {mode}" if mode else kind]
     start, zero, end = (number(phase, key) for key in ("start", "zero", "end"))
     if start is not None and end is not None:
-        words.append(f"plant time {figure(start)} s to {figure(end)} s")
+        words.append(f"plant time {start:.1f} s to {end:.1f} s")
     if zero is not None:
-        words.append(f"metric time zero at {figure(zero)} s")
+        words.append(f"metric time zero at {zero:.1f} s")
     return "; ".join(words) + "."
 
 
-def _legend(curves: PhaseCurves) -> Markup:
+def _legend(curves: PhaseCurves, load: str) -> Markup:
     shown = [name for name in LEGEND if has_values(getattr(curves, name))]
     items = [
-        element("span", Markup(line_sample(name)), LEGEND[name], css="key") for name in shown
+        element(
+            "span",
+            Markup(line_sample(name)),
+            f"{LEGEND[name]} {load}".rstrip() if name == "load" else LEGEND[name],
+            css="key",
+        )
+        for name in shown
     ]
     if curves.band > 0:
         swatch = Markup('<span class="swatch"></span>')
@@ -170,11 +159,3 @@ def _bases(metrics: Mapping[str, Mapping[str, object]]) -> Markup:
         "dot the measurement. Errors under the integrals are fractions of span."
     )
     return element("p", "Limits. " + " ".join(words) + gauge_words, css="note")
-
-
-def _first_measured(metrics: Mapping[str, Mapping[str, object]], names: tuple[str, ...]) -> str:
-    for name in names:
-        value = number(metrics.get(name, {}), "measured")
-        if value is not None:
-            return quantity(value, text(metrics[name], "unit"))
-    return "not reached" if metrics else ""

@@ -67,7 +67,15 @@ SIGNS = {
     Outcome.SHOWN: "·",
 }
 
-UNITS = {"1": "%", "s^2": "s²", "m3/h": "m³/h", "m3/s": "m³/s", "m3": "m³"}
+UNITS = {
+    "1": "%",
+    "s^2": "s²",
+    "m3/h": "m³/h",
+    "m3/s": "m³/s",
+    "m3": "m³",
+    "m3/h/%": "m³/h per %",
+    "%/m3/h": "% per m³/h",
+}
 
 
 def outcome_of(text: str) -> Outcome:
@@ -96,7 +104,7 @@ def humanised(name: str) -> str:
     return words[:1].upper() + words[1:]
 
 
-def figure(value: float | None, missing: str = NOT_REACHED) -> str:
+def figure(value: float | None, missing: str = NOT_REACHED, digits: int = DIGITS) -> str:
     """Return a number with four significant digits, or a word where there is none.
 
     Parameters
@@ -105,6 +113,8 @@ def figure(value: float | None, missing: str = NOT_REACHED) -> str:
         The number [any unit]; None and what is not finite give ``missing``.
     missing : str
         The word.
+    digits : int
+        Significant digits [-].
     """
     if value is None or not math.isfinite(value):
         return missing
@@ -112,10 +122,10 @@ def figure(value: float | None, missing: str = NOT_REACHED) -> str:
         return "0"
     size = abs(value)
     if not SMALLEST_PLAIN <= size < LARGEST_PLAIN:
-        return f"{value:.{DIGITS - 1}e}"
-    decimals = DIGITS - 1 - math.floor(math.log10(size))
+        return f"{value:.{digits - 1}e}"
+    decimals = digits - 1 - math.floor(math.log10(size))
     rounded = round(value, decimals)
-    decimals = DIGITS - 1 - math.floor(math.log10(abs(rounded)))  # 9.9996 became 10.00
+    decimals = digits - 1 - math.floor(math.log10(abs(rounded)))  # 9.9996 became 10.00
     return f"{rounded:.{max(0, decimals)}f}"
 
 

@@ -12,6 +12,7 @@ import pytest
 from harness.domain.run import Event, EventKind
 from harness.reporting.html import render_report
 from harness.reporting.markup import gauge
+from harness.reporting.report_timing import event_table
 from harness.reporting.words import CAUTIONS
 
 VOID = {"meta", "br"}
@@ -110,7 +111,7 @@ def test_everything_an_engineer_asks_for_is_there(page, header):
         "65.49 % of span",  # 100 / 1.527
         "0.3681 repeats per minute",  # 60 / 163
         "163.0 s = 2.717 min",
-        "0.009368 1/s",  # 1.527 / 163
+        "0.009368 %/% per s",  # 1.527 / 163
         "factor 4.610 = 13.27 dB",  # 20 log10 4.61
         "Skogestad",
         "506.2",
@@ -203,9 +204,74 @@ def test_curves_without_values_are_left_out_and_long_ones_stay_small(
 
 
 def test_many_events_are_cut_with_a_word(document, header):
-    event = Event(tick=1, kind=EventKind.NOTE, subject="s", text="t")
-    text = read(render_report(document, [], [event] * 250, header)).text
+    events = [Event(tick=i, kind=EventKind.NOTE, subject="s", text=f"t{i}") for i in range(250)]
+    text = read(render_report(document, [], events, header)).text
     assert "50 more events are in the record" in text
+
+
+def test_the_same_event_over_and_over_takes_one_line(header):
+    events = [
+        Event(tick=i, kind=EventKind.REFUSED, subject="modbus", text="no such address")
+        for i in range(40)
+    ]
+    events.append(Event(tick=41, kind=EventKind.ORDER_KNOWN, subject="x", text="known at once"))
+    text = read(event_table(events, header.tick)).text
+    assert text.count("no such address") == 1
+    assert "(39 more times, last at 19.5 s)" in text  # the 40th at tick 39 of 0.5 s
+    assert "known at once" not in text
+
+
+def test_the_title_block_fills_in_what_is_known_and_leaves_the_rest(page, document, header):
+    text = read(page).text
+    for words in ("Client", "Project", "Site", "Document no., revision", "Loop LIC-102"):
+        assert words in text
+    assert "Date of the test 2026-03-05" in text
+    assert "Controller: make, type, firmware Document no." in text
+    own = read(render_report(document, [], [], replace(header, controller="builtin"))).text
+    assert "firmware the rig's own reference block" in own
+
+
+def test_the_summary_counts_phases_and_figures(page, failed_document, header):
+    # conftest: 9 judged figures in each setpoint phase, 6 in the load phase, 1 of them open
+    assert (
+        "3 of 3 judged phases pass; of 24 figures judged 23 lie within limits, 1 not decidable."
+        in read(page).text
+    )
+    text = read(render_report(failed_document, [], [], header)).text
+    assert "2 of 3 judged phases pass" in text
+    assert "21 lie within limits, 2 outside, 1 not decidable." in text
+    assert (
+        "setpoint up : outside limits: settling time, 2 % band not reached (allowed 443.3 to "
+        "541.8 s); overshoot, of the step 24.10 % (allowed 11.18 to 15.18 %)." in text
+    )
+
+
+def test_the_controllers_scan_is_told_as_measured(document, header):
+    document["loops"]["LIC-102"] |= {
+        "scan": 1.0,
+        "controller": {"period": 1.02, "delay": 0.62, "scans": 5947, "longest_hold": 3.0},
+    }
+    text = read(render_report(document, [], [], header)).text
+    assert "Period, mean 1.020 s; the rig file says 1 s" in text
+    assert "Delay from sample to output, median 0.6200 s" in text
+    assert "Longest time without a new output 3.000 s" in text
+    assert "sampled every 1.020 s with a delay of 0.6200 s" in text
+
+
+def test_a_model_that_was_not_identified_is_not_compared_with_itself(document, header):
+    models = document["loops"]["LIC-102"]["models"]
+    for model in models.values():
+        model |= {"source": "linearised", "limits": {}, "gain_engineering_unit": "m/%"}
+    text = read(render_report(document, [], [], header)).text
+    assert "nothing was identified" in text
+    assert "Difference" not in text
+    assert "m/%" in text
+
+
+def test_time_constants_differ_in_seconds_and_gains_in_per_cent(page):
+    text = read(page).text
+    assert "+0.9 s" in text  # 214.7 against 118.2 + 90.1 + 5.5
+    assert "-1.3 %" in text  # 1.284 against 1.301
 
 
 def test_the_gauge_puts_the_dot_where_the_figure_is():

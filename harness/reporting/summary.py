@@ -1,0 +1,82 @@
+"""What stands out in a verdict, for the report's first page and the terminal alike."""
+
+from __future__ import annotations
+
+from typing import TYPE_CHECKING
+
+from harness.domain.verdict import Outcome
+from harness.reporting.document import Document, named_parts, number, part, parts, text, texts
+from harness.reporting.words import (
+    figure_in,
+    limit_words,
+    metric_title,
+    outcome_of,
+    shown_unit,
+)
+
+if TYPE_CHECKING:
+    from collections.abc import Iterable, Mapping
+
+
+def judged_phases(document: Mapping[str, object]) -> list[Document]:
+    """Return the phases that were judged, and those that ended badly.
+
+    Parameters
+    ----------
+    document : mapping
+        The verdict document.
+    """
+    bad = {Outcome.FAIL, Outcome.INVALID}
+    return [
+        phase
+        for phase in parts(document, "phases")
+        if named_parts(phase, "metrics") or text(phase, "verdict") in bad
+    ]
+
+
+def misses(phases: Iterable[Mapping[str, object]]) -> list[tuple[str, str]]:
+    """Return for each phase, in words, the figures that lie outside their limits.
+
+    Parameters
+    ----------
+    phases : iterable of mapping
+        Phases of the verdict document.
+
+    Returns
+    -------
+    list of (str, str)
+        Name of the phase; its misses. Phases without one are left out.
+    """
+    told = []
+    for phase in phases:
+        words = [
+            _miss(name, metric)
+            for name, metric in named_parts(phase, "metrics").items()
+            if outcome_of(text(metric, "verdict")) is Outcome.FAIL
+        ]
+        if words:
+            told.append((text(phase, "name"), f"outside limits: {'; '.join(words)}."))
+    return told
+
+
+def findings_told(phases: Iterable[Mapping[str, object]]) -> list[tuple[str, list[str]]]:
+    """Return each finding once, with the names of the phases that it was made in.
+
+    Parameters
+    ----------
+    phases : iterable of mapping
+        Phases of the verdict document.
+    """
+    told: dict[str, list[str]] = {}
+    for phase in phases:
+        for finding in texts(phase, "findings"):
+            told.setdefault(finding, []).append(text(phase, "name"))
+    return list(told.items())
+
+
+def _miss(name: str, metric: Mapping[str, object]) -> str:
+    unit, limit = text(metric, "unit"), part(metric, "limit")
+    title = metric_title(name)
+    title = title if title.isupper() or title[:3].isupper() else title[:1].lower() + title[1:]
+    measured = figure_in(number(metric, "measured"), unit)
+    return f"{title} {measured} (allowed {limit_words(limit, unit)} {shown_unit(unit)})"
