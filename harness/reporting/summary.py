@@ -7,10 +7,10 @@ from typing import TYPE_CHECKING
 from harness.domain.verdict import Outcome
 from harness.reporting.document import Document, named_parts, number, part, parts, text, texts
 from harness.reporting.words import (
-    figure_in,
     limit_words,
-    metric_title,
+    metric_words,
     outcome_of,
+    quantity,
     shown_unit,
 )
 
@@ -76,7 +76,8 @@ def findings_told(phases: Iterable[Mapping[str, object]]) -> list[tuple[str, lis
 
 def _miss(name: str, metric: Mapping[str, object]) -> str:
     unit, limit = text(metric, "unit"), part(metric, "limit")
-    title = metric_title(name)
-    title = title if title.isupper() or title[:3].isupper() else title[:1].lower() + title[1:]
-    measured = figure_in(number(metric, "measured"), unit)
-    return f"{title} {measured} (allowed {limit_words(limit, unit)} {shown_unit(unit)})"
+    words = metric_words(name)
+    title = words.title if words.title.isupper() else words.title.lower()
+    over = f" ({words.of_what})" if words.of_what else ""
+    measured = quantity(number(metric, "measured"), unit)
+    return f"{title}{over} {measured}, allowed {limit_words(limit, unit)} {shown_unit(unit)}"
