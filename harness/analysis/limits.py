@@ -79,7 +79,7 @@ def judge(
     Parameters
     ----------
     measured, linear, nonlinear : mapping of str to float or None
-        Metrics by name.
+        Metrics by name [unit of the metric].
     units : mapping of str to str
         Unit by name.
     tolerances : Tolerances

@@ -115,7 +115,7 @@ class Replay:
     Parameters
     ----------
     trace : dict of str to ndarray, shape (n,)
-        Columns by name, as the engine would have recorded them.
+        Columns by name, as the engine would have recorded them [unit of the column].
     bias : dict of int to float
         Integral part of the block at each transfer to automatic, by tick [-].
     """
@@ -138,7 +138,7 @@ def replay(
     log : ScanLog
         When the controller read and acted.
     settings : dict of int to ControllerSettings
-        Settings by the tick of their order.
+        Settings by the tick of their order [ticks].
 
     Returns
     -------

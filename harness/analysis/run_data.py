@@ -68,11 +68,11 @@ class RunData:
     header : RunHeader
         First document.
     trace : dict of str to ndarray, shape (n,)
-        Columns by name, with ``"tick"`` and ``"lateness"``; row k is tick k.
+        Columns by name, with ``"tick"`` and ``"lateness"``; row k is tick k [unit of the column].
     events : tuple of Event
         Events in order.
     exchanges : tuple of (int, Exchange)
-        Writes of peers, each with the tick at which it was latched.
+        Writes of peers, each with the tick at which it was latched [ticks].
     closing : Closing or None
         Last document.
     """
