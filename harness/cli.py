@@ -10,6 +10,7 @@ import traceback
 from pathlib import Path
 from typing import TYPE_CHECKING
 
+from harness.app.tune_command import add_tune
 from harness.errors import DryrigError, ExitCode, UsageError
 
 if TYPE_CHECKING:
@@ -73,6 +74,7 @@ def build_parser() -> argparse.ArgumentParser:
     _add_control(commands)
     _add_trial(commands)
     _add_score(commands)
+    add_tune(commands)
     return parser
 
 

@@ -1,4 +1,4 @@
-"""Linear prediction in continuous mode: ideal P or PI, exact dead time, method of steps.
+"""Linear prediction in continuous mode: ideal P, PI or PID, exact dead time, method of steps.
 
 The loop with dead time is a linear delay differential equation. Each element of time carries
 the solution as a polynomial through Chebyshev points; the elements divide the dead time, so
@@ -17,6 +17,8 @@ from numpy.typing import NDArray
 from harness.domain.models import ControlLaw, ControllerSettings, LagModel
 from harness.domain.rig import Action
 from harness.errors import ModelError, UsageError
+from harness.tuning.process import PidSettings, ProcessModel, pid_of, process_of
+from harness.tuning.state_space import state_space
 
 _REACH = 1.0  # longest element, in time constants of the fastest delay-free rate [-]
 _DEGREE = (
@@ -40,6 +42,9 @@ class IntegratorModel:
     dead_time: float
 
 
+AnyModel = LagModel | IntegratorModel | ProcessModel
+
+
 @dataclass(frozen=True, slots=True, kw_only=True)
 class ContinuousResponse:
     """Deviations from the initial steady state.
@@ -57,29 +62,19 @@ class ContinuousResponse:
     output: NDArray[np.float64]
 
 
-def _state_space(
-    model: LagModel | IntegratorModel,
-) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
-    """Return A and B of the delay-free model; its output is the last state."""
+def _process(model: AnyModel) -> ProcessModel:
+    """Return any of the models as a process."""
     if isinstance(model, IntegratorModel):
-        return np.zeros((1, 1)), np.array([model.gain])
-    lags = [tau for tau in model.time_constants if tau > 0.0]
-    if not lags or min(model.time_constants) < 0.0:
-        raise ModelError(
-            f"model: time constants {model.time_constants} s; at least one positive one is needed"
-        )
-    rates = 1.0 / np.array(lags)
-    matrix = np.diag(-rates) + np.diag(rates[1:], -1)
-    inlet = np.zeros(len(lags))
-    inlet[0] = model.gain * rates[0]
-    return matrix, inlet
+        return ProcessModel(gain=model.gain, dead_time=model.dead_time, integrating=True)
+    return process_of(model)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class _Loop:
     """z' = now z + before z(t - delay) + forcing + (delayed_forcing once t > delay).
 
-    The last state is the integral part; ``output = law z + law_offset``, PV = ``measured z``.
+    The states are the plant's (with the measurement's filter), the load path's, the integral
+    part and, with a derivative, its filter; ``output = law z + law_offset``, PV = ``measured z``.
     """
 
     now: NDArray[np.float64]
@@ -93,45 +88,64 @@ class _Loop:
 
 
 def _close(
-    model: LagModel | IntegratorModel,
-    settings: ControllerSettings,
-    load: LagModel | IntegratorModel | None,
-    setpoint_step: float,
-    input_step: float,
-    load_step: float,
+    model: ProcessModel,
+    settings: PidSettings,
+    load: ProcessModel | None,
+    steps: tuple[float, float, float],
+    filter_time: float,
 ) -> _Loop:
-    """Assemble the closed loop; the load path enters with no dead time of its own."""
-    matrix, inlet = _state_space(model)
-    order = len(inlet)
-    load_matrix, load_inlet = (
-        (np.zeros((0, 0)), np.zeros(0)) if load is None else _state_space(load)
-    )
-    size = order + len(load_inlet) + 1
-    gain = settings.gain if settings.action is Action.REVERSE else -settings.gain
+    """Assemble the closed loop; the load path enters with no dead time of its own.
+
+    ``steps`` are those of the setpoint, of the plant input and of the load.
+    """
+    setpoint_step, input_step, load_step = steps
+    plant = state_space(model)
+    path = None if load is None else state_space(load)
+    order, extra = plant.inlet.size, 0 if path is None else path.inlet.size
+    filtered, derived = filter_time > 0.0, settings.derivative_time > 0.0
+    size = order + extra + filtered + 1 + derived
+    integral = order + extra + filtered
+    sign = 1.0 if settings.action is Action.REVERSE else -1.0
+    gain = sign * settings.gain
     reset = 0.0 if settings.integral_time is None else gain / settings.integral_time
-    measured = np.zeros(size)
-    measured[order - 1] = 1.0
-    if len(load_inlet):
-        measured[size - 2] = 1.0
-    law = -gain * measured
-    law[-1] = 1.0
-    now = np.zeros((size, size))
-    now[:order, :order] = matrix
-    now[order:-1, order:-1] = load_matrix
-    now[-1] = -reset * measured
-    forcing = np.zeros(size)
-    forcing[order:-1] = load_inlet * load_step
-    forcing[-1] = reset * setpoint_step
+    measured, now, forcing = np.zeros(size), np.zeros((size, size)), np.zeros(size)
+    measured[:order] = plant.outlet
+    now[:order, :order] = plant.matrix
+    if path is not None:
+        measured[order : order + extra] = path.outlet
+        now[order : order + extra, order : order + extra] = path.matrix
+        forcing[order : order + extra] = path.inlet * load_step
+    seen = measured
+    if filtered:
+        now[integral - 1] = measured / filter_time
+        now[integral - 1, integral - 1] = -1.0 / filter_time
+        seen = np.zeros(size)
+        seen[integral - 1] = 1.0
+    now[integral] = -reset * seen
+    forcing[integral] = reset * setpoint_step
+    law, law_offset = -gain * seen, gain * setpoint_step
+    law[integral] += 1.0
+    if derived:
+        # The filter's state follows what is derived; the derivative is how far it is behind.
+        rate = 1.0 / settings.derivative_filter
+        weight = gain * settings.derivative_time * rate
+        target = setpoint_step if settings.derivative_on_error else 0.0
+        now[-1] = -rate * seen
+        now[-1, -1] -= rate
+        forcing[-1] = rate * target
+        law = law - weight * seen
+        law[-1] -= weight
+        law_offset += weight * target
     full_inlet = np.zeros(size)
-    full_inlet[:order] = inlet
+    full_inlet[:order] = plant.inlet
     return _Loop(
         now=now,
         before=np.outer(full_inlet, law),
         forcing=forcing,
-        delayed_forcing=full_inlet * (gain * setpoint_step + input_step),
+        delayed_forcing=full_inlet * (law_offset + input_step),
         measured=measured,
         law=law,
-        law_offset=gain * setpoint_step,
+        law_offset=law_offset,
         delay=model.dead_time,
     )
 
@@ -226,57 +240,71 @@ def _solve(loop: _Loop, times: NDArray[np.float64]) -> ContinuousResponse:
 
 
 def predict_continuous(
-    model: LagModel | IntegratorModel,
-    settings: ControllerSettings,
+    model: AnyModel,
+    settings: ControllerSettings | PidSettings,
     times: NDArray[np.float64],
     *,
     setpoint_step: float = 0.0,
     input_step: float = 0.0,
-    load: LagModel | IntegratorModel | None = None,
+    load: AnyModel | None = None,
     load_step: float = 0.0,
+    filter_time: float = 0.0,
 ) -> ContinuousResponse:
-    """Predict the response of an ideal, unlimited P or PI loop to steps at time 0.
+    """Predict the response of an ideal, unlimited P, PI or PID loop to steps at time 0.
 
     Parameters
     ----------
-    model : LagModel or IntegratorModel
+    model : LagModel, IntegratorModel or ProcessModel
         From controller output to process variable.
-    settings : ControllerSettings
-        Settings of the ideal block.
+    settings : ControllerSettings or PidSettings
+        Settings of the ideal block; a derivative has a filter of its own.
     times : ndarray, shape (n,)
         Where the response is wanted; 0 before time 0 [s].
     setpoint_step : float
         Step of the setpoint [-].
     input_step : float
         Step added to the controller output at the plant input [-].
-    load : LagModel or IntegratorModel or None
+    load : LagModel, IntegratorModel, ProcessModel or None
         Path of the load; needed when ``load_step`` is not 0.
     load_step : float
         Step of the load output [-].
+    filter_time : float
+        First-order filter between process variable and block; 0 for none [s].
 
     Returns
     -------
     ContinuousResponse
-        Deviations from the initial steady state.
+        Deviations from the initial steady state; the process variable is the one before the
+        filter.
 
     Raises
     ------
     UsageError
         When there is a load step and no load path.
     ModelError
-        When a model has no positive lag or a negative dead time.
+        When a model has no positive lag or a negative dead time, or a derivative no filter.
     """
-    for path in (model, load):
-        if path is not None and not path.dead_time >= 0.0:
-            raise ModelError(f"model: dead time {path.dead_time} s; it must be at least 0")
+    process, block = _process(model), pid_of(settings)
+    path = None if load is None else _process(load)
+    for one in (process, path):
+        if one is not None and not one.dead_time >= 0.0:
+            raise ModelError(f"model: dead time {one.dead_time} s; it must be at least 0")
+    if block.derivative_time > 0.0 and not block.derivative_filter > 0.0:
+        raise ModelError(
+            f"prediction: a derivative time of {block.derivative_time} s without a filter; give "
+            "the derivative a filter time"
+        )
     times = np.asarray(times, dtype=np.float64)
-    direct = _solve(_close(model, settings, None, setpoint_step, input_step, 0.0), times)
+    steps = (setpoint_step, input_step, 0.0)
+    direct = _solve(_close(process, block, None, steps, filter_time), times)
     if load_step == 0.0:
         return direct
-    if load is None:
+    if path is None:
         raise UsageError("prediction: a load step without a load path; give the load's model")
     # The loop is linear and starts at rest, so that the load's dead time only shifts its part.
-    part = _solve(_close(model, settings, load, 0.0, 0.0, load_step), times - load.dead_time)
+    part = _solve(
+        _close(process, block, path, (0.0, 0.0, load_step), filter_time), times - path.dead_time
+    )
     return ContinuousResponse(
         times=times,
         process_variable=direct.process_variable + part.process_variable,

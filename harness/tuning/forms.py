@@ -4,10 +4,19 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
+from enum import StrEnum
 
 from harness.errors import ModelError
 
 _LIKENESS = 4.0  # the series form has real times only where Ti >= 4 Td of the ideal form
+
+
+class Form(StrEnum):
+    """How a block combines its three terms."""
+
+    IDEAL = "ideal"
+    SERIES = "series"
+    PARALLEL = "parallel"
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

@@ -99,11 +99,11 @@ def continuous_margins(model: LagModel, settings: ControllerSettings) -> Margins
     highest = (1.0 + abs(model.gain) * settings.gain) * (
         100.0 / fastest + 1.0 / (settings.integral_time or slowest)
     )
-    grid = _grid(_LOWEST / slowest, highest, model.dead_time)
-    crossover = _gain_crossover(loop, grid)
+    grid = frequency_grid(_LOWEST / slowest, highest, model.dead_time)
+    crossover = gain_crossover(loop, grid)
     phase = None if crossover is None else _phase_margin(loop, crossover)
     delay = None if crossover is None or phase is None else phase / crossover
-    return _margins(loop, grid, crossover, phase, delay)
+    return margins_at(loop, grid, crossover, phase, delay)
 
 
 def sampled_margins(
@@ -143,11 +143,11 @@ def sampled_margins(
         )
     dead = model.dead_time + output_delay
     slowest = max(*model.time_constants, dead, scan, settings.integral_time or 0.0)
-    grid = _grid(_LOWEST / slowest, math.pi / scan, dead + scan)
+    grid = frequency_grid(_LOWEST / slowest, math.pi / scan, dead + scan)
 
     def margin(extra: float) -> tuple[Response, float | None, float | None]:
         loop = _sampled_loop(model, settings, scan, dead + extra)
-        crossover = _gain_crossover(loop, grid)
+        crossover = gain_crossover(loop, grid)
         return loop, crossover, None if crossover is None else _phase_margin(loop, crossover)
 
     loop, crossover, phase = margin(0.0)
@@ -161,7 +161,7 @@ def sampled_margins(
             delay += left / crossing
             if abs(left) < 1e-12:  # noqa: PLR2004  rounding
                 break
-    return _margins(loop, grid, crossover, phase, delay)
+    return margins_at(loop, grid, crossover, phase, delay)
 
 
 def check_loop(model: LagModel, settings: ControllerSettings) -> None:
@@ -219,8 +219,21 @@ def _sampled_loop(
     return loop
 
 
-def _grid(lowest: float, highest: float, delay: float) -> Array:
-    """Return frequencies, spaced so that no turn of the phase is missed where it matters."""
+def frequency_grid(lowest: float, highest: float, delay: float) -> Array:
+    """Return frequencies, spaced so that no turn of the phase is missed where it matters.
+
+    Parameters
+    ----------
+    lowest, highest : float
+        Ends [rad/s].
+    delay : float
+        Dead time of the loop [s].
+
+    Returns
+    -------
+    ndarray, shape (n,)
+        Frequencies, rising [rad/s].
+    """
     count = math.ceil(_PER_DECADE * max(math.log10(highest / lowest), 1.0))
     grid = np.geomspace(lowest, highest, count)
     if delay > 0.0:
@@ -229,8 +242,21 @@ def _grid(lowest: float, highest: float, delay: float) -> Array:
     return grid
 
 
-def _gain_crossover(loop: Response, grid: Array) -> float | None:
-    """Return the highest frequency at which the loop gain falls through one."""
+def gain_crossover(loop: Response, grid: Array) -> float | None:
+    """Return the highest frequency at which the loop gain falls through one.
+
+    Parameters
+    ----------
+    loop : callable
+        Loop as a function of frequency [rad/s].
+    grid : ndarray, shape (n,)
+        Frequencies to look at [rad/s].
+
+    Returns
+    -------
+    float or None
+        Frequency; None where the gain never falls through one [rad/s].
+    """
     size = np.abs(loop(grid))
     falls = np.flatnonzero((size[:-1] > 1.0) & (size[1:] <= 1.0))
     if falls.size == 0:
@@ -244,14 +270,29 @@ def _phase_margin(loop: Response, crossover: float) -> float:
     return cmath.phase(-_at(loop, crossover))
 
 
-def _margins(
+def margins_at(
     loop: Response,
     grid: Array,
     gain_crossover: float | None,
     phase_margin: float | None,
     delay_margin: float | None,
 ) -> Margins:
-    """Complete the margins with what the grid tells."""
+    """Complete the margins with what the grid tells.
+
+    Parameters
+    ----------
+    loop : callable
+        Loop as a function of frequency [rad/s].
+    grid : ndarray, shape (n,)
+        Frequencies to look at [rad/s].
+    gain_crossover, phase_margin, delay_margin : float or None
+        What is known already [rad/s, rad, s].
+
+    Returns
+    -------
+    Margins
+        Margins.
+    """
     value = loop(grid)
     angle = np.angle(-value)
     near = np.abs(angle) < 0.5 * math.pi
