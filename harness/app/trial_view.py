@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 import multiprocessing
 import signal
 import sys
@@ -13,9 +14,17 @@ from typing import TYPE_CHECKING, Protocol, Self
 from harness.domain.points import manual_output_point, mode_point, setpoint_point
 from harness.domain.run import EventKind
 from harness.domain.signals import Quality
+from harness.domain.trial import Mode
 from harness.recording.process import interrupts_blocked
 from harness.reporting.terminal import make_console, make_view
-from harness.reporting.view_state import LoopView, PhaseState, PhaseView, ViewState
+from harness.reporting.view_state import (
+    EventLine,
+    LoopView,
+    PhaseState,
+    PhaseView,
+    ViewState,
+)
+from harness.reporting.words import duration
 
 if TYPE_CHECKING:
     from multiprocessing.connection import Connection
@@ -27,8 +36,11 @@ if TYPE_CHECKING:
     from harness.domain.trial import Trial
     from harness.runtime.session import Session
 
-_TREND = 240  # values of the trend [-]
+_TREND = 240  # values of the trend: two to a character of a wide terminal [-]
+_TREND_PHASES = 2.0  # how much a trend covers, in longest phases [-]
+_USUAL_PHASE = 600.0  # where nothing is known of the phases [s]
 _EVENTS = 200  # events kept for the view [-]
+_OF_PHASE = (EventKind.PHASE_STARTED, EventKind.PHASE_ENDED)
 _QUIET = (EventKind.ORDER, EventKind.ORDER_KNOWN)  # too many for a view; the record has them
 _LAST_FRAME = 3.0  # longest wait for the last frame [s]
 
@@ -62,15 +74,14 @@ class TrialView:
         self._trial = trial
         self._expected = {name: plan.duration for name, plan in expected.phases.items()}
         self._transfer = expected.transfer
-        self._started: dict[str, float] = {}
-        self._ended: dict[str, tuple[float, bool]] = {}
-        self._events: deque[str] = deque(maxlen=_EVENTS)
+        self._started: dict[str, int] = {}
+        self._ended: dict[str, tuple[int, bool]] = {}
+        self._events: deque[tuple[int, str, bool]] = deque(maxlen=_EVENTS)
         self._dropped = 0
+        longest = max(self._expected.values(), default=0.0) or _USUAL_PHASE
         self._trends = {
-            phase.loop: (deque[float](maxlen=_TREND), deque[float](maxlen=_TREND))
-            for phase in trial.phases
+            phase.loop: _Trend(_TREND_PHASES * longest / _TREND) for phase in trial.phases
         }
-        self._tick = 1.0
 
     def take_event(self, event: Event) -> None:
         """Take an event.
@@ -80,17 +91,14 @@ class TrialView:
         event : Event
             The event.
         """
-        now = event.tick * self._tick
         if event.kind is EventKind.PHASE_STARTED:
-            self._started[event.subject] = now
+            self._started[event.subject] = event.tick
             self._expected[event.subject] = float(str(event.data.get("expected", 0.0)))
         elif event.kind is EventKind.PHASE_ENDED:
-            self._ended[event.subject] = (now, bool(event.data.get("steady")))
+            self._ended[event.subject] = (event.tick, bool(event.data.get("steady")))
         if event.kind not in _QUIET:
             self._dropped += len(self._events) == _EVENTS
-            self._events.append(
-                f"[{now:7.0f} s] {event.kind.value}: {event.subject}: {event.text}"
-            )
+            self._events.append((event.tick, _event_words(event), event.kind in _OF_PHASE))
 
     def look(self, session: Session) -> None:
         """Show the present state.
@@ -100,30 +108,45 @@ class TrialView:
         session : Session
             The session.
         """
-        self._tick = session.rig.tick
+        tick = session.rig.tick
         self._port.show(
             ViewState(
                 rig=self._rig_name,
                 trial=self._trial.name,
                 pace=session.pace,
                 elapsed=session.time,
-                expected=sum(self._expected.values()) + self._transfer,
+                expected=session.time + self._remaining(session),
                 phases=tuple(self._phase(phase.name, session) for phase in self._trial.phases),
                 loops=tuple(self._loop(tag, session) for tag in self._trends),
-                events=tuple(self._events),
+                events=tuple(
+                    EventLine(time=at * tick, text=text, of_phase=of_phase)
+                    for at, text, of_phase in self._events
+                ),
                 events_before=self._dropped,
             )
         )
+
+    def _remaining(self, session: Session) -> float:
+        """Return how long the phases that are not over should still take [s]."""
+        left = 0.0
+        for phase in self._trial.phases:
+            if phase.name not in self._ended:
+                view = self._phase(phase.name, session)
+                left += max(0.0, view.expected - view.elapsed)
+        automatic = [
+            p.name in self._started for p in self._trial.phases if p.mode is Mode.AUTOMATIC
+        ]
+        return left if any(automatic) else left + self._transfer
 
     def _phase(self, name: str, session: Session) -> PhaseView:
         state, elapsed = PhaseState.WAITING, 0.0
         if name in self._ended:
             end, steady = self._ended[name]
             state = PhaseState.DONE if steady else PhaseState.INVALID
-            elapsed = end - self._started[name]
+            elapsed = (end - self._started[name]) * session.rig.tick
         elif name in self._started:
             state = PhaseState.RUNNING
-            elapsed = session.time - self._started[name]
+            elapsed = session.time - self._started[name] * session.rig.tick
         return PhaseView(
             name=name, state=state, elapsed=elapsed, expected=self._expected.get(name, 0.0)
         )
@@ -134,9 +157,8 @@ class TrialView:
         point, value, _, quality = image[loop.process_variable]
         setpoint = image[setpoint_point(tag)][1]
         automatic = image[mode_point(tag)][1] > 0.0
-        setpoints, values = self._trends[tag]
-        setpoints.append(setpoint)
-        values.append(value)
+        trend = self._trends[tag]
+        trend.take(session.time, setpoint, value)
         output = session.engine.output(loop.output)
         if not automatic and not session.external:
             output = image[manual_output_point(tag)][1] / 100.0
@@ -149,9 +171,38 @@ class TrialView:
             load=session.engine.output(loop.load),
             mode="automatic" if automatic else "manual",
             quality=Quality(int(quality)),
-            recent_setpoint=tuple(setpoints),
-            recent_process_variable=tuple(values),
+            recent_setpoint=tuple(trend.setpoints),
+            recent_process_variable=tuple(trend.values),
+            recent_span=trend.spacing * _TREND,
         )
+
+
+class _Trend:
+    """Setpoint and process variable at equal distances of plant time, the latest of them."""
+
+    def __init__(self, spacing: float) -> None:
+        self.spacing = spacing
+        # Filled with gaps from the start, so that the scale of time never changes.
+        self.setpoints = deque([math.nan] * _TREND, maxlen=_TREND)
+        self.values = deque([math.nan] * _TREND, maxlen=_TREND)
+        self._next = 0.0
+
+    def take(self, time: float, setpoint: float, value: float) -> None:
+        """Take the values of a moment; they stand for every distance since the last."""
+        while time >= self._next:
+            self.setpoints.append(setpoint)
+            self.values.append(value)
+            self._next += self.spacing
+
+
+def _event_words(event: Event) -> str:
+    """Return an event in one line: who, what kind, and its text."""
+    if event.kind in _OF_PHASE:
+        words = f"{event.subject}: {event.text}"
+        expected = float(str(event.data.get("expected", 0.0)))
+        return f"{words}, about {duration(expected)}" if expected > 0.0 else words
+    subject = "" if event.subject == "run" else f"{event.subject}, "
+    return f"{subject}{event.kind.value}: {event.text}"
 
 
 class DirectView:

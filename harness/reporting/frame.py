@@ -11,14 +11,14 @@ from rich.text import Text
 
 from harness.reporting.tables import QUALITY_STYLES
 from harness.reporting.trend import REFERENCE_STYLE, trend
-from harness.reporting.view_state import LoopView, PhaseState, PhaseView, ViewState
+from harness.reporting.view_state import EventLine, LoopView, PhaseState, PhaseView, ViewState
 from harness.reporting.words import duration, figure
 
 OTHER_LINES = 7  # [lines]; head, rule, heading of the events, and empty ones
 LOOP_LINES = 3  # [lines]; of a loop, beside its trend
 BAR_WIDTH = 12  # [characters]
-STATE_WIDTH, TIMES_WIDTH = 7, 14  # [characters]; never cut, whatever the notes say
-VALUE_WIDTH = 9  # [characters]
+STATE_WIDTH, TIMES_WIDTH = 7, 20  # [characters]; never cut, whatever the notes say
+VALUE_WIDTH = 7  # [characters]
 NARROW, USUAL, WIDE = 60, 80, 110  # [characters]; below the usual width the bars go
 LOW = 28  # [lines]; below, trend and events are shorter
 
@@ -45,9 +45,8 @@ def frame(state: ViewState, console: Console) -> RenderableType:
         Decides width, height and characters.
     """
     layout = _layout(console, len(state.loops))
-    rule = Rule(characters="─" if layout.unicode else "-")
     phases = _around_running(state.phases, layout.phases)
-    pieces: list[RenderableType] = [_head(state, layout), rule, _phase_list(phases, layout)]
+    pieces: list[RenderableType] = [*_head(state, layout), _phase_list(phases, layout)]
     for loop in state.loops:
         pieces += [Text(""), _loop_values(loop, layout)]
         drawn = trend(
@@ -58,11 +57,11 @@ def frame(state: ViewState, console: Console) -> RenderableType:
             braille=layout.unicode,
         )
         pieces.append(drawn)
-    if state.events:
+    told = [event for event in state.events if not event.of_phase][-layout.events :]
+    if told:
         pieces += [Text(""), Text("Latest events", style="bold")]
         pieces += [
-            Text(f"  {event}", no_wrap=True, overflow="ellipsis")
-            for event in state.events[-layout.events :]
+            Text(f"  {event_words(event)}", no_wrap=True, overflow="ellipsis") for event in told
         ]
     return Group(*pieces)
 
@@ -85,20 +84,37 @@ def pace_words(state: ViewState) -> str:
     return f"pace {state.pace:g}" if state.pace > 0 else "virtual time"
 
 
-def time_words(state: ViewState) -> str:
+def time_words(state: ViewState, *, at_start: bool = False) -> str:
     """Return the plant time so far, and how long it should take, in words."""
+    if at_start and state.expected > 0:
+        return f"about {duration(state.expected)} of plant time"
     words = f"plant time {duration(state.elapsed)}"
-    return f"{words} of about {duration(state.expected)}" if state.expected > 0 else words
+    if state.elapsed < state.expected:
+        words += f" of about {duration(state.expected)}"
+    return words
 
 
-def _head(state: ViewState, layout: _Layout) -> Table:
+def left_words(state: ViewState) -> str:
+    """Return how long the run should still take by the clock on the wall; empty if not known."""
+    left = state.expected - state.elapsed
+    return f"about {duration(left / state.pace)} to go" if state.pace > 0 and left > 0 else ""
+
+
+def event_words(event: EventLine) -> str:
+    """Return an event in one line, with its plant time."""
+    return f"[{duration(event.time)}] {event.text}"
+
+
+def _head(state: ViewState, layout: _Layout) -> list[RenderableType]:
     names = Text.assemble((state.rig, "bold"), "  ", state.trial or "live session")
-    grid = Table.grid(expand=False, padding=(0, 2, 0, 0))
-    grid.width = layout.width
-    grid.add_column(ratio=1, no_wrap=True, overflow="ellipsis")
-    grid.add_column(justify="right", no_wrap=True)
-    grid.add_row(names, Text(f"{pace_words(state)}   {time_words(state)}"))
-    return grid
+    names.no_wrap, names.overflow = True, "ellipsis"
+    words = "   ".join(
+        item for item in (time_words(state), pace_words(state), left_words(state)) if item
+    )
+    rule = Rule(
+        Text(words), align="left", characters="─" if layout.unicode else "-", style="dim"
+    )
+    return [names, rule]
 
 
 def _phase_list(phases: tuple[PhaseView, ...], layout: _Layout) -> Table:
@@ -122,8 +138,15 @@ def _phase_list(phases: tuple[PhaseView, ...], layout: _Layout) -> Table:
 
 
 def _phase_times(phase: PhaseView) -> str:
-    times = "-" if phase.state is PhaseState.WAITING else duration(phase.elapsed)
-    return f"{times} of {duration(phase.expected)}" if phase.expected > 0 else times
+    expected = f"about {duration(phase.expected)}" if phase.expected > 0 else ""
+    if phase.state is PhaseState.WAITING:
+        return expected
+    elapsed = duration(phase.elapsed)
+    return (
+        f"{elapsed} of {expected}"
+        if phase.state is PhaseState.RUNNING and expected
+        else elapsed
+    )
 
 
 def _bar(phase: PhaseView, *, unicode: bool) -> Text:
@@ -141,15 +164,22 @@ def _bar(phase: PhaseView, *, unicode: bool) -> Text:
 
 def _loop_values(loop: LoopView, layout: _Layout) -> Table:
     """Return the present values of a loop, each under its name."""
+    marks = ("╌", "─") if layout.unicode else ("-", "*")
     cells = {
         loop.tag: Text(loop.mode, style="bold"),
-        "setpoint": Text(f"{figure(loop.setpoint, 'none')} {loop.unit}", style=REFERENCE_STYLE),
-        "measured": Text(f"{figure(loop.process_variable, 'none')} {loop.unit}", style="bold"),
+        f"setpoint {marks[0]}": Text(
+            f"{figure(loop.setpoint, 'none')} {loop.unit}", style=REFERENCE_STYLE
+        ),
+        f"measured {marks[1]}": Text(
+            f"{figure(loop.process_variable, 'none')} {loop.unit}", style="bold"
+        ),
         "quality": Text(loop.quality.name.lower(), style=QUALITY_STYLES[loop.quality]),
         "output": Text(f"{100 * loop.output:.1f} %"),
         "load": Text(f"{100 * loop.load:.1f} %"),
     }
-    grid = Table.grid(padding=(0, 3 if layout.width >= USUAL else 1, 0, 0))
+    if loop.recent_span > 0 and layout.width >= USUAL:
+        cells["trend over"] = Text(duration(loop.recent_span), style="dim")
+    grid = Table.grid(padding=(0, 2 if layout.width >= USUAL else 1, 0, 0))
     for _ in cells:
         grid.add_column(no_wrap=True, min_width=VALUE_WIDTH)
     names = [Text(name, style="bold" if name == loop.tag else "dim") for name in cells]

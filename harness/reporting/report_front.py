@@ -101,11 +101,11 @@ def summary(document: Mapping[str, object]) -> Markup:
     pieces = [element("p", _result_words(judged), css="result")]
     if judged:
         pieces.append(_overview(judged))
-    told = [element("li", element("b", name), f": {words}") for name, words in misses(judged)]
-    told += [
+    told = [
         element("li", element("b", ", ".join(names)), f": {finding}")
         for finding, names in findings_told(phases)
     ]
+    told += [element("li", element("b", name), f": {words}") for name, words in misses(judged)]
     if told:
         pieces += [element("h4", "What stands out"), element("ul", *told, css="findings")]
     rest = [phase for phase in phases if phase not in judged]

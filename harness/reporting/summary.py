@@ -18,6 +18,10 @@ if TYPE_CHECKING:
     from collections.abc import Iterable, Mapping
 
 
+MOST_MISSES = 3  # with their figures; the tables have all
+SAME_TITLE = ("settling_time_2", "settling_time_5")  # told apart by their bands
+
+
 def judged_phases(document: Mapping[str, object]) -> list[Document]:
     """Return the phases that were judged, and those that ended badly.
 
@@ -37,6 +41,8 @@ def judged_phases(document: Mapping[str, object]) -> list[Document]:
 def misses(phases: Iterable[Mapping[str, object]]) -> list[tuple[str, str]]:
     """Return for each phase, in words, the figures that lie outside their limits.
 
+    The first few come with their figures, the others by name.
+
     Parameters
     ----------
     phases : iterable of mapping
@@ -49,13 +55,16 @@ def misses(phases: Iterable[Mapping[str, object]]) -> list[tuple[str, str]]:
     """
     told = []
     for phase in phases:
-        words = [
-            _miss(name, metric)
+        missed = [
+            (name, metric)
             for name, metric in named_parts(phase, "metrics").items()
             if outcome_of(text(metric, "verdict")) is Outcome.FAIL
         ]
-        if words:
-            told.append((text(phase, "name"), f"outside limits: {'; '.join(words)}."))
+        if missed:
+            words = "; ".join(_miss(name, metric) for name, metric in missed[:MOST_MISSES])
+            more = ", ".join(_title(name) for name, _ in missed[MOST_MISSES:])
+            words += f"; also {more}" if more else ""
+            told.append((text(phase, "name"), f"outside limits: {words}."))
     return told
 
 
@@ -76,8 +85,13 @@ def findings_told(phases: Iterable[Mapping[str, object]]) -> list[tuple[str, lis
 
 def _miss(name: str, metric: Mapping[str, object]) -> str:
     unit, limit = text(metric, "unit"), part(metric, "limit")
+    measured = quantity(number(metric, "measured"), unit)
+    allowed = f"{limit_words(limit, unit)} {shown_unit(unit)}"
+    return f"{_title(name)} {measured}, allowed {allowed}"
+
+
+def _title(name: str) -> str:
+    """Return a metric's name within a sentence."""
     words = metric_words(name)
     title = words.title if words.title.isupper() else words.title.lower()
-    over = f" ({words.of_what})" if words.of_what else ""
-    measured = quantity(number(metric, "measured"), unit)
-    return f"{title}{over} {measured}, allowed {limit_words(limit, unit)} {shown_unit(unit)}"
+    return f"{title} ({words.of_what})" if words.of_what and name in SAME_TITLE else title

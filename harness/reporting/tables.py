@@ -6,12 +6,14 @@ from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
 from rich.console import Group, RenderableType
+from rich.padding import Padding
 from rich.table import Table
 from rich.text import Text
 
 from harness.domain.signals import Quality
 from harness.domain.verdict import Outcome
 from harness.reporting.document import Document, named_parts, number, part, parts, text, texts
+from harness.reporting.summary import findings_told, judged_phases, misses
 from harness.reporting.words import (
     figure,
     figure_in,
@@ -34,12 +36,18 @@ OUTCOME_STYLES = {
     Outcome.SHOWN: "dim",
 }
 QUALITY_STYLES = {Quality.GOOD: "", Quality.UNCERTAIN: "yellow", Quality.BAD: "bold red"}
-SUMMARY = (
-    ("Settling 2 %", ("settling_time_2",)),
-    ("Overshoot or peak", ("overshoot", "peak_deviation")),
-    ("IAE", ("iae",)),
-    ("Offset", ("offset",)),
+SUMMARY = (  # headings in two lines, so that all of them fit eighty characters
+    ("Settling\n2 %", ("settling_time_2",)),
+    ("Overshoot\nor peak", ("overshoot", "peak_deviation")),
+    ("\nIAE", ("iae",)),
+    ("\nOffset", ("offset",)),
 )
+SUMMARY_DIGITS = 3  # significant; the report has the fourth
+MARKS = {
+    Outcome.FAIL: "!",
+    Outcome.NOT_DECIDABLE: "?",
+}  # behind a figure, and told in the title
+MARK_WORDS = {"!": "outside its limits", "?": "not decidable"}
 LEAST_OFFSET = 1e-3  # [fraction of span]; a smaller one is rounding, not proportional control
 LEAST_COLUMN = 6  # [characters]
 
@@ -83,21 +91,23 @@ def verdict_table(document: Mapping[str, object], *, full: bool = False) -> Rend
     full : bool
         Whether to list every metric; else a line a judged phase, and what failed.
     """
-    phases = [phase for phase in parts(document, "phases") if _judged(phase)]
+    phases = judged_phases(document)
     outcome = outcome_of(text(document, "verdict"))
     head = Text.assemble(
         (outcome.value.upper(), OUTCOME_STYLES[outcome]),
         f"  {text(document, 'rig')}, trial {text(document, 'trial')}",
     )
-    remarks = Table.grid(padding=(0, 2, 0, 0))
-    for reason in texts(document, "reasons"):
-        remarks.add_row(Text(""), Text(reason))
-    for phase in phases:
-        for finding in texts(phase, "findings"):
-            remarks.add_row(Text(text(phase, "name"), no_wrap=True), Text(finding))
+    remarks: list[RenderableType] = [
+        _remark("", reason) for reason in texts(document, "reasons")
+    ]
+    remarks += [
+        _remark(", ".join(names), finding)
+        for finding, names in findings_told(parts(document, "phases"))
+    ]
+    remarks += [_remark(name, words) for name, words in misses(phases)]
     table = _metric_table(phases) if full else _summary_table(phases)
-    pieces: list[RenderableType] = [table, Text("")] if phases else []
-    return Group(*pieces, head, remarks)
+    pieces: list[RenderableType] = [Text(""), table, Text("")] if phases else []
+    return Group(*pieces, head, *remarks)
 
 
 def tag_table(lines: Iterable[TagLine], title: str = "") -> Table:
@@ -128,23 +138,29 @@ def tag_table(lines: Iterable[TagLine], title: str = "") -> Table:
     return table
 
 
-def _judged(phase: Document) -> bool:
-    return bool(named_parts(phase, "metrics")) or text(phase, "verdict") in {
-        Outcome.FAIL,
-        Outcome.INVALID,
-    }
+def _remark(name: str, words: str) -> RenderableType:
+    """Return a sentence with the phases that it is about, its further lines set in."""
+    line = Text.assemble((f"{name}: " if name else "", "bold"), words)
+    return Padding(line, (0, 0, 0, 2))
 
 
 def _summary_table(phases: list[Document]) -> Table:
-    """Return a line a phase; narrow enough for 80 characters unless an offset is to be shown."""
-    table = _table("Measured (predicted)")
-    table.add_column("Phase")
-    shown = [column for column in SUMMARY if column[0] != "Offset" or _has_offset(phases)]
+    """Return a line a phase, narrow enough for 80 characters."""
+    shown = [column for column in SUMMARY if "Offset" not in column[0] or _has_offset(phases)]
+    used = {
+        mark
+        for phase in phases
+        for _, names in shown
+        if (mark := _mark(_first_known(named_parts(phase, "metrics"), names)))
+    }
+    told = "".join(f"; {mark} {MARK_WORDS[mark]}" for mark in sorted(used))
+    table = _table(f"Measured (predicted){told}")
+    table.add_column("\nPhase")
     for title, names in shown:
         unit = shown_unit(_unit(phases, names))
         heading = Text(f"{title} [{unit}]" if unit else title)  # brackets are no markup here
         table.add_column(heading, justify="right")
-    table.add_column("Verdict")
+    table.add_column("\nVerdict")
     for phase in phases:
         metrics = named_parts(phase, "metrics")
         cells = [_summary(metrics, names) for _, names in shown]
@@ -173,19 +189,29 @@ def _unit(phases: Iterable[Document], names: Iterable[str]) -> str:
 
 
 def _summary(metrics: Mapping[str, Document], names: Iterable[str]) -> Text:
-    """Return the first of the metrics that has any figure, red where it failed."""
+    """Return the first of the metrics that has any figure, marked where it failed."""
+    metric = _first_known(metrics, names)
+    if not metric:
+        return Text("")
+    unit = text(metric, "unit")
+    measured = figure_in(number(metric, "measured"), unit, "never", SUMMARY_DIGITS)
+    predicted = figure_in(number(metric, "predicted_nonlinear"), unit, "none", SUMMARY_DIGITS)
+    style = OUTCOME_STYLES[Outcome.FAIL] if text(metric, "verdict") == Outcome.FAIL else ""
+    return Text(f"{measured}{_mark(metric)} ({predicted})", style=style)
+
+
+def _first_known(metrics: Mapping[str, Document], names: Iterable[str]) -> Document:
+    """Return the first of these metrics that has any figure; empty when none has."""
     for name in names:
         metric = metrics.get(name, {})
-        unit = text(metric, "unit")
-        measured, predicted = (
-            number(metric, key) for key in ("measured", "predicted_nonlinear")
-        )
-        if measured is None and predicted is None:
-            continue
-        style = OUTCOME_STYLES[Outcome.FAIL] if text(metric, "verdict") == Outcome.FAIL else ""
-        words = f"{figure_in(measured, unit)} ({figure_in(predicted, unit, 'none')})"
-        return Text(words, style=style)
-    return Text("")
+        if any(number(metric, key) is not None for key in ("measured", "predicted_nonlinear")):
+            return metric
+    return {}
+
+
+def _mark(metric: Document) -> str:
+    """Return the sign behind a figure that did not pass, for readers without colours."""
+    return MARKS.get(outcome_of(text(metric, "verdict")), "") if metric else ""
 
 
 def _metric_table(phases: Iterable[Document]) -> Table:

@@ -11,12 +11,13 @@ from rich.live import Live
 from rich.text import Text
 
 from harness.domain.signals import Quality
-from harness.reporting.frame import frame, pace_words, time_words
-from harness.reporting.view_state import PhaseState, PhaseView, ViewState
+from harness.reporting.frame import event_words, frame, pace_words, time_words
 from harness.reporting.words import duration
 
 if TYPE_CHECKING:
     from collections.abc import Callable
+
+    from harness.reporting.view_state import ViewState
 
 FRAME_EVERY_NS = 250_000_000  # [ns]; a frame costs some 8 ms of processor, measured
 
@@ -64,13 +65,12 @@ class LiveView:
 
 
 class PlainView:
-    """Prints a line for each change of state, for logs and pipes; never two for one change."""
+    """Prints a line for each event, for logs and pipes; never two for one change."""
 
     def __init__(self, console: Console, now_ns: Callable[[], int]) -> None:
         self._console = console
         self._pacing = _Pacing(now_ns)
         self._started = False
-        self._phases: dict[str, PhaseState] = {}
         self._qualities: dict[str, Quality] = {}
         self._events = 0
 
@@ -84,18 +84,14 @@ class PlainView:
         if not self._started:
             self._started = True
             self._say(_head_words(state))
-        for text in state.events[max(0, self._events - state.events_before) :]:
-            self._say(text)
+        for event in state.events[max(0, self._events - state.events_before) :]:
+            self._say(event_words(event))
         self._events = state.events_before + len(state.events)
-        for phase in state.phases:
-            if self._phases.get(phase.name, PhaseState.WAITING) != phase.state:
-                self._phases[phase.name] = phase.state
-                self._say(f"{_stamp(state)} {_phase_words(phase)}")
         for loop in state.loops:
             if self._qualities.get(loop.tag, Quality.GOOD) != loop.quality:
                 self._qualities[loop.tag] = loop.quality
                 quality = loop.quality.name.lower()
-                self._say(f"{_stamp(state)} {loop.tag}: process variable {quality}")
+                self._say(f"[{duration(state.elapsed)}] {loop.tag}: process variable {quality}")
 
     def __enter__(self) -> Self:
         return self
@@ -163,17 +159,5 @@ class _Pacing:
 
 
 def _head_words(state: ViewState) -> str:
-    return f"{state.rig}: {state.trial or 'live session'}, {pace_words(state)}, {time_words(state)}"
-
-
-def _phase_words(phase: PhaseView) -> str:
-    words = f"phase {phase.name}: {phase.state.value}"
-    if phase.state is PhaseState.RUNNING:
-        words += f", about {duration(phase.expected)}" if phase.expected > 0 else ""
-    else:
-        words += f" after {duration(phase.elapsed)}"
-    return f"{words}; {phase.note}" if phase.note else words
-
-
-def _stamp(state: ViewState) -> str:
-    return f"[{duration(state.elapsed)}]"
+    words = f"{state.rig}, {state.trial or 'live session'}: {pace_words(state)}"
+    return f"{words}, {time_words(state, at_start=True)}"

@@ -39,7 +39,8 @@ def trend(
     width, height : int
         Size with the labels of the scale [characters].
     braille : bool
-        Whether to draw with braille dots, two by four to a character; else with ``*`` and ``-``.
+        Whether to draw with braille dots, two by four to a character, the reference dashed; else
+        with ``*`` and ``-``.
 
     Returns
     -------
@@ -55,6 +56,7 @@ def trend(
         )
         for values in (signal, reference)
     )
+    behind = [_dashed(row) for row in behind] if braille else behind
     text = Text(no_wrap=True)
     for row in range(height):
         label = {0: figure(high), height - 1: figure(low)}.get(row, "")
@@ -68,6 +70,11 @@ def trend(
         if row < height - 1:
             text.append("\n")
     return text
+
+
+def _dashed(row: list[int]) -> list[int]:
+    """Return a row of the reference with every other pair of dots left out, told by its dashes."""
+    return [dots if column % 2 == 0 else 0 for column, dots in enumerate(row)]
 
 
 def _scale(values: Sequence[float]) -> tuple[float, float]:

@@ -43,6 +43,25 @@ class PhaseView:
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
+class EventLine:
+    """An event as a view tells it.
+
+    Parameters
+    ----------
+    time : float
+        Plant time [s].
+    text : str
+        One line.
+    of_phase : bool
+        Whether it only says that a phase began or ended, which the list of phases shows too.
+    """
+
+    time: float
+    text: str
+    of_phase: bool = False
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
 class LoopView:
     """What a loop does now.
 
@@ -61,7 +80,9 @@ class LoopView:
     quality : Quality
         Of the process variable.
     recent_setpoint, recent_process_variable : tuple of float
-        Recent values at equal distances, oldest first [unit].
+        Recent values at equal distances, oldest first; what is not finite is a gap [unit].
+    recent_span : float
+        Time that they cover; 0 for not known [s].
     """
 
     tag: str
@@ -74,6 +95,7 @@ class LoopView:
     quality: Quality
     recent_setpoint: tuple[float, ...] = ()
     recent_process_variable: tuple[float, ...] = ()
+    recent_span: float = 0.0
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -87,13 +109,13 @@ class ViewState:
     pace : float
         Plant seconds per wall second; 0 for as fast as it goes [-].
     elapsed, expected : float
-        Plant time since the start, and of the whole trial; 0 for not known [s].
+        Plant time since the start, and of the whole run as expected by now; 0 for not known [s].
     phases : tuple of PhaseView
         All phases, in order.
     loops : tuple of LoopView
         The loops to show.
-    events : tuple of str
-        All events so far or the latest of them, newest last, one line each.
+    events : tuple of EventLine
+        All events so far or the latest of them, newest last.
     events_before : int
         Events that came before the first of ``events`` [-].
     """
@@ -105,5 +127,5 @@ class ViewState:
     expected: float
     phases: tuple[PhaseView, ...] = ()
     loops: tuple[LoopView, ...] = ()
-    events: tuple[str, ...] = ()
+    events: tuple[EventLine, ...] = ()
     events_before: int = 0

@@ -129,7 +129,9 @@ def figure(value: float | None, missing: str = NOT_REACHED, digits: int = DIGITS
     return f"{rounded:.{max(0, decimals)}f}"
 
 
-def figure_in(value: float | None, unit: str, missing: str = NOT_REACHED) -> str:
+def figure_in(
+    value: float | None, unit: str, missing: str = NOT_REACHED, digits: int = DIGITS
+) -> str:
     """Return a number as shown in ``shown_unit(unit)``: fractions times 100, and not too fine.
 
     Parameters
@@ -140,17 +142,18 @@ def figure_in(value: float | None, unit: str, missing: str = NOT_REACHED) -> str
         Its unit, ``"1"`` for a fraction.
     missing : str
         The word.
+    digits : int
+        Significant digits [-].
     """
-    words = figure(in_unit(value, unit), missing)
+    words = figure(in_unit(value, unit), missing, digits)
     shown = in_unit(value, unit)
     if unit != "1" or shown is None or words == missing:
         return words
-    rounded = round(shown, FINEST)
+    finest = min(FINEST, digits)
+    rounded = round(shown, finest)
     if rounded == 0.0:
-        return "0" if shown == 0.0 else f"{0:.{FINEST}f}"
-    return (
-        figure(rounded) if len(words.partition(".")[2]) <= FINEST else f"{rounded:.{FINEST}f}"
-    )
+        return "0" if shown == 0.0 else f"{0:.{finest}f}"
+    return words if len(words.partition(".")[2]) <= finest else f"{rounded:.{finest}f}"
 
 
 def shown_unit(unit: str) -> str:

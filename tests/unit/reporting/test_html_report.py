@@ -242,7 +242,7 @@ def test_the_summary_counts_phases_and_figures(page, failed_document, header):
     assert "21 lie within limits, 2 outside, 1 not decidable." in text
     assert (
         "setpoint up : outside limits: settling time (2 % band) not reached, allowed 443.3 to "
-        "541.8 s; overshoot (of the step) 24.10 %, allowed 11.18 to 15.18 %." in text
+        "541.8 s; overshoot 24.10 %, allowed 11.18 to 15.18 %." in text
     )
 
 
