@@ -21,6 +21,7 @@ if TYPE_CHECKING:
     from harness.domain.verdict import Metric
 
 _GAP = 0.25  # difference of the predictions worth a finding [-]
+_NOISY_STEP = 10.0  # standard deviations of the noise: a smaller step is lost in it [-]
 _LAW_TOLERANCE = 0.10  # difference between ordered and read settings worth a finding [-]
 _NO_LAW = (
     "look at the tag or register it reads, at the range it takes that to have, at its mode, and at "
@@ -103,7 +104,7 @@ def phase_findings(
                 "back so close to the edge of the band that noise decides which crossing is last."
             )
     # An irregular scan parts the two predictions as well: one only has a regular one.
-    gap = _prediction_gap(judged) if outcome is not Outcome.INVALID else None
+    gap = _prediction_gap(score, span, judged) if outcome is not Outcome.INVALID else None
     if gap:
         findings.append(gap)
     return tuple(findings)
@@ -268,7 +269,7 @@ def _integral_findings(law: ReadLaw, ordered: ControllerSettings) -> list[str]:
     ]
 
 
-def _prediction_gap(judged: dict[str, Metric]) -> str | None:
+def _prediction_gap(score: LoopScore, span: PhaseSpan, judged: dict[str, Metric]) -> str | None:
     """Return a finding on the size of the step where the two predictions differ."""
     iae = judged.get("iae")
     if iae is None or not iae.predicted_linear or not iae.predicted_nonlinear:
@@ -276,9 +277,15 @@ def _prediction_gap(judged: dict[str, Metric]) -> str | None:
     gap = iae.predicted_nonlinear / iae.predicted_linear - 1.0
     if abs(gap) < _GAP:
         return None
+    noise = score.data.rig.transmitter(score.loop.process_variable).noise
+    cause = "the step is large for this plant, or its models are of another operating point"
+    if abs(span.change) < _NOISY_STEP * noise:
+        cause = (
+            f"the step is small beside the transmitter's noise of {100 * noise:.2g} % of span"
+        )
     return (
         f"The nonlinear prediction of the IAE is {100 * abs(gap):.0f} % "
-        f"{'above' if gap > 0 else 'below'} the linear one: the step is large for this plant."
+        f"{'above' if gap > 0 else 'below'} the linear one: {cause}."
     )
 
 

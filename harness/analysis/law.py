@@ -302,6 +302,12 @@ def _least_squares(terms: dict[str, Floats], moves: Floats, usable: Flags) -> _F
     count = len(target)
     variance = max(residual / max(1, count - len(values)), _ROUNDING**2)
     doubts = np.sqrt(variance * np.sum((right.T * inverse) ** 2, axis=1)) / scale
+    # Noise on the output makes pairs of moves that answer each other, as the transmitter's noise
+    # does in the terms: products of neighbours count (heteroscedasticity and autocorrelation
+    # consistent errors, W. K. Newey & K. D. West, Econometrica 55:703-708, 1987; from memory).
+    influence = ((right.T * inverse) @ left.T).T / scale * rest[:, None]
+    paired = np.sum(influence**2, axis=0) + 2.0 * np.sum(influence[1:] * influence[:-1], axis=0)
+    doubts = np.maximum(doubts, np.sqrt(np.maximum(paired, 0.0)))
     # Where nothing moved there is nothing to be sure of.
     doubts[np.sum(right[~kept] ** 2, axis=0) > _FLAT] = math.inf
     total = float(target @ target)
