@@ -14,7 +14,7 @@ from harness.reporting.trend import REFERENCE_STYLE, trend
 from harness.reporting.view_state import EventLine, LoopView, PhaseState, PhaseView, ViewState
 from harness.reporting.words import duration, figure
 
-OTHER_LINES = 7  # [lines]; head, rule, heading of the events, and empty ones
+OTHER_LINES = 5  # [lines]; head, rule, heading of the events and its empty one, the cursor
 LOOP_LINES = 3  # [lines]; of a loop, beside its trend
 BAR_WIDTH = 12  # [characters]
 STATE_WIDTH, TIMES_WIDTH = 7, 20  # [characters]; never cut, whatever the notes say
@@ -44,7 +44,8 @@ def frame(state: ViewState, console: Console) -> RenderableType:
     console : Console
         Decides width, height and characters.
     """
-    layout = _layout(console, len(state.loops))
+    told = [event for event in state.events if not event.of_phase]
+    layout = _layout(console, len(state.loops), len(told))
     phases = _around_running(state.phases, layout.phases)
     pieces: list[RenderableType] = [*_head(state, layout), _phase_list(phases, layout)]
     for loop in state.loops:
@@ -57,7 +58,7 @@ def frame(state: ViewState, console: Console) -> RenderableType:
             braille=layout.unicode,
         )
         pieces.append(drawn)
-    told = [event for event in state.events if not event.of_phase][-layout.events :]
+    told = told[-layout.events :]
     if told:
         pieces += [Text(""), Text("Latest events", style="bold")]
         pieces += [
@@ -66,9 +67,9 @@ def frame(state: ViewState, console: Console) -> RenderableType:
     return Group(*pieces)
 
 
-def _layout(console: Console, loops: int) -> _Layout:
-    low = console.height < LOW
-    trend_height, events = (4, 2) if low else (7, 5)
+def _layout(console: Console, loops: int, told: int) -> _Layout:
+    trend_height, most = (4, 2) if console.height < LOW else (7, 4)
+    events = max(1, min(most, told))
     taken = OTHER_LINES + events + (LOOP_LINES + trend_height) * loops
     return _Layout(
         width=max(NARROW, min(console.width, WIDE)),
