@@ -8,7 +8,7 @@ import signal
 from typing import TYPE_CHECKING, Any, Self
 
 from harness.errors import InvalidRunError
-from harness.recording.process import interrupts_blocked
+from harness.recording.children import interrupts_blocked
 
 if TYPE_CHECKING:
     from multiprocessing.connection import Connection

@@ -15,7 +15,7 @@ from harness.domain.points import manual_output_point, mode_point, setpoint_poin
 from harness.domain.run import EventKind
 from harness.domain.signals import Quality
 from harness.domain.trial import Mode
-from harness.recording.process import interrupts_blocked
+from harness.recording.children import interrupts_blocked
 from harness.reporting.terminal import make_console, make_view
 from harness.reporting.view_state import (
     EventLine,

@@ -12,18 +12,19 @@ import signal
 import threading
 import time
 from collections import deque
-from contextlib import contextmanager, suppress
+from contextlib import suppress
 from pathlib import Path
 from typing import TYPE_CHECKING, Any, Self
 
 import numpy as np
 
 from harness.errors import RecordError
+from harness.recording.children import interrupts_blocked
 from harness.recording.schema import data_text
 from harness.recording.writer import Recorder
 
 if TYPE_CHECKING:
-    from collections.abc import Iterator, Sequence
+    from collections.abc import Sequence
     from multiprocessing.connection import Connection
 
     from numpy.typing import NDArray
@@ -286,19 +287,6 @@ class _Backlog:
         with self._changed:
             self._finished = True
             self._changed.notify_all()
-
-
-@contextmanager
-def interrupts_blocked() -> Iterator[None]:
-    """Start a child deaf to Ctrl-C from its first instruction, where the system can."""
-    if not hasattr(signal, "pthread_sigmask"):
-        yield
-        return
-    before = signal.pthread_sigmask(signal.SIG_BLOCK, {signal.SIGINT})
-    try:
-        yield
-    finally:
-        signal.pthread_sigmask(signal.SIG_SETMASK, before)
 
 
 def _first_word(from_child: Connection) -> str | None:

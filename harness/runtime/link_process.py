@@ -9,7 +9,7 @@ from typing import TYPE_CHECKING
 
 from harness.domain.rig import OpcUaServerLink
 from harness.errors import InvalidRunError, LinkError
-from harness.recording.process import interrupts_blocked
+from harness.recording.children import interrupts_blocked
 from harness.runtime.image import ImageWriter
 from harness.runtime.link_child import WAKE, LinkSetup, LinksFailed, LinksOpen, run_links
 from harness.runtime.news import NO_NEWS, LinkNews
