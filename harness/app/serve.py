@@ -32,6 +32,7 @@ from harness.runtime.clock import PacedClock
 from harness.runtime.link_process import LinkProcess
 from harness.runtime.requests import NothingToCompute
 from harness.runtime.session import Pacing, Session
+from harness.runtime.steadiness import steady_memory
 
 if TYPE_CHECKING:
     from pathlib import Path
@@ -143,6 +144,7 @@ def serve(options: ServeOptions) -> ExitCode:
             on_look=table.look,
             stop_asked=stop.asked,
         )
+        stack.enter_context(steady_memory())
         stop.defer(clock.stop)
         try:
             end = _run(session, options)

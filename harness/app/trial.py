@@ -24,6 +24,7 @@ from harness.recording.writer import Recorder
 from harness.runtime.clock import PacedClock
 from harness.runtime.link_process import LinkProcess
 from harness.runtime.session import Pacing, Session
+from harness.runtime.steadiness import steady_memory
 from harness.runtime.trial_script import WAIT_FOR_CONTROLLER, trial_script
 from plants.compile import is_compiled
 
@@ -221,6 +222,8 @@ def _carry_out(
         else:
             recorder = stack.enter_context(Recorder.create(folder, header, clock.now_ns))
         view = TrialView(_view(stack, options), engine.rig.name, trial, expected)
+        if paced:
+            stack.enter_context(steady_memory())
         session = Session(
             engine,
             recorder,

@@ -16,6 +16,7 @@ from harness.errors import DryrigError
 from harness.runtime.clock import PacedClock
 from harness.runtime.image import ImageReader
 from harness.runtime.news import NewsBox
+from harness.runtime.steadiness import set_memory_aside
 
 if TYPE_CHECKING:
     from collections.abc import Callable, Sequence
@@ -148,6 +149,7 @@ async def _serve(setup: LinkSetup, up: Connection, down: Connection) -> None:
             addresses[link.name] = address()
             if isinstance(server, PublishingServer):
                 publishers.append(server)
+        set_memory_aside()
         _tell(up, LinksOpen(addresses=addresses))
         sender.start()
         fresh = asyncio.Event()

@@ -14,6 +14,7 @@ from harness.errors import UsageError
 from harness.runtime.clock import PacedClock
 from harness.runtime.plc_block import NO_FAULTS, SoftPlcFaults, program_of, warm_up
 from harness.runtime.soft_plc import run_soft_plc
+from harness.runtime.steadiness import set_memory_aside
 
 if TYPE_CHECKING:
     from collections.abc import Callable, Iterator, Sequence
@@ -68,6 +69,7 @@ def run_soft_plc_blocking(
     program = program_of(_loop(rig, loop_tag), points, scan, faults)
     client = make_client(find_link(rig, link), points, host, port)
     warm_up(program)
+    set_memory_aside()
     asyncio.run(_run_until_signal(client, program, pace, on_event))
 
 
