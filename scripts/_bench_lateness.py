@@ -1,14 +1,18 @@
 """Benchmark section: lateness at a tick of 10 ms, links under load, beside a bare timer.
 
-Blocks alternate, all in one run: the rig's tick, and a loop that does nothing but sleep to
-absolute deadlines, both while the clients poll; then the same bare loop on an idle machine.
-The second says what a loaded machine does to any program, the third what this machine does.
+Blocks alternate, all in one run: the ticks of a live session, with links and recorder in their
+processes, and a loop that does nothing but sleep to absolute deadlines, both while the clients
+poll; then the same bare loop without them. The second says what a loaded machine does to any
+program, the third what this machine does. The ratios set the first against the second.
 """
 
 from __future__ import annotations
 
 import time
+from contextlib import ExitStack
 from dataclasses import replace
+from pathlib import Path
+from tempfile import TemporaryDirectory
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -20,23 +24,27 @@ from harness.controllers.block import AUTOMATIC
 from harness.domain.models import ControllerSettings
 from harness.domain.points import points_of
 from harness.domain.rig import Encoding, ModbusServerLink, OpcUaServerLink, RegisterItem
-from harness.domain.signals import Point, PointKind, Range
+from harness.domain.run import RunHeader
 from harness.engine.engine import Engine
 from harness.links.opcua.mapping import NAMESPACE_URI
-from harness.runtime.clock import PacedClock, TickSchedule
+from harness.recording.process import RecorderProcess
+from harness.runtime.clock import PacedClock
 from harness.runtime.link_process import LinkProcess
+from harness.runtime.requests import NothingToCompute
+from harness.runtime.session import Pacing, Session
+from harness.runtime.steadiness import steady_memory
 
 if TYPE_CHECKING:
-    from collections.abc import Callable, Iterator
+    from collections.abc import Iterator
 
     from numpy.typing import NDArray
 
     from harness.domain.rig import Rig
+    from harness.recording.port import RecordWriter
 
 _TICK = 0.010  # [s]
 _BLOCK = 500  # ticks of a block: five seconds
 _TAGS = 50  # points that the subscriber watches [-]
-_LOOP = "LIC-902"
 _SETTLE_S = 3.0  # before the first block, so that every client is at work [s]
 
 
@@ -54,36 +62,39 @@ def lateness(minutes: float) -> Iterator[Figure]:
         Percentiles of the lateness, the load, and the time that a tick takes.
     """
     blocks = max(1, round(minutes * 60.0 / _TICK / _BLOCK))
-    clock = PacedClock()
-    bench = _Bench(clock)
     ticks: list[NDArray[np.float64]] = []
     bare: list[NDArray[np.float64]] = []
-    with bench.links:
+    bench = _Bench()
+    with ExitStack() as stack:
+        folder = Path(stack.enter_context(TemporaryDirectory()))
+        recorder = stack.enter_context(RecorderProcess.create(folder, bench.header()))
+        stack.enter_context(bench.links)
+        stack.enter_context(steady_memory())
         load = Load(
             bench.links.addresses["modbus"],
             bench.links.addresses["opcua"],
             bench.names,
             NAMESPACE_URI,
         )
-        try:
-            bench.run(round(_SETTLE_S / _TICK))
-            before, start = load.counts(), time.perf_counter()
-            for _ in range(blocks):
-                ticks.append(bench.run(_BLOCK))
-                bare.append(_bare_timer(_BLOCK))
-            after, taken = load.counts(), time.perf_counter() - start
-            whole = load.alive()
-        finally:
-            load.close()
+        stack.callback(load.close)
+        bench.run(recorder, round(_SETTLE_S / _TICK))
+        bench.clock.work.clear()
+        before, start = load.counts(), time.perf_counter()
+        for _ in range(blocks):
+            ticks.append(bench.run(recorder, _BLOCK))
+            bare.append(_bare_timer(_BLOCK))
+        after, taken = load.counts(), time.perf_counter() - start
+        whole = load.alive()
     idle = [_bare_timer(_BLOCK) for _ in range(blocks)]
     yield from _percentiles("tick_loaded", ticks)
     yield from _percentiles("bare_loaded", bare)
     yield from _percentiles("bare_idle", idle)
+    yield from _ratios(ticks, bare)
     yield Figure(
         name="lateness.work_of_a_tick",
-        value=float(np.median(bench.work)),
+        value=float(np.median(bench.clock.work)),
         unit="us",
-        note="drain, advance and publish: median",
+        note="publish, drain, advance, keep the row: median",
     )
     note = "" if whole else "a client had stopped: these figures do not count"
     yield Figure(
@@ -100,69 +111,95 @@ def lateness(minutes: float) -> Iterator[Figure]:
     )
 
 
-class _Bench:
-    """The rig's tick as in a live session: drain, advance, publish."""
+class _NotingClock:
+    """A paced clock that remembers how late each wait returned, and the time between waits."""
 
-    def __init__(self, clock: PacedClock) -> None:
-        rig = _fast_rig()
-        self._clock = clock
-        self._engine = Engine(rig)
-        self._engine.set_settings(
-            _LOOP,
-            ControllerSettings(
-                gain=GAIN, integral_time=INTEGRAL_TIME, action=rig.loop(_LOOP).action
-            ),
+    def __init__(self) -> None:
+        self._clock = PacedClock()
+        self._back_ns = 0
+        self.late: list[float] = []
+        self.work: list[float] = []
+
+    def now_ns(self) -> int:
+        """Return the time on this clock [ns]."""
+        return self._clock.now_ns()
+
+    def wait_until(self, deadline_ns: int) -> int:
+        """Sleep until the deadline; see `Clock.wait_until`."""
+        self.work.append((self._clock.now_ns() - self._back_ns) / 1e3)
+        late_ns = self._clock.wait_until(deadline_ns)
+        self._back_ns = deadline_ns + late_ns
+        self.late.append(late_ns / 1e3)
+        return late_ns
+
+
+class _Bench:
+    """A live session as a trial has it: both links, a recorder in its process, no view."""
+
+    def __init__(self) -> None:
+        self._rig = _wide_rig()
+        self._engine = Engine(self._rig, built_in=True)
+        loop = self._rig.loops[0]
+        settings = ControllerSettings(
+            gain=GAIN, integral_time=INTEGRAL_TIME, action=loop.action
         )
-        self._engine.set_mode(_LOOP, AUTOMATIC)
-        self._engine.advance(1)  # compiles
-        points = _points(rig)
-        self.names = tuple(point.name for point in points)
-        self._currents = np.full(_TAGS, np.nan)
-        self._qualities = np.zeros(_TAGS)
+        self._engine.set_settings(loop.tag, settings)
+        self._engine.set_mode(loop.tag, AUTOMATIC)
+        self._engine.record(2)  # compiles
+        points = points_of(self._rig, external=False)
+        self.names = tuple(point.name for point in points)[:_TAGS]
         self.links = LinkProcess(
             (_modbus(self.names), OpcUaServerLink(name="opcua", host="127.0.0.1", port=0)),
             points,
             "benchmark",
         )
-        self.work: list[float] = []
+        self.clock = _NotingClock()
 
-    def run(self, count: int) -> NDArray[np.float64]:
-        """Run ticks and return their lateness [us]."""
-        schedule = TickSchedule(start_ns=self._clock.now_ns() + 10_000_000, period=_TICK)
-        late = np.empty(count)
-        for k in range(count):
-            late[k] = self._clock.wait_until(schedule.deadline_ns(k)) / 1e3
-            start_ns = self._clock.now_ns()
-            self.links.drain()
-            self._engine.advance(1)
-            # Every tag gets a new value at every tick, so that the subscriber is told of all.
-            values = np.full(_TAGS, self._engine.measured("LT-902"))
-            values += 1e-6 * (self._engine.tick % 1000)
-            self.links.publish(self._engine.tick, values, self._currents, self._qualities)
-            self.work.append((self._clock.now_ns() - start_ns) / 1e3)
-        return late
-
-
-def _fast_rig() -> Rig:
-    rig = benchmark_rig()
-    loops = tuple(replace(loop, scan=_TICK) for loop in rig.loops)
-    return replace(rig, tick=_TICK, loops=loops)
-
-
-def _points(rig: Rig) -> tuple[Point, ...]:
-    """Return the rig's points, filled up to fifty."""
-    points = list(points_of(rig, external=False))
-    points += [
-        Point(
-            name=f"LT-{number}",
-            kind=PointKind.MEASUREMENT,
-            range=Range(lower=0.0, upper=2.0, unit="m"),
-            writable=False,
-            description="Level",
+    def header(self) -> RunHeader:
+        """Return a header for the record."""
+        return RunHeader(
+            run="benchmark",
+            started_utc="",
+            rig_name=self._rig.name,
+            trial_name="",
+            rig_text="",
+            trial_text="",
+            versions={},
+            seed=self._rig.seed,
+            tick=_TICK,
+            clock="paced",
+            pace=1.0,
+            controller="builtin",
+            columns=self._engine.columns,
         )
-        for number in range(950, 950 + _TAGS - len(points))
-    ]
-    return tuple(points)
+
+    def run(self, recorder: RecordWriter, count: int) -> NDArray[np.float64]:
+        """Run ticks and return their lateness [us]."""
+        self.clock.late.clear()
+        # A session of its own for each block: its first tick is due at once.
+        pacing = Pacing(
+            clock=self.clock, pace=1.0, links=self.links, computer=NothingToCompute()
+        )
+        session = Session(self._engine, recorder, pacing)
+        session.advance(count)
+        session.hand_over()
+        return np.array(self.clock.late)
+
+
+def _wide_rig() -> Rig:
+    """Return the benchmark's rig at a tick of 10 ms, with transmitters enough for fifty tags."""
+    rig = benchmark_rig()
+    more = _TAGS - len(points_of(rig, external=False))
+    first = rig.transmitters[0]
+    return replace(
+        rig,
+        tick=_TICK,
+        loops=tuple(replace(loop, scan=_TICK) for loop in rig.loops),
+        transmitters=(
+            *rig.transmitters,
+            *(replace(first, tag=f"LT-{910 + number}") for number in range(more)),
+        ),
+    )
 
 
 def _modbus(names: tuple[str, ...]) -> ModbusServerLink:
@@ -186,18 +223,31 @@ def _bare_timer(count: int) -> NDArray[np.float64]:
     return late
 
 
+_SHARES = {"p50": 50.0, "p99": 99.0, "p999": 99.9, "max": 100.0}  # [%]
+
+
 def _percentiles(name: str, blocks: list[NDArray[np.float64]]) -> Iterator[Figure]:
     late = np.concatenate(blocks)
-    measures: dict[str, Callable[[NDArray[np.float64]], np.floating]] = {
-        "p50": lambda x: np.percentile(x, 50.0),
-        "p99": lambda x: np.percentile(x, 99.0),
-        "p999": lambda x: np.percentile(x, 99.9),
-        "max": np.max,
-    }
-    for measure, function in measures.items():
+    for measure, share in _SHARES.items():
         yield Figure(
             name=f"lateness.{name}_{measure}",
-            value=float(function(late)),
+            value=float(np.percentile(late, share)),
             unit="us",
             note=f"{late.size} ticks" if measure == "p50" else "",
+        )
+
+
+def _ratios(
+    ticks: list[NDArray[np.float64]], bare: list[NDArray[np.float64]]
+) -> Iterator[Figure]:
+    """Set the lateness of ticks against that of the bare timer in the same run."""
+    for measure, share in _SHARES.items():
+        yield Figure(
+            name=f"lateness.ratio_{measure}",
+            value=float(
+                np.percentile(np.concatenate(ticks), share)
+                / np.percentile(np.concatenate(bare), share)
+            ),
+            unit="1",
+            note="tick to bare timer, both beside the clients" if measure == "p50" else "",
         )
