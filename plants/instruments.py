@@ -9,7 +9,7 @@ from plants import layout as at
 from plants.compile import kernel
 from plants.flow import orifice_flow
 from plants.noise import BLOCK_TICKS, normal_block
-from plants.transmitter import BAD, damping_weights, loop_current, quantised
+from plants.transmitter import damping_weights, loop_current, quality_of_current, quantised
 
 Floats = NDArray[np.float64]
 Integers = NDArray[np.int64]
@@ -139,7 +139,7 @@ def sample(table: Integers, parameters: Floats, state: Floats, work: Floats, tic
         state[true + transmitter] = value
         if state[forced + transmitter] > 0.0:
             state[currents + transmitter] = state[forced + transmitter]
-            state[qualities + transmitter] = BAD
+            state[qualities + transmitter] = quality_of_current(state[forced + transmitter])
             continue
         fraction = (
             state[damped + transmitter] * parameters[p + at.SCALE] + parameters[p + at.OFFSET]

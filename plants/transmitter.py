@@ -11,6 +11,8 @@ from plants.compile import kernel
 # NAMUR NE 43: measurement 3.8 to 20.5 mA; failure at most 3.6 or at least 21.0 mA.
 LOWEST_CURRENT_MA = 3.8
 HIGHEST_CURRENT_MA = 20.5
+FAILURE_LOW_MA = 3.6
+FAILURE_HIGH_MA = 21.0
 
 _SERIES_BELOW = 0.03  # of interval over damping; the closed form loses digits below it [-]
 
@@ -102,6 +104,27 @@ def loop_current(fraction: float) -> tuple[float, float]:
     if current_ma > HIGHEST_CURRENT_MA:
         return HIGHEST_CURRENT_MA, UNCERTAIN
     return current_ma, GOOD
+
+
+@kernel
+def quality_of_current(current_ma: float) -> float:
+    """Return what a current says of its own quality (NAMUR NE 43).
+
+    Parameters
+    ----------
+    current_ma : float
+        Loop current [mA].
+
+    Returns
+    -------
+    float
+        GOOD for a measurement, BAD for a failure, UNCERTAIN in the bands between [-].
+    """
+    if current_ma <= FAILURE_LOW_MA or current_ma >= FAILURE_HIGH_MA:
+        return BAD
+    if current_ma < LOWEST_CURRENT_MA or current_ma > HIGHEST_CURRENT_MA:
+        return UNCERTAIN
+    return GOOD
 
 
 @kernel

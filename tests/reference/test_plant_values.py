@@ -275,6 +275,17 @@ def test_a_failure_current_is_bad(two_tanks):
     assert engine.state[engine.table[at.AT_QUALITY] + transmitter] == GOOD
 
 
+def test_a_forced_current_has_the_quality_of_its_band(two_tanks):
+    """NAMUR NE 43: measurement 3.8 to 20.5 mA, failure at most 3.6 or at least 21.0 mA."""
+    engine = Engine(two_tanks())
+    told = {3.6: BAD, 3.7: UNCERTAIN, 3.8: GOOD, 12.0: GOOD, 20.5: GOOD, 20.7: UNCERTAIN}
+    for current, quality in (told | {21.0: BAD}).items():
+        engine.force_current("LT-2", current)
+        engine.advance(1)
+        transmitter = [t.tag for t in engine.rig.transmitters].index("LT-2")
+        assert engine.state[engine.table[at.AT_QUALITY] + transmitter] == quality
+
+
 def test_filling_is_the_same_at_two_ticks():
     """The filling vessel is the same at two ticks, to the promised 1e-8 m."""
     hole = _orifice("RO", "TK", DRAIN, 0.62, 0.1 / (0.62 * math.sqrt(2 * 9.80665)))
