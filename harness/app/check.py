@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import dataclasses
 from typing import TYPE_CHECKING
 
 from harness.app.forecast import Forecast, forecast
@@ -79,7 +80,9 @@ def _link(link: object, rig: Rig) -> dict[str, object]:
             "name": link.name,
             "kind": "modbus",
             "address": f"{link.host}:{link.port}",
+            "unit": link.unit,
             "items": len(rows),
+            "map": [dataclasses.asdict(row) for row in rows],
         }
     name, host, port = (getattr(link, key) for key in ("name", "host", "port"))
     return {"name": name, "kind": "opcua", "address": f"opc.tcp://{host}:{port}"}

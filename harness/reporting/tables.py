@@ -120,7 +120,7 @@ def tag_table(lines: Iterable[TagLine], title: str = "") -> Table:
     title : str
         Title of the table.
     """
-    table = _table(title)
+    table = plain_table(title)
     for name in ("Tag", "Value", "Unit", "Raw", "Quality", "Last read by", "Last written by"):
         right = name in {"Value", "Raw"}
         table.add_column(name, justify="right" if right else "left", min_width=LEAST_COLUMN)
@@ -154,7 +154,7 @@ def _summary_table(phases: list[Document]) -> Table:
         if (mark := _mark(_first_known(named_parts(phase, "metrics"), names)))
     }
     told = "".join(f"; {mark} {MARK_WORDS[mark]}" for mark in sorted(used))
-    table = _table(f"Measured (predicted){told}")
+    table = plain_table(f"Measured (predicted){told}")
     table.add_column("\nPhase")
     for title, names in shown:
         unit = shown_unit(_unit(phases, names))
@@ -215,7 +215,7 @@ def _mark(metric: Document) -> str:
 
 
 def _metric_table(phases: Iterable[Document]) -> Table:
-    table = _table("")
+    table = plain_table("")
     for title in ("Phase", "Metric"):
         table.add_column(title)
     for title in ("Measured", "Predicted", "Allowed"):
@@ -248,8 +248,14 @@ def _verdict(words: str) -> Text:
     return Text(outcome.value, style=OUTCOME_STYLES[outcome])
 
 
-def _table(title: str) -> Table:
-    """Return a table with a rule under its head and nothing else."""
+def plain_table(title: str = "") -> Table:
+    """Return a table with a rule under its head and nothing else.
+
+    Parameters
+    ----------
+    title : str
+        Title; empty for none.
+    """
     return Table(
         title=Text(title) if title else None,
         title_justify="left",
