@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import dataclasses
 from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
@@ -16,7 +17,7 @@ from harness.analysis.run_data import phases_of
 from harness.analysis.schedule import scan_log
 from harness.domain.models import LagModel, LoopModels
 from harness.domain.run import EventKind, RunEnd
-from harness.domain.trial import Mode, PhaseKind
+from harness.domain.trial import Mode, ModelSource, PhaseKind
 from harness.domain.verdict import Outcome, PhaseVerdict
 from harness.errors import RecordError
 from harness.tuning.margins import sampled_margins
@@ -74,6 +75,7 @@ def score_run(data: RunData) -> Scored:
     curves: list[PhaseCurves] = []
     loops: dict[str, LoopScore] = {}
     margins: dict[str, Margins] = {}
+    noted: set[str] = set()
     for span in spans:
         short = span.end - span.zero < 2  # noqa: PLR2004  nothing to measure
         if span.loop not in loops and not short and _needs_law(span):
@@ -86,6 +88,10 @@ def score_run(data: RunData) -> Scored:
         if held is not None:
             reasons.append(f"phase {span.name!r}: {held}")
         verdict, drawn = score_phase(loops[span.loop], span, held)
+        if span.loop not in noted:
+            noted.add(span.loop)
+            notes = _model_notes(data, span.loop)
+            verdict = dataclasses.replace(verdict, findings=verdict.findings + notes)
         verdicts.append(verdict)
         curves.append(drawn)
     missing = [p.name for p in data.trial.phases if p.name not in {s.name for s in spans}]
@@ -168,6 +174,26 @@ def _models(data: RunData, loop: Loop) -> LoopModels:
                 output=_model(event.data["output"]), load=_model(event.data["load"])
             )
     raise RecordError(f"run {data.header.run}: no models of {loop.tag} are in the record")
+
+
+def _model_notes(data: RunData, tag: str) -> tuple[str, ...]:
+    """Return which paths were to be identified and were not."""
+    if data.trial.models is not ModelSource.IDENTIFIED:
+        return ()
+    told = next(e.data for e in reversed(data.events_of(EventKind.MODELS)) if e.subject == tag)
+    missing = [
+        path
+        for path in ("output", "load")
+        if isinstance(model := told[path], dict)
+        and model.get("source") == ModelSource.LINEARISED.value
+    ]
+    if not missing:
+        return ()
+    return (
+        f"The model of the {' and the '.join(missing)} path is the rig's own, linearised, and not "
+        "identified as the trial has it: the manual steps it wants were not run. Settings and "
+        "linear prediction rest on it.",
+    )
 
 
 def _model(document: object) -> LagModel:

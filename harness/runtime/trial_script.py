@@ -11,6 +11,7 @@ from harness.analysis.linear import ScanSchedule
 from harness.analysis.loop_models import linearised_models
 from harness.analysis.plan import plan_phase
 from harness.analysis.steady import SteadyDetector
+from harness.analysis.step_record import LEAD_IN, StepRecord
 from harness.controllers.block import AUTOMATIC, MANUAL
 from harness.domain.models import FittedModel, LagModel, LoopModels
 from harness.domain.points import shown_range
@@ -37,7 +38,7 @@ if TYPE_CHECKING:
     Floats = NDArray[np.float64]
 
 WAIT_FOR_CONTROLLER = 30.0  # for a controller to be found or to take an order [wall s]
-_LEAD_IN = 30  # rows before a step that a fit gets to see the start from [ticks]
+_PATHS = ("output", "load")
 _CONFIDENCE = 0.95  # of the limits of a fit [-]
 
 
@@ -52,8 +53,8 @@ class _LoopWork:
     automatic: bool = False
     identified: bool = False
     recent: list[Floats] = field(default_factory=list)
-    output_record: list[Floats] = field(default_factory=list)
-    load_record: list[Floats] = field(default_factory=list)
+    output_record: StepRecord = field(default_factory=StepRecord)
+    load_record: StepRecord = field(default_factory=StepRecord)
 
 
 def trial_script(session: Session, trial: Trial, wait: float = WAIT_FOR_CONTROLLER) -> Script:
@@ -187,7 +188,7 @@ class _TrialRunner:
         """Return the mean transmitted value of late, or the present one."""
         column = self._columns.index(f"{work.loop.process_variable}.value")
         if work.recent:
-            return float(np.mean(np.concatenate(work.recent)[-_LEAD_IN:, column]))
+            return float(np.mean(np.concatenate(work.recent)[-LEAD_IN:, column]))
         return self._session.engine.measured(work.loop.process_variable)
 
     def _settle_settings(self, work: _LoopWork) -> None:
@@ -220,20 +221,17 @@ class _TrialRunner:
     def _identify(self, work: _LoopWork) -> Generator[Request, Any, None]:
         """Fit both paths to what was recorded in manual."""
         fits: dict[str, FittedModel] = {}
-        span = shown_range(self._session.rig.transmitter(work.loop.process_variable))
-        value = self._columns.index(f"{work.loop.process_variable}.value")
-        for path, record, valve in (
-            ("output", work.output_record, work.loop.output),
-            ("load", work.load_record, work.loop.load),
-        ):
+        for path, record in (("output", work.output_record), ("load", work.load_record)):
             if not record:
                 continue
-            rows = np.concatenate(record)
-            inputs = rows[:, self._columns.index(f"{valve}.command")].copy()
-            outputs = (rows[:, value] - span.lower) / span.span
             choice = yield Compute(
                 function=fit_best,
-                arguments=(inputs, outputs, self._session.rig.tick, _CONFIDENCE),
+                arguments=(
+                    record.inputs,
+                    record.outputs,
+                    self._session.rig.tick,
+                    _CONFIDENCE,
+                ),
             )
             fits[path] = choice.best
         work.models = LoopModels(
@@ -241,15 +239,19 @@ class _TrialRunner:
             load=fits["load"].model if "load" in fits else work.models.load,
         )
         work.identified = True
-        self._tell_models(work, fits, "identified")
+        # A trial cut to some of its phases may have had no steps to identify a path from.
+        source = "identified" if len(fits) == len(_PATHS) else "identified in part"
+        self._tell_models(work, fits, source if fits else ModelSource.LINEARISED.value)
 
     def _tell_models(self, work: _LoopWork, fits: dict[str, FittedModel], source: str) -> None:
         data: dict[str, object] = {"source": source}
-        for path in ("output", "load"):
+        for path in _PATHS:
             model: LagModel = getattr(work.models, path)
             fit = fits.get(path)
             document = model_document(model)
-            document["source"] = source if fit or source != "identified" else "linearised"
+            document["source"] = (
+                source if not fits else "identified" if fit else ModelSource.LINEARISED.value
+            )
             if fit is not None:
                 document["limits"] = {
                     name: {"low": limit.low, "high": limit.high, "level": limit.level}
@@ -274,6 +276,8 @@ class _TrialRunner:
     ) -> Generator[Request, Any, None]:
         session = self._session
         plan = self._plan(phase, work)
+        if phase.kind is not PhaseKind.SETTLE and not work.automatic and not work.recent:
+            work.recent = [(yield Advance(ticks=LEAD_IN))]
         session.event(
             EventKind.PHASE_STARTED,
             phase.name,
@@ -286,7 +290,7 @@ class _TrialRunner:
                 "effect": plan.effect,
             },
         )
-        lead_in = work.recent[-1:] if work.recent else []
+        lead_in = work.recent[-1][-LEAD_IN:] if work.recent else None
         order = self._order(phase, work)
         rows = yield from self._known(work.loop, order)
         session.event(
@@ -296,7 +300,7 @@ class _TrialRunner:
             {"order": order},
         )
         rows += yield from self._until_steady(phase, work, plan)
-        self._keep(phase, work, [block[-_LEAD_IN:] for block in lead_in], rows)
+        self._keep(phase, work, lead_in, rows)
 
     def _plan(self, phase: Phase, work: _LoopWork) -> PhasePlan:
         loop, tick = work.loop, self._session.rig.tick
@@ -360,20 +364,29 @@ class _TrialRunner:
         session.event(EventKind.PHASE_ENDED, phase.name, text, {"steady": True})
         return rows
 
-    @staticmethod
-    def _keep(phase: Phase, work: _LoopWork, lead_in: list[Floats], rows: list[Floats]) -> None:
-        """Keep what a fit needs: steps in manual with a moment before the first."""
+    def _keep(
+        self, phase: Phase, work: _LoopWork, lead_in: Floats | None, rows: list[Floats]
+    ) -> None:
+        """Keep what a fit needs: steps in manual with a moment before each."""
         work.recent = [np.concatenate(rows)] if rows else work.recent
-        if phase.mode is not Mode.MANUAL:
+        if phase.mode is not Mode.MANUAL or lead_in is None:
             return
-        record = {
-            PhaseKind.OUTPUT_STEP: work.output_record,
-            PhaseKind.LOAD_STEP: work.load_record,
-        }.get(phase.kind)
-        if record is not None:
-            if not record:
-                record.extend(lead_in)
-            record.extend(rows)
+        records = {
+            PhaseKind.OUTPUT_STEP: (work.output_record, work.loop.output),
+            PhaseKind.LOAD_STEP: (work.load_record, work.loop.load),
+        }
+        if phase.kind not in records:
+            return
+        record, valve = records[phase.kind]
+        span = shown_range(self._session.rig.transmitter(work.loop.process_variable))
+        kept = np.concatenate((lead_in, *rows))
+        value = kept[:, self._columns.index(f"{work.loop.process_variable}.value")]
+        record.add(
+            self._session.tick,
+            kept[:, self._columns.index(f"{valve}.command")],
+            (value - span.lower) / span.span,
+            len(lead_in),
+        )
 
 
 def _phase_words(phase: Phase) -> str:
