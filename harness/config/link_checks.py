@@ -9,7 +9,7 @@ from typing import TYPE_CHECKING
 from harness.config.findings import not_one_of
 from harness.config.loop_checks import transmitter_range
 from harness.config.rig_tables import ModbusServerTable, OpcUaServerTable
-from harness.domain.points import points_of
+from harness.domain.points import points_of, read_back_point
 from harness.domain.rig import (
     Action,
     Characteristic,
@@ -60,7 +60,7 @@ def check_links(draft: RigDraft) -> None:
     for link in draft.of_kind(OpcUaServerTable):
         for index, name in enumerate(link.get("points") or []):
             if name not in points:
-                link.problem(f"points[{index}]", not_one_of(name, points, "this rig", "point"))
+                link.problem(f"points[{index}]", _unknown(name, points))
 
 
 def _names(draft: RigDraft) -> None:
@@ -128,7 +128,10 @@ def _points(draft: RigDraft) -> tuple[Point, ...]:
         loops=tuple(loops),
         links=(),
     )
-    return tuple(point for point in points_of(rig, external=True) if point.name != _STAND_IN)
+    stand_ins = (_STAND_IN, read_back_point(_STAND_IN))
+    return tuple(
+        point for point in points_of(rig, external=True) if point.name not in stand_ins
+    )
 
 
 def _stand_in_transmitter(tag: str, measures: str | None, found: Range | None) -> Transmitter:
@@ -183,7 +186,7 @@ def _item(item: Entry, points: dict[str, Point]) -> None:
     name, encoding = item.text("point"), item.text("encoding")
     point = points.get(name) if name else None
     if name and point is None:
-        item.problem("point", not_one_of(name, points, "this rig", "point"))
+        item.problem("point", _unknown(name, points))
     address = item.number("address")
     if encoding in _TWO_REGISTERS and address == _LAST_ADDRESS:
         item.problem(
@@ -194,6 +197,13 @@ def _item(item: Entry, points: dict[str, Point]) -> None:
     if encoding is not None:
         _idle_keys(item, encoding)
         _scaling(item, encoding, point)
+
+
+def _unknown(name: str, points: dict[str, Point]) -> str:
+    """Say that there is no such point; read-backs are suggested only to who asks for one."""
+    asked = name.endswith(read_back_point(""))
+    near = [each for each in points if each.endswith(read_back_point("")) is asked]
+    return not_one_of(name, near or points, "this rig", "point")
 
 
 def _idle_keys(item: Entry, encoding: str) -> None:
@@ -218,12 +228,25 @@ def _scaling(item: Entry, encoding: str, point: Point | None) -> None:
         if point is not None and point.kind is not PointKind.MODE:
             item.problem("encoding", f'"bit" cannot hold {point.name}; only a mode is a bit')
         return
+    if point is not None and point.kind is PointKind.READ_BACK:
+        _read_back(item, point)
+        return
     if scaling == "counts":
         _counts(item, encoding)
     elif scaling == "current":
         _current(item, point)
     elif scaling == "engineering" and encoding in _INTEGERS and point is not None:
         _engineering(item, encoding, point)
+
+
+def _read_back(item: Entry, point: Point) -> None:
+    """Refuse scalings onto a range: a read-back has none, and takes whatever its type holds."""
+    if item.text("scaling") not in {None, "engineering"}:
+        item.problem(
+            "scaling",
+            f"{item.shown('scaling')}: {point.name} is what the controller says it has, in"
+            ' engineering units; leave it out, or give an integer a "factor"',
+        )
 
 
 def _counts(item: Entry, encoding: str) -> None:

@@ -18,10 +18,14 @@ SWITCH = Range(lower=0.0, upper=1.0, unit="")
 COUNTER_16 = Range(lower=0.0, upper=65_535.0, unit="")
 COUNTER_32 = Range(lower=0.0, upper=4_294_967_295.0, unit="")
 TICK_POINT = "TICK"
+READ_BACK_LIMIT = 1e9  # so wide that a wrong value is received and named instead of refused
+_READ_BACK_ENDING = ".RB"
 
 
 def points_of(rig: Rig, external: bool) -> tuple[Point, ...]:
-    """Return the points of a rig, in a fixed order: transmitters, valves, loops, tick.
+    """Return the points of a rig, in a fixed order.
+
+    Transmitters, valves, loops, tick; then what the controller says it has.
 
     Parameters
     ----------
@@ -34,7 +38,8 @@ def points_of(rig: Rig, external: bool) -> tuple[Point, ...]:
     -------
     tuple of Point
         A measurement for each transmitter (flows in m3/h), command and position for each
-        valve, orders and heartbeat for each loop, and the tick counter.
+        valve, orders and heartbeat for each loop, the tick counter; then a read-back for each
+        transmitter, and for setpoint and mode of each loop.
     """
     outputs = {loop.output for loop in rig.loops}
     points = [_measurement(transmitter) for transmitter in rig.transmitters]
@@ -51,7 +56,7 @@ def points_of(rig: Rig, external: bool) -> tuple[Point, ...]:
             description="Tick of the values shown",
         )
     )
-    return tuple(points)
+    return (*points, *_read_backs(rig, writable=external))
 
 
 def shown_range(transmitter: Transmitter) -> Range:
@@ -120,6 +125,42 @@ def integral_time_point(loop_tag: str) -> str:
 def heartbeat_point(loop_tag: str) -> str:
     """Return the name of a loop's heartbeat point."""
     return f"{loop_tag}.HB"
+
+
+def read_back_point(name: str) -> str:
+    """Return the name of the point where the controller says what it has for another point.
+
+    Parameters
+    ----------
+    name : str
+        Name of a transmitter's, setpoint's or mode's point, e.g. ``"LT-102"``.
+
+    Returns
+    -------
+    str
+        E.g. ``"LT-102.RB"``, ``"LIC-102.SP.RB"``.
+    """
+    return name + _READ_BACK_ENDING
+
+
+def _read_backs(rig: Rig, writable: bool) -> tuple[Point, ...]:
+    """Return the read-backs: transmitters, then setpoint and mode of each loop."""
+    shown = [
+        (transmitter.tag, shown_range(transmitter).unit) for transmitter in rig.transmitters
+    ]
+    for loop in rig.loops:
+        unit = shown_range(rig.transmitter(loop.process_variable)).unit
+        shown += [(setpoint_point(loop.tag), unit), (mode_point(loop.tag), "")]
+    return tuple(
+        Point(
+            name=read_back_point(name),
+            kind=PointKind.READ_BACK,
+            range=Range(lower=-READ_BACK_LIMIT, upper=READ_BACK_LIMIT, unit=unit),
+            writable=writable,
+            description=f"{name} as the controller has it",
+        )
+        for name, unit in shown
+    )
 
 
 def _measurement(transmitter: Transmitter) -> Point:

@@ -59,6 +59,7 @@ class PointKind(StrEnum):
     INTEGRAL_TIME = "integral_time"
     HEARTBEAT = "heartbeat"
     TICK = "tick"
+    READ_BACK = "read_back"  # what the controller says it has
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

@@ -7,6 +7,7 @@ from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
 from harness.domain.rig import Encoding, RegisterItem, Scaling
+from harness.domain.signals import PointKind
 from harness.links.codecs import (
     CURRENT_LOW_MA,
     CURRENT_SPAN_MA,
@@ -244,6 +245,8 @@ def _range_problems(point: Point, item: RegisterItem) -> Iterator[str]:
     factor = item.factor if kind is not None else 1.0
     if (item.scaling is Scaling.COUNTS and not bit) or not 0.0 < factor < math.inf:
         return  # the counts, or the factor, are told of already
+    if point.kind is PointKind.READ_BACK:
+        return  # as wide as any value that its type can hold
     low, high = (0.0, 1.0) if bit else (-FLOAT32_MAX, FLOAT32_MAX)
     if kind is not None:
         low, high = kind.low, kind.high

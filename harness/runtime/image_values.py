@@ -41,7 +41,14 @@ class ImageValues:
         self._currents = np.full(n, math.nan)
         self._qualities = np.zeros(n)
         self.heartbeats: dict[str, float] = {}
-        self._readers = [_reader(engine, point, self.heartbeats) for point in points]
+        self.read_backs: dict[str, float] = {}
+        written = {
+            PointKind.HEARTBEAT: self.heartbeats,
+            PointKind.READ_BACK: self.read_backs,
+        }
+        self._readers = [
+            _reader(engine, point, written.get(point.kind, {})) for point in points
+        ]
         self._measurements = [
             (i, engine.place_of_transmitter(point.name))
             for i, point in enumerate(points)
@@ -67,8 +74,8 @@ class ImageValues:
         return self._values, self._currents, self._qualities
 
 
-def _reader(engine: Engine, point: Point, heartbeats: dict[str, float]) -> Callable[[], float]:
-    """Return a function that reads one point in its unit."""
+def _reader(engine: Engine, point: Point, written: dict[str, float]) -> Callable[[], float]:
+    """Return a function that reads one point in its unit; ``written`` is what a peer wrote."""
     state = engine.state
     match point.kind:
         case PointKind.MEASUREMENT:
@@ -80,8 +87,8 @@ def _reader(engine: Engine, point: Point, heartbeats: dict[str, float]) -> Calla
             tags = {position_point(valve.tag): valve.tag for valve in engine.rig.valves}
             travel = engine.place_of_valve(tags[point.name], at.AT_TRAVEL)
             return lambda: 100.0 * state[travel]
-        case PointKind.HEARTBEAT:
-            return lambda: heartbeats.get(point.name, 0.0)
+        case PointKind.HEARTBEAT | PointKind.READ_BACK:
+            return lambda: written.get(point.name, 0.0)
         case PointKind.TICK:
             return lambda: float(engine.tick)
         case _:

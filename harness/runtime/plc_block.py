@@ -19,15 +19,16 @@ from harness.domain.points import (
     integral_time_point,
     manual_output_point,
     mode_point,
+    read_back_point,
     setpoint_point,
 )
 from harness.domain.rig import Action
-from harness.domain.signals import Quality
+from harness.domain.signals import PointKind, Quality
 from harness.errors import UsageError
 from harness.links.client import Reading
 
 if TYPE_CHECKING:
-    from collections.abc import Mapping, Sequence
+    from collections.abc import Collection, Mapping, Sequence
 
     from harness.domain.rig import Loop
     from harness.domain.signals import Point, Range
@@ -81,18 +82,22 @@ class PlcProgram:
         Scan period [plant s].
     faults : SoftPlcFaults
         Mistakes made on purpose.
+    echoes : tuple of str
+        Points of the link whose read-backs it writes: the transmitters as it reads them, its
+        setpoint and mode as they are in effect.
     """
 
     loop: Loop
     measured: Range
     scan: float
     faults: SoftPlcFaults = NO_FAULTS
+    echoes: tuple[str, ...] = ()
 
     @property
     def reads(self) -> tuple[str, ...]:
         """Return the names of the points that a scan reads."""
         tag = self.loop.tag
-        return (
+        own = (
             self.loop.process_variable,
             setpoint_point(tag),
             mode_point(tag),
@@ -102,6 +107,7 @@ class PlcProgram:
             self.loop.output,
             TICK_POINT,
         )
+        return own + tuple(name for name in self.echoes if name not in own)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -162,6 +168,7 @@ def program_of(
     points: Sequence[Point],
     scan: float | None = None,
     faults: SoftPlcFaults = NO_FAULTS,
+    shown: Collection[str] = (),
 ) -> PlcProgram:
     """Return the program for a loop.
 
@@ -175,6 +182,8 @@ def program_of(
         Scan period; None takes the loop's [plant s].
     faults : SoftPlcFaults
         Mistakes made on purpose.
+    shown : collection of str
+        Names of the points that its link has; it writes the read-backs among them.
 
     Returns
     -------
@@ -191,9 +200,29 @@ def program_of(
         raise UsageError(f"soft PLC {loop.tag}: scan {period} s; it must be positive")
     for point in points:
         if point.name == loop.process_variable:
-            return PlcProgram(loop=loop, measured=point.range, scan=period, faults=faults)
+            return PlcProgram(
+                loop=loop,
+                measured=point.range,
+                scan=period,
+                faults=faults,
+                echoes=_echoes(loop, points, shown),
+            )
     raise UsageError(
         f"soft PLC {loop.tag}: {loop.process_variable} is not among the points of the rig"
+    )
+
+
+def _echoes(loop: Loop, points: Sequence[Point], shown: Collection[str]) -> tuple[str, ...]:
+    """Return the points that this loop's program can read back over its link."""
+    tag = loop.tag
+    return tuple(
+        point.name
+        for point in points
+        if read_back_point(point.name) in shown
+        and (
+            point.name in (setpoint_point(tag), mode_point(tag))
+            or (point.kind is PointKind.MEASUREMENT and point.name in shown)
+        )
     )
 
 
@@ -305,7 +334,9 @@ def warm_up(program: PlcProgram) -> None:
     scan_once(program, BlockState(output=0.0), readings)
 
 
-def writes_of(program: PlcProgram, state: BlockState) -> dict[str, float]:
+def writes_of(
+    program: PlcProgram, state: BlockState, readings: Mapping[str, Reading]
+) -> dict[str, float]:
     """Return what a scan writes, in the points' units.
 
     Parameters
@@ -314,16 +345,31 @@ def writes_of(program: PlcProgram, state: BlockState) -> dict[str, float]:
         The program.
     state : BlockState
         State after the scan.
+    readings : mapping of str to Reading
+        What the scan has read, by point.
 
     Returns
     -------
     dict of str to float
-        Valve command and heartbeat by point, each in its point's unit.
+        Valve command, heartbeat and read-backs by point, each in its point's unit.
     """
     biased = min(max(state.output + program.faults.output_bias, 0.0), 1.0)
-    return {
+    writes = {
         program.loop.output: PERCENT.from_fraction(biased),
         heartbeat_point(program.loop.tag): float(state.scans % _HEARTBEATS),
+    }
+    has = {name: readings[name].value for name in program.echoes}
+    if state.orders is not None:
+        has |= {
+            setpoint_point(program.loop.tag): program.measured.from_fraction(
+                state.orders.setpoint
+            ),
+            mode_point(program.loop.tag): float(state.orders.mode),
+        }
+    return writes | {
+        read_back_point(name): has[name]
+        for name in program.echoes
+        if math.isfinite(has[name])  # no number stands for a broken wire
     }
 
 

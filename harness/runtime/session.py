@@ -14,11 +14,13 @@ import numpy as np
 
 from harness.domain.points import heartbeat_point, points_of
 from harness.domain.run import Event, EventKind
+from harness.domain.signals import PointKind
 from harness.errors import InvalidRunError
 from harness.runtime.clock import NS_PER_S, TickSchedule
 from harness.runtime.controller_watch import ControllerWatch
 from harness.runtime.image_values import ImageValues
 from harness.runtime.news import Contact, LinkEventKind
+from harness.runtime.read_backs import ReadBack, read_back_of
 from harness.runtime.requests import Advance
 
 if TYPE_CHECKING:
@@ -119,6 +121,7 @@ class Session:
         self.rows_taken = 0
         self.last_writer: dict[str, Contact] = {}
         self.last_reader: dict[str, Contact] = {}
+        self.read_backs: dict[str, ReadBack] = {}
         self.losses: dict[str, str] = {}
         self._recorder = recorder
         self._pacing = pacing
@@ -137,6 +140,8 @@ class Session:
         self._kept_first = 0
         self._kept_since_ns = 0
         self._last_look_ns = 0
+        self._last_tick_ns = 0
+        self._usual_ns = round(engine.rig.tick / pace * NS_PER_S)
 
     @property
     def tick(self) -> int:
@@ -359,6 +364,7 @@ class Session:
             if news:
                 self._take_news(news)
         now_ns = clock.now_ns()
+        self._forgive_stall(now_ns)
         self._watch_controllers(now_ns)
         row: Floats = self.engine.record(1)[0]
         self.rows_taken += 1
@@ -367,6 +373,18 @@ class Session:
             self._last_look_ns = now_ns
             self._on_look(self)
         return row
+
+    def _forgive_stall(self, now_ns: int) -> None:
+        """Keep time in which this process did not run from counting as the controller's silence.
+
+        At a high pace a watchdog of plant seconds is a blink of wall time, and a busy machine can
+        hold the rig itself up for longer than that.
+        """
+        stall_ns = now_ns - self._last_tick_ns - self._usual_ns
+        if self._last_tick_ns and stall_ns > self._usual_ns:
+            for watch in self.watches.values():
+                watch.stood_still(stall_ns)
+        self._last_tick_ns = now_ns
 
     def _heed_stop(self) -> None:
         if self._stop_asked is not None and self._stop_asked():
@@ -422,6 +440,11 @@ class Session:
         if loop is not None:
             self._image.heartbeats[exchange.point] = exchange.value
             self.watches[loop.tag].heartbeat_written(exchange)
+            return
+        point = self._by_name.get(exchange.point)
+        if point is not None and point.kind is PointKind.READ_BACK:
+            self.read_backs[exchange.point] = read_back_of(exchange, self.tick)
+            self._image.read_backs[exchange.point] = exchange.value
 
     def _link_event(self, event: LinkEvent) -> None:
         kinds = {

@@ -179,7 +179,7 @@ class SoftPlc:
         if self._state is None:
             return {}
         self._state = scan_once(self._program, self._state, readings)
-        return writes_of(self._program, self._state)
+        return writes_of(self._program, self._state, readings)
 
     def _take_over(self, readings: Mapping[str, Reading]) -> None:
         began_anew = self._state is not None

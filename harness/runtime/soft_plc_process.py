@@ -66,8 +66,10 @@ def run_soft_plc_blocking(
         When the rig has no such link or loop.
     """
     points = points_of(rig, external=True)
-    program = program_of(_loop(rig, loop_tag), points, scan, faults)
-    client = make_client(find_link(rig, link), points, host, port)
+    end = find_link(rig, link)
+    shown = shown_points(end, points)
+    program = program_of(_loop(rig, loop_tag), points, scan, faults, shown)
+    client = make_client(end, points, host, port)
     warm_up(program)
     set_memory_aside()
     asyncio.run(_run_until_signal(client, program, pace, on_event))
@@ -105,6 +107,28 @@ def find_link(rig: Rig, link: str) -> ModbusServerLink | OpcUaServerLink:
         f'link "{link}" is not one of rig {rig.name}; it has {names}. Give one of these names, '
         "or modbus or opcua for the first of its kind"
     )
+
+
+def shown_points(
+    link: ModbusServerLink | OpcUaServerLink, points: Sequence[Point]
+) -> frozenset[str]:
+    """Return the names of the points that a link has.
+
+    Parameters
+    ----------
+    link : ModbusServerLink or OpcUaServerLink
+        The link.
+    points : sequence of Point
+        The points of the rig.
+
+    Returns
+    -------
+    frozenset of str
+        Of a register map, its points; of OPC UA, those named in the rig file or all.
+    """
+    if isinstance(link, ModbusServerLink):
+        return frozenset(item.point for item in link.items)
+    return frozenset(link.points or (point.name for point in points))
 
 
 def make_client(

@@ -70,7 +70,7 @@ class HandRig:
                 self.values[exchange.point] = exchange.value
                 if exchange.point == "FV-1":
                     self.outputs.append(exchange.value)
-                else:
+                elif exchange.point == "LIC-2.HB":
                     self.beats.append(exchange.value)
         self.tick += 1
         image = np.array([self.values.get(name, 0.0) for name in self.names])

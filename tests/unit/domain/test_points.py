@@ -5,7 +5,7 @@ from pathlib import Path
 import pytest
 
 from harness.config.load import rig_from_text
-from harness.domain.points import points_of, position_point
+from harness.domain.points import points_of, position_point, read_back_point
 from harness.domain.signals import PointKind
 
 TEXT = (Path(__file__).parent.parent / "config" / "data" / "rig.toml").read_text(
@@ -31,13 +31,29 @@ def test_names_and_order():
         "LIC-102.TI",
         "LIC-102.HB",
         "TICK",
+        "LT-101.RB",
+        "LT-102.RB",
+        "FT-101.RB",
+        "LIC-102.SP.RB",
+        "LIC-102.MODE.RB",
     ]
     assert [point.name for point in points_of(RIG, external=False)] == list(POINTS)
 
 
-def test_an_external_controller_writes_its_output_and_heartbeat_alone():
+def test_an_external_controller_writes_its_output_its_heartbeat_and_what_it_has():
     writable = [point.name for point in POINTS.values() if point.writable]
-    assert writable == ["FV-101", "LIC-102.HB"]
+    backs = [name for name in POINTS if name.endswith(".RB")]
+    assert writable == ["FV-101", "LIC-102.HB", *backs]
+
+
+def test_a_read_back_has_the_unit_of_its_point_and_takes_what_no_range_would():
+    assert read_back_point("LT-102") == "LT-102.RB"
+    for name in ("LT-102", "FT-101", "LIC-102.SP", "LIC-102.MODE"):
+        back = POINTS[read_back_point(name)]
+        assert back.kind is PointKind.READ_BACK
+        assert back.range.unit == POINTS[name].range.unit
+        assert back.range.lower < -65_535  # any 16-bit count
+        assert back.range.upper > 65_535
 
 
 def test_nobody_writes_beside_the_built_in_controller():

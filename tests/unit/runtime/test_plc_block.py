@@ -166,11 +166,14 @@ def test_a_direct_loop_opens_the_valve_when_the_level_is_too_high(two_tanks):
 
 def test_what_it_writes_is_in_the_points_units_and_the_heartbeat_goes_round(program):
     state = take_over(program, readings())
-    assert writes_of(program, dataclasses.replace(state, scans=65_535)) == {
+    assert writes_of(program, dataclasses.replace(state, scans=65_535), readings()) == {
         "FV-1": pytest.approx(55.0),
         "LIC-2.HB": 65_535.0,
     }
-    assert writes_of(program, dataclasses.replace(state, scans=65_536))["LIC-2.HB"] == 0.0
+    assert (
+        writes_of(program, dataclasses.replace(state, scans=65_536), readings())["LIC-2.HB"]
+        == 0.0
+    )
 
 
 def test_it_asks_for_everything_it_uses(program):
@@ -199,6 +202,44 @@ def test_a_scan_of_nothing_and_a_loop_without_its_point_are_refused(two_tanks):
         program_of(rig.loops[0], points[-1:])
 
 
+class TestReadBacks:
+    """It tells what it has, where its link has a place for it."""
+
+    SHOWN = ("LT-1", "LT-2", "LT-2.RB", "LT-1.RB", "LIC-2.SP.RB", "LIC-2.MODE.RB")
+
+    @pytest.fixture
+    def telling(self, two_tanks):
+        rig = two_tanks()
+        return program_of(rig.loops[0], points_of(rig, external=True), shown=self.SHOWN)
+
+    def test_a_link_without_places_is_told_nothing(self, program):
+        assert program.echoes == ()
+
+    def test_it_reads_what_it_tells(self, telling):
+        assert set(telling.echoes) == {"LT-1", "LT-2", "LIC-2.SP", "LIC-2.MODE"}
+        assert telling.reads.count("LT-2") == 1
+        assert "LT-1" in telling.reads
+
+    def test_values_as_read_and_orders_as_in_effect(self, telling):
+        seen = readings(level=0.3, setpoint=0.4, **{"LT-1": 0.9})
+        state = scan_once(telling, take_over(telling, seen), seen)
+        backs = {
+            name: value
+            for name, value in writes_of(telling, state, seen).items()
+            if name.endswith(".RB")
+        }
+        assert backs == pytest.approx(
+            {"LT-2.RB": 0.45, "LT-1.RB": 0.9, "LIC-2.SP.RB": 0.6, "LIC-2.MODE.RB": 1.0}
+        )
+
+    def test_a_broken_wire_has_no_number_to_tell(self, telling):
+        broken = Reading(value=math.nan, quality=Quality.BAD)
+        seen = readings(**{"LT-1": 0.9})
+        state = scan_once(telling, take_over(telling, seen), seen)
+        seen = readings(**{"LT-1": broken})
+        assert "LT-1.RB" not in writes_of(telling, state, seen)
+
+
 class TestMistakesOnPurpose:
     """Each mistake does what it says, for the checker to find."""
 
@@ -222,9 +263,9 @@ class TestMistakesOnPurpose:
     def test_bias_of_the_output_on_its_way_out_only(self, program):
         wrong = with_faults(program, output_bias=0.1)
         state = take_over(wrong, readings())
-        assert writes_of(wrong, state)["FV-1"] == pytest.approx(65.0)
+        assert writes_of(wrong, state, readings())["FV-1"] == pytest.approx(65.0)
         top = dataclasses.replace(state, output=0.95)
-        assert writes_of(wrong, top)["FV-1"] == 100.0
+        assert writes_of(wrong, top, readings())["FV-1"] == 100.0
 
     def test_freeze_with_the_heartbeat_alive(self, program):
         wrong = with_faults(program, freeze_after=3.0)
@@ -233,7 +274,7 @@ class TestMistakesOnPurpose:
         for _ in range(6):
             state = scan_once(wrong, state, readings(level=0.4))
             outputs.append(state.output)
-            beats.append(writes_of(wrong, state)["LIC-2.HB"])
+            beats.append(writes_of(wrong, state, readings())["LIC-2.HB"])
         assert outputs[0] < outputs[1] < outputs[2]
         assert outputs[2:] == [outputs[2]] * 4
         assert beats == [1, 2, 3, 4, 5, 6]
