@@ -28,22 +28,23 @@ LATENESS = (
 
 def timing(document: Mapping[str, object]) -> Markup:
     """Return the controller's scan as measured, and how late the ticks were."""
-    pieces = []
+    boxes = []
     for tag, loop in named_parts(document, "loops").items():
         rows = list(_scan(loop))
         if rows:
-            pieces += [element("h3", f"{tag}: scan of the controller, in plant time")]
-            pieces.append(table((), rows, css="facts narrow"))
-    pieces.append(element("h3", "Lateness of the ticks, in wall time"))
+            title = element("h3", f"{tag}: scan of the controller, plant time")
+            boxes.append(element("div", title, table((), rows, css="facts")))
+    title = element("h3", "Lateness of the ticks, wall time")
     facts = part(document, "lateness")
     if not facts:
-        pieces.append(element("p", "The run was in virtual time: no tick can be late."))
-        return joined(pieces)
+        told = element("p", "The run was in virtual time: no tick can be late.")
+        return element("div", *boxes, element("div", title, told), css="pair")
     late = [
         (title, _milliseconds(number(facts, key))) for key, title in LATENESS if key in facts
     ]
     late.append(("Ticks that were late", quantity(number(facts, "late_fraction"), "1")))
-    return joined((*pieces, table((), late, css="facts narrow")))
+    boxes.append(element("div", title, table((), late, css="facts")))
+    return element("div", *boxes, css="pair")
 
 
 def event_table(events: Sequence[Event], tick: float) -> Markup:
@@ -80,9 +81,10 @@ def _scan(loop: Mapping[str, object]) -> Iterator[tuple[str, str]]:
     if not measured:
         return
     asked = number(loop, "scan")
-    words = f"{_seconds(number(measured, 'period'))}"
-    yield "Period, mean", words if asked is None else f"{words}; the rig file says {asked:g} s"
-    yield "Delay from sample to output, median", _seconds(number(measured, "delay"))
+    yield "Period, mean", _seconds(number(measured, "period"))
+    if asked is not None:
+        yield "Period as the rig file has it", f"{asked:g} s"
+    yield "Sample to output, median", _seconds(number(measured, "delay"))
     yield "Longest time without a new output", _seconds(number(measured, "longest_hold"))
     yield "Scans with an effect", f"{number(measured, 'scans') or 0:.0f}"
 

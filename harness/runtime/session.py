@@ -12,7 +12,8 @@ from typing import TYPE_CHECKING, Any, Protocol
 
 import numpy as np
 
-from harness.domain.points import heartbeat_point, points_of
+from harness.controllers.block import AUTOMATIC
+from harness.domain.points import heartbeat_point, points_of, shown_range
 from harness.domain.run import Event, EventKind
 from harness.domain.signals import PointKind
 from harness.errors import InvalidRunError
@@ -202,7 +203,8 @@ class Session:
         if mode is not None:
             self.engine.set_mode(loop.tag, mode)
             orders["mode"] = mode
-        text = ", ".join(f"{name.replace('_', ' ')} {_short(v)}" for name, v in orders.items())
+        unit = shown_range(self.rig.transmitter(loop.process_variable)).unit
+        text = ", ".join(_order_words(name, value, unit) for name, value in orders.items())
         self.event(EventKind.ORDER, loop.tag, text, orders)
         return self.tick
 
@@ -222,7 +224,9 @@ class Session:
             The tick [ticks].
         """
         self.engine.set_output(valve, output)
-        self.event(EventKind.ORDER, valve, f"load output {output:.4g}", {"output": output})
+        self.event(
+            EventKind.ORDER, valve, f"load output {100.0 * output:.4g} %", {"output": output}
+        )
         return self.tick
 
     def knows(self, loop: Loop, order_tick: int) -> bool:
@@ -484,8 +488,21 @@ class Session:
         self.event(EventKind.CONTROLLER_SILENT, loop.tag, text)
 
 
-def _short(value: object) -> str:
-    return f"{value:.5g}" if isinstance(value, float) else str(value)
+def _order_words(name: str, value: object, unit: str) -> str:
+    """Return an order as a person would give it, with its unit."""
+    if name == "mode":
+        return "automatic" if value == AUTOMATIC else "manual"
+    if not isinstance(value, float):
+        return "no integral action" if name == "integral_time" else f"{name} {value}"
+    match name:
+        case "manual_output":
+            return f"manual output {100.0 * value:.4g} %"
+        case "setpoint":
+            return f"setpoint {value:.4g} {unit}"
+        case "integral_time":
+            return f"integral time {value:.4g} s"
+        case _:
+            return f"{name} {value:.4g} %/%"
 
 
 def require_controllers(session: Session) -> None:

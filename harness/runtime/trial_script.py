@@ -358,7 +358,7 @@ class _TrialRunner:
         text = f"steady after {taken * tick:.5g} s"
         if phase.kind is not PhaseKind.SETTLE and detector.remaining is not None:
             text += (
-                f": at most {100 * detector.remaining:.2g} % of the step is still to come "
+                f": at most {100 * detector.remaining:.2g} % still to come "
                 f"({100 * rule.confidence:g} % confidence)"
             )
         session.event(EventKind.PHASE_ENDED, phase.name, text, {"steady": True})

@@ -252,8 +252,8 @@ def test_the_controllers_scan_is_told_as_measured(document, header):
         "controller": {"period": 1.02, "delay": 0.62, "scans": 5947, "longest_hold": 3.0},
     }
     text = read(render_report(document, [], [], header)).text
-    assert "Period, mean 1.020 s; the rig file says 1 s" in text
-    assert "Delay from sample to output, median 0.6200 s" in text
+    assert "Period, mean 1.020 s Period as the rig file has it 1 s" in text
+    assert "Sample to output, median 0.6200 s" in text
     assert "Longest time without a new output 3.000 s" in text
     assert "sampled every 1.020 s with a delay of 0.6200 s" in text
 
