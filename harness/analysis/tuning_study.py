@@ -12,7 +12,7 @@ import numpy as np
 from harness.analysis.continuous import predict_continuous
 from harness.analysis.metrics import load_metrics, setpoint_metrics
 from harness.errors import UsageError
-from harness.tuning.loop_margins import is_stable, loop_margins, loop_response, poles_at_zero
+from harness.tuning.loop_margins import loop_margins, stability_and_sensitivity
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
@@ -146,7 +146,7 @@ def evaluate(
             "(0.2 stands for 20 % either way)"
         )
     margins = loop_margins(model, settings, **_times(conditions))
-    stable = _stable(model, settings, conditions)
+    stable, _ = stability_and_sensitivity(model, settings, **_times(conditions))
     if not stable:
         return Evaluation(
             stable=False, margins=margins, setpoint={}, load={}, setpoint_curve=None,
@@ -196,11 +196,6 @@ def _times(conditions: LoopConditions) -> dict[str, float]:
         "output_delay": conditions.output_delay,
         "filter_time": conditions.filter_time,
     }
-
-
-def _stable(model: ProcessModel, settings: PidSettings, conditions: LoopConditions) -> bool:
-    response, grid = loop_response(model, settings, **_times(conditions))
-    return is_stable(response, grid, poles_at_zero(model, settings))
 
 
 def _horizon(
@@ -305,12 +300,11 @@ def _robustness(
     where, fallen = corners[0], None
     for corner in corners:
         plant = _scaled(model, corner)
-        response, grid = loop_response(plant, settings, **_times(conditions))
-        if not is_stable(response, grid, poles_at_zero(plant, settings)):
+        good, sensitivity = stability_and_sensitivity(plant, settings, **_times(conditions))
+        if not good:
             unstable += 1
             fallen = fallen or corner
             continue
-        sensitivity = loop_margins(plant, settings, **_times(conditions)).maximum_sensitivity
         if sensitivity > worst:
             worst, where = sensitivity, corner
         if horizon is not None:

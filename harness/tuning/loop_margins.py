@@ -6,6 +6,7 @@ import math
 from typing import TYPE_CHECKING
 
 import numpy as np
+from scipy.linalg import schur
 
 from harness.errors import ModelError
 from harness.tuning.margins import Margins, frequency_grid, gain_crossover, margins_at
@@ -71,7 +72,7 @@ def loop_margins(
         delay = phase / crossover
         if scan > 0.0:
             delay = _sampled_delay_margin(
-                model, settings, (scan, output_delay, filter_time), grid, delay
+                model, settings, (scan, output_delay, filter_time), crossover, delay
             )
     return margins_at(response, grid, crossover, phase, delay)
 
@@ -142,6 +143,40 @@ def loop_response(
     )
 
 
+def stability_and_sensitivity(
+    model: ProcessModel,
+    settings: PidSettings,
+    *,
+    scan: float = 0.0,
+    output_delay: float = 0.0,
+    filter_time: float = 0.0,
+) -> tuple[bool, float]:
+    """Return whether a loop is stable, and its Ms: what a look at many plants needs.
+
+    Parameters
+    ----------
+    model : ProcessModel
+        From controller output to process variable.
+    settings : PidSettings
+        Settings of the ideal block.
+    scan, output_delay, filter_time : float
+        As for `loop_margins` [s].
+
+    Returns
+    -------
+    stable : bool
+        Whether the closed loop is stable.
+    maximum_sensitivity : float
+        Ms, as the grid shows it: within 1e-3 [-].
+    """
+    response, grid = loop_response(
+        model, settings, scan=scan, output_delay=output_delay, filter_time=filter_time
+    )
+    difference = 1.0 + response(grid)
+    stable = _poles_outside(difference, poles_at_zero(model, settings)) == 0
+    return stable, max(float(1.0 / np.abs(difference).min()), 1.0)
+
+
 def is_stable(response: Response, grid: Array, poles_at_zero: int) -> bool:
     """Return whether the closed loop is stable, by counting encirclements.
 
@@ -159,9 +194,7 @@ def is_stable(response: Response, grid: Array, poles_at_zero: int) -> bool:
     poles_at_zero : int
         m: integrator of the process, and of the block [-].
     """
-    difference = 1.0 + response(grid)
-    turn = float(np.sum(np.angle(difference[1:] / difference[:-1])))
-    return round((0.5 * math.pi * poles_at_zero - turn) / math.pi) == 0
+    return _poles_outside(1.0 + response(grid), poles_at_zero) == 0
 
 
 def poles_at_zero(model: ProcessModel, settings: PidSettings) -> int:
@@ -175,6 +208,12 @@ def poles_at_zero(model: ProcessModel, settings: PidSettings) -> int:
         Settings.
     """
     return int(model.integrating) + int(settings.integral_time is not None)
+
+
+def _poles_outside(difference: Complex, poles_at_zero: int) -> int:
+    """Return how many closed-loop poles lie on the wrong side, from 1 + L along the grid."""
+    turn = float(np.sum(np.angle(difference[1:] / difference[:-1])))
+    return round((0.5 * math.pi * poles_at_zero - turn) / math.pi)
 
 
 def _continuous(
@@ -212,15 +251,21 @@ def _sampled(
     system = state_space(model, filter_time)
     step = discretise(system, scan, output_delay)
     sign = math.copysign(1.0, model.gain)
-    eye = np.eye(system.inlet.size)
+    # In triangular form the states follow one after the other, for all frequencies at once.
+    triangle, turn = (np.asarray(part) for part in schur(step.transition, output="complex"))
+    new, old, seen = (
+        turn.conj().T @ step.late[1],
+        turn.conj().T @ step.old_inlet,
+        system.seen @ turn,
+    )
 
     def loop(frequency: Array) -> Complex:
         z = np.exp(1j * frequency * scan)
-        inlet = step.late[1][None, :] + step.old_inlet[None, :] / z[:, None]
-        states = np.linalg.solve(
-            z[:, None, None] * eye - step.transition, inlet[:, :, None].astype(np.complex128)
-        )[:, :, 0]
-        plant = sign * (states @ system.seen) * z ** (-step.whole)
+        states = np.zeros((seen.size, z.size), np.complex128)
+        for row in reversed(range(seen.size)):
+            driven = new[row] + old[row] / z + triangle[row, row + 1 :] @ states[row + 1 :]
+            states[row] = driven / (z - triangle[row, row])
+        plant = sign * (seen @ states) * z ** (-step.whole)
         block = np.ones_like(z)
         if settings.integral_time is not None:
             block = block + scan / settings.integral_time / (1.0 - 1.0 / z)
@@ -236,7 +281,7 @@ def _sampled_delay_margin(
     model: ProcessModel,
     settings: PidSettings,
     times: tuple[float, float, float],
-    grid: Array,
+    crossing: float,
     first_guess: float,
 ) -> float:
     """Return the extra delay of a held output at which the sampled loop is at its limit."""
@@ -245,11 +290,22 @@ def _sampled_delay_margin(
     for _ in range(_ROUNDS):  # phase falls by about the crossover frequency for each second
         extra = max(margin, -(model.dead_time + output_delay))
         response = _sampled(model, settings, scan, output_delay + extra, filter_time)
-        crossing = gain_crossover(response, grid)
-        if crossing is None or margin < 0.0:
-            break
+        # A delay that is no whole number of scans moves the crossover a little.
+        crossing = _crossing_near(response, crossing)
         left = float(np.angle(-response(np.array([crossing]))[0]))
         margin += left / crossing
-        if abs(left) < _ROUNDING:
+        if abs(left) < _ROUNDING or margin < 0.0:
             break
     return margin
+
+
+def _crossing_near(response: Response, guess: float) -> float:
+    """Return where the loop gain is one, by secants from a frequency near by."""
+    last, here = 1.001 * guess, guess
+    last_size = math.log(abs(complex(response(np.array([last]))[0])))
+    for _ in range(_ROUNDS):
+        size = math.log(abs(complex(response(np.array([here]))[0])))
+        if abs(size) < _ROUNDING or size == last_size:
+            break
+        last, here, last_size = here, here - size * (here - last) / (size - last_size), size
+    return here
