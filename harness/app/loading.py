@@ -104,7 +104,7 @@ def only_phases(trial: Trial, phases: tuple[str, ...]) -> Trial:
     trial : Trial
         The trial.
     phases : tuple of str
-        Names; empty for all.
+        Names, which may have been split at a comma; empty for all.
 
     Raises
     ------
@@ -113,14 +113,33 @@ def only_phases(trial: Trial, phases: tuple[str, ...]) -> Trial:
     """
     if not phases:
         return trial
-    known = [phase.name for phase in trial.phases]
-    for name in phases:
-        if name not in known:
-            raise UsageError(
-                f'trial "{trial.name}" has no phase "{name}"; it has {", ".join(known)}'
-            )
-    kept = tuple(phase for phase in trial.phases if phase.name in phases)
+    wanted = _known_names(phases, trial)
+    kept = tuple(phase for phase in trial.phases if phase.name in wanted)
     return dataclasses.replace(trial, phases=kept)
+
+
+def _known_names(parts: tuple[str, ...], trial: Trial) -> set[str]:
+    """Return the phases that are named; a name with a comma in it may come in its parts."""
+    known = {_bare(phase.name): phase.name for phase in trial.phases}
+    wanted: set[str] = set()
+    start = 0
+    while start < len(parts):
+        for end in range(len(parts), start, -1):
+            name = known.get(_bare(",".join(parts[start:end])))
+            if name is not None:
+                wanted.add(name)
+                start = end
+                break
+        else:
+            raise UsageError(
+                f'trial "{trial.name}" has no phase "{parts[start]}"; it has '
+                + ", ".join(f'"{phase.name}"' for phase in trial.phases)
+            )
+    return wanted
+
+
+def _bare(name: str) -> str:
+    return ",".join(part.strip() for part in name.split(","))
 
 
 def _is_chosen(link: ModbusServerLink | OpcUaServerLink, only: str | None) -> bool:

@@ -197,7 +197,9 @@ def _header(
         pace=options.pace if paced else 0.0,
         controller=controller,
         columns=engine.columns,
-        extra=phases_extra(options.phases),
+        extra=phases_extra(
+            tuple(phase.name for phase in trial.phases) if options.phases else ()
+        ),
     )
 
 
