@@ -19,6 +19,8 @@ class ControllerWatch:
 
     The controller is the connection that last wrote the loop's output; until one has, nobody
     is. Any valid request on that connection counts as a sign of life, a read as well as a write.
+    Where it only writes, so do requests on other connections of its host: some controllers keep
+    one for each. Time in which the rig itself stood still is not held against the controller.
     Where the rig gives the heartbeat a time limit, that counts from the first write of the output.
 
     Parameters
@@ -38,6 +40,7 @@ class ControllerWatch:
     _heartbeat_ns: int | None = field(default=None, init=False)
     _heartbeat: float | None = field(default=None, init=False)
     _silent: bool = field(default=False, init=False)
+    _only_writes: bool = field(default=False, init=False)
     _known: set[tuple[str, int]] = field(default_factory=set, init=False)
 
     @property
@@ -80,6 +83,8 @@ class ControllerWatch:
         new = connection not in self._known
         self._known.add(connection)
         self._connection = connection
+        if new:
+            self._only_writes = True  # until its first read is told of
         self._peer = exchange.peer
         self._last_ns = max(self._last_ns, exchange.arrival_ns)
         self._read_tick = max(self._read_tick, exchange.image_tick)
@@ -108,7 +113,27 @@ class ControllerWatch:
             Of any connection; others than the controller's do not count.
         """
         if (activity.link, activity.connection) == self._connection:
-            self._last_ns = max(self._last_ns, activity.arrival_ns)
+            self._only_writes = activity.image_tick < 0
+        elif not (self._only_writes and self._is_beside(activity)):
+            return
+        self._last_ns = max(self._last_ns, activity.arrival_ns)
+
+    def stood_still(self, time_ns: int) -> None:
+        """Take note that the rig itself did not run for a time, and could hear nobody.
+
+        Parameters
+        ----------
+        time_ns : int
+            How long [ns].
+        """
+        self._last_ns += time_ns
+        if self._heartbeat_ns is not None:
+            self._heartbeat_ns += time_ns
+
+    def _is_beside(self, activity: LinkActivity) -> bool:
+        """Return whether a request came on the controller's link from its host."""
+        here = self._connection is not None and activity.link == self._connection[0]
+        return here and activity.peer.rpartition(":")[0] == self._peer.rpartition(":")[0]
 
     def check(self, now_ns: int) -> str | None:
         """Return why the controller counts as lost, from now on; None when nothing changed.

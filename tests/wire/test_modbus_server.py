@@ -146,6 +146,34 @@ async def test_requests_in_one_segment_are_all_answered_in_order(number):
         await close(writer)
 
 
+async def test_one_that_reads_here_and_writes_there_is_known_to_have_read():
+    """Some controllers keep a connection for reading and another for writing."""
+    async with Stand() as stand:
+        reader, writes = await stand.open()
+        other, reads = await stand.open()
+        request = struct.pack(">HHHBBHH", 1, 0, 6, 3, 6, 0, 44)
+        writes.write(request)
+        await reply(reader)
+        assert [each.image_tick for each in stand.notes.written] == [-1]  # nobody has read yet
+        stand.image.now = 12
+        reads.write(read_request(2, 0, 1))
+        await reply(other)
+        stand.image.now = 13
+        writes.write(request)
+        await reply(reader)
+        assert stand.notes.written[-1].image_tick == 12
+        writes.write(read_request(3, 0, 1))  # from now on its own reads count
+        await reply(reader)
+        stand.image.now = 14
+        reads.write(read_request(4, 0, 1))
+        await reply(other)
+        writes.write(request)
+        await reply(reader)
+        assert stand.notes.written[-1].image_tick == 13
+        await close(writes)
+        await close(reads)
+
+
 async def test_a_request_in_pieces():
     async with Stand() as stand:
         reader, writer = await stand.open()

@@ -85,6 +85,10 @@ class ServerSession:
         Number of the connection [-].
     peer : str
         ``host:port`` of the other end.
+    beside : callable
+        Returns the newest image that other connections of this peer's host have read; -1 when
+        none [ticks]. It stands in where this connection writes and never reads: some
+        controllers keep a connection for each.
     """
 
     def __init__(
@@ -97,7 +101,9 @@ class ServerSession:
         link: str,
         connection: int,
         peer: str,
+        beside: Callable[[], int] = lambda: -1,
     ) -> None:
+        self._beside = beside
         self._bank = bank
         self._image = image
         self._sink = sink
@@ -280,6 +286,7 @@ class ServerSession:
         """Tell of the values taken by one request."""
         if not written:
             return
+        image_tick = self.image_tick if self.image_tick >= 0 else self._beside()
         self._sink.writes(
             [
                 Exchange(
@@ -292,7 +299,7 @@ class ServerSession:
                     point=one.point,
                     value=one.value,
                     raw=one.raw,
-                    image_tick=self.image_tick,
+                    image_tick=image_tick,
                 )
                 for one in written
             ]

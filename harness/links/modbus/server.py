@@ -140,7 +140,13 @@ class ModbusServer:
             link=link.name,
             connection=number,
             peer=peer,
+            beside=lambda: self._read_from(_host(peer)),
         )
+
+    def _read_from(self, host: str) -> int:
+        """Return the newest image that any connection of a host has read; -1 when none."""
+        ticks = (each.image_tick for each in self._connections if _host(each.peer) == host)
+        return max(ticks, default=-1)
 
     def leave(self, connection: _Connection, number: int, peer: str) -> None:
         """Forget a connection that is gone."""
@@ -182,6 +188,16 @@ class _Connection(asyncio.BufferedProtocol):
         if self._session is None:
             self._transport.abort()
 
+    @property
+    def peer(self) -> str:
+        """Return the other end."""
+        return self._peer
+
+    @property
+    def image_tick(self) -> int:
+        """Return the newest image that the peer has read here; -1 when none [ticks]."""
+        return -1 if self._session is None else self._session.image_tick
+
     def get_buffer(self, sizehint: int) -> bytearray:
         return self._buffer
 
@@ -218,6 +234,10 @@ class _Connection(asyncio.BufferedProtocol):
         """Close at once, without waiting for a peer that may never fetch its replies."""
         if self._transport is not None:
             self._transport.abort()
+
+
+def _host(peer: str) -> str:
+    return peer.rpartition(":")[0]
 
 
 def _keep_alive(connection: socket.socket | None) -> None:
