@@ -150,7 +150,7 @@ def score_phase(
         outcome=outcome,
         findings=phase_findings(score, span, judged, outcome, held),
     )
-    return verdict, _curves(score, span, linear, setpoint, metrics[2])
+    return verdict, _curves(score, span, measured, linear, setpoint, metrics[2])
 
 
 def _window(trace: Floats, span: PhaseSpan) -> tuple[Floats, float]:
@@ -311,6 +311,7 @@ def _undecidable(
 def _curves(
     score: LoopScore,
     span: PhaseSpan,
+    measured: _Series,
     linear: _Series,
     setpoint: float,
     predicted: dict[str, float | None],
@@ -324,7 +325,7 @@ def _curves(
     padded = np.concatenate(
         (np.full(span.zero - first, linear.initial), linear.process_variable)
     )
-    size = abs(setpoint - linear.initial)
+    size = abs(measured.final - measured.initial)
     if span.kind != PhaseKind.SETPOINT_STEP.value:
         size = abs(predicted.get("peak_deviation") or 0.0)
     name = f"{loop.process_variable}"
@@ -342,6 +343,8 @@ def _curves(
         load=data.trace[f"{loop.load}.command"][window],
         band=0.02 * size * shown.span,
         unit=shown.unit,
+        # Under a P block the response settles where it settles, off the setpoint.
+        band_centre=shown.lower + shown.span * measured.final,
     )
 
 

@@ -114,6 +114,9 @@ class PhaseCurves:
         Half width of the settling band drawn, in the unit of the process variable.
     unit : str
         Unit of the process variable.
+    band_centre : float or None
+        Value that the settling band stands around, in the unit of the process variable; None
+        for the last setpoint.
     """
 
     name: str
@@ -129,3 +132,4 @@ class PhaseCurves:
     load: NDArray[np.float64]
     band: float
     unit: str
+    band_centre: float | None = None

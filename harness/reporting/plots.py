@@ -155,7 +155,8 @@ def thinned(
 def _draw_process_variable(axes: Any, curves: PhaseCurves, settled: float | None) -> None:
     after = curves.time >= 0
     if after.any() and curves.band > 0:
-        final = float(curves.setpoint[-1])
+        centre = curves.band_centre
+        final = float(curves.setpoint[-1]) if centre is None else centre
         axes.fill_between(
             [0.0, float(curves.time[-1])],
             final - curves.band,

@@ -34,6 +34,12 @@ LEGEND = {
 }
 
 
+PROPORTIONAL = (
+    "A proportional block leaves an offset: bands, overshoot and integrals are taken about the "
+    "value where the response ends, and the offset says how far that is from the setpoint."
+)
+
+
 def phase_sections(document: Mapping[str, object], curves: Sequence[PhaseCurves]) -> Markup:
     """Return a section for each phase that has curves or metrics."""
     drawn = {item.name: item for item in curves}
@@ -65,6 +71,8 @@ def _phase_section(
             Markup(f'<div class="plot">{phase_drawing(curves, settled, **_tags(loop))}</div>'),
         ]
     pieces += [Markup("</div>"), _metrics_table(metrics) if metrics else Markup("")]
+    if metrics and text(part(loop, "tuning"), "law") == "P":
+        pieces.append(element("p", PROPORTIONAL, css="note"))
     return Markup(f'<section class="phase">{joined(pieces)}</section>')
 
 

@@ -2,9 +2,11 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 
-from harness.reporting.plots import STYLES, line_sample, thinned
+from harness.reporting.plots import STYLES, line_sample, phase_drawing, thinned
 
 
 def test_thinning_keeps_ends_and_peaks():
@@ -36,3 +38,11 @@ def test_no_two_curves_share_a_line_style_in_grey():
     assert len(styles) == len(STYLES)
     assert "stroke-dasharray" not in line_sample("measured")
     assert "stroke-dasharray" in line_sample("predicted_linear")
+
+
+def test_the_settling_band_stands_where_the_response_settles(all_curves):
+    curves = all_curves[0]
+    last = float(curves.setpoint[-1])
+    at_setpoint = phase_drawing(curves)
+    assert phase_drawing(replace(curves, band_centre=last)) == at_setpoint
+    assert phase_drawing(replace(curves, band_centre=last - 0.02)) != at_setpoint
