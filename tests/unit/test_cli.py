@@ -19,6 +19,7 @@ from harness.errors import (
     RecordError,
     UsageError,
 )
+from harness.recording.writer import Recorder
 
 CONFIGS = Path(__file__).parents[2] / "configs"
 RIG = str(CONFIGS / "rigs" / "bench_skid.toml")
