@@ -20,6 +20,7 @@ if TYPE_CHECKING:
     from harness.app.run_files import RunResult
 
 _LAST_PORT = 65_535  # RFC 9293, section 3.1: a port is a 16 bit number [-]
+_NO_CACHE = "cannot cache function"  # how numba begins to say that it has no place to write
 _CAUTION = (
     "Outputs of a controller under test must be isolated from the field. Nothing here is evidence "
     "for a safety function; local codes and licensed practice decide."
@@ -49,14 +50,26 @@ def main(arguments: Sequence[str] | None = None) -> int:
     except KeyboardInterrupt:
         return int(ExitCode.INTERRUPTED)
     except Exception as error:  # noqa: BLE001  it would end with 1, as if a controller had failed
-        traceback.print_exc()
+        return int(_tell_unforeseen(error))
+
+
+def _tell_unforeseen(error: Exception) -> ExitCode:
+    """Say what no part of the program has foreseen."""
+    if isinstance(error, RuntimeError) and str(error).startswith(_NO_CACHE):
         print(  # noqa: T201
-            f"dryrig: {error!r}: this is a defect of the program, not of your files or your "
-            "controller; please report it with the lines above. A run so far is kept and counts "
-            "as invalid",
+            "dryrig: the compiled simulation can be kept nowhere: neither the user's cache folder "
+            "nor the program's own may be written; set NUMBA_CACHE_DIR to a folder that may be",
             file=sys.stderr,
         )
-        return int(ExitCode.INVALID)
+        return ExitCode.USAGE
+    traceback.print_exc()
+    print(  # noqa: T201
+        f"dryrig: {error!r}: this is a defect of the program, not of your files or your "
+        "controller; please report it with the lines above. A run so far is kept and counts "
+        "as invalid",
+        file=sys.stderr,
+    )
+    return ExitCode.INVALID
 
 
 def build_parser() -> argparse.ArgumentParser:

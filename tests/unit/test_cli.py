@@ -150,6 +150,7 @@ def test_an_unwritable_place_for_the_run_is_wrong_use(tmp_path, capsys):
         (InvalidRunError("never steady"), 3, "never steady"),
         (RecordError("disk full"), 3, "disk full"),
         (KeyboardInterrupt(), 130, ""),
+        (RuntimeError("cannot cache function 'f': no locator"), 2, "set NUMBA_CACHE_DIR"),
         # not 1: that stands for a controller that failed
         (ZeroDivisionError("division"), 3, "this is a defect of the program"),
         (OSError("no memory"), 3, "this is a defect of the program"),
