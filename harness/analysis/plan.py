@@ -32,6 +32,7 @@ _LOOK_DELAY = 1.2  # dominant time constants from the first right moment to the 
 _AT_REST = 1e-3  # of its range: a response that moves less over its last third is at rest [-]
 # An exponential is within a hundredth after 4.6 time constants; the dwell of five ends no sooner.
 _TIMES_TO_BOUND = 5.0
+FREE = (2.0, 2.0)  # beyond every output: no limit is met [-]
 _MID = 0.5  # of output or span: where a linear prediction stands does not matter [-]
 
 
@@ -63,7 +64,7 @@ def predict_phase(
     schedule: ScanSchedule,
     tick: float,
     rows: int,
-    change: float | None = None,
+    room: tuple[float, float] = FREE,
 ) -> tuple[Floats, Floats]:
     """Predict a phase with linear models, from a steady state at mid range.
 
@@ -83,8 +84,8 @@ def predict_phase(
         Step [s].
     rows : int
         Length [ticks].
-    change : float or None
-        Size of the step; None takes the phase's [fraction].
+    room : tuple of float
+        How far the controller may move its output down and up from where it stands [-].
 
     Returns
     -------
@@ -93,7 +94,7 @@ def predict_phase(
     output : ndarray, shape (rows,)
         Deviation of the output from its start [-].
     """
-    size = phase.change if change is None else change
+    size = phase.change
     automatic = phase.mode is Mode.AUTOMATIC
     setpoint = np.full(rows, _MID)
     load = np.full(rows, _MID)
@@ -116,8 +117,8 @@ def predict_phase(
         manual,
         _MID,
         _MID,
-        loop.output_low - 1.0,
-        loop.output_high + 1.0,
+        _MID - room[0],
+        _MID + room[1],
         initial_load=_MID,
     )
     return process_variable - _MID, output - _MID
@@ -131,6 +132,7 @@ def plan_phase(
     schedule: ScanSchedule,
     tick: float,
     rule: SteadyRule,
+    room: tuple[float, float] = FREE,
 ) -> PhasePlan:
     """Return the expectation of a phase.
 
@@ -150,6 +152,9 @@ def plan_phase(
         Step [s].
     rule : SteadyRule
         When a phase counts as steady.
+    room : tuple of float
+        How far the controller may move its output down and up from where it stands: one that
+        comes to a limit leaves the plant to its own, slower, time constants [-].
 
     Returns
     -------
@@ -166,7 +171,9 @@ def plan_phase(
     horizon = _HORIZON * max(models.output.total_lag, models.load.total_lag)
     for _ in range(_DOUBLINGS):
         rows = max(10, round(horizon / tick))
-        response, _ = predict_phase(stand_in, loop, models, settings, schedule, tick, rows)
+        response, _ = predict_phase(
+            stand_in, loop, models, settings, schedule, tick, rows, room
+        )
         time = np.arange(rows, dtype=np.float64) * tick
         dominant, reached = _tail(time, response, rule.remaining * effect)
         if dominant is not None:

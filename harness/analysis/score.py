@@ -97,8 +97,7 @@ def score_run(data: RunData) -> Scored:
     missing = [p.name for p in data.trial.phases if p.name not in {s.name for s in spans}]
     if missing:
         reasons.append(f"not run: {', '.join(missing)}")
-    outcomes = [v.outcome for v in verdicts if v.outcome is not Outcome.SHOWN]
-    outcome = worst(outcomes) if outcomes else Outcome.PASS
+    outcome = worst([verdict.outcome for verdict in verdicts])
     if reasons:
         outcome = Outcome.INVALID
     run = RunScore(

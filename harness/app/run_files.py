@@ -53,7 +53,7 @@ class RunResult:
     def exit_code(self) -> ExitCode:
         """Return what the command returns for this verdict."""
         match self.outcome:
-            case Outcome.PASS:
+            case Outcome.PASS | Outcome.SHOWN:  # steps in manual alone are judged by nobody
                 return ExitCode.PASS
             case Outcome.FAIL:
                 return ExitCode.FAIL

@@ -307,8 +307,16 @@ class _TrialRunner:
         schedule = ScanSchedule(
             scan_ticks=max(1, round(loop.scan / tick)), delay_ticks=loop.output_delay
         )
+        output = self._session.engine.output(loop.output)
         return plan_phase(
-            phase, loop, work.models, work.settings, schedule, tick, self._trial.steady
+            phase,
+            loop,
+            work.models,
+            work.settings,
+            schedule,
+            tick,
+            self._trial.steady,
+            (output - loop.output_low, loop.output_high - output),
         )
 
     def _order(self, phase: Phase, work: _LoopWork) -> int:

@@ -246,6 +246,7 @@ class Runs:
     Recorder = MemoryRecorder
     Right = RightController
     Stepped = SteppedSession
+    configs = CONFIGS
     rig = staticmethod(rig_of)
     trial = staticmethod(trial_of)
     only = staticmethod(only)
