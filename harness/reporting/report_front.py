@@ -103,7 +103,7 @@ def summary(document: Mapping[str, object]) -> Markup:
         pieces.append(_overview(judged))
     told = [
         element("li", element("b", ", ".join(names)), f": {finding}")
-        for finding, names in findings_told(phases)
+        for finding, names in findings_told(document)
     ]
     told += [element("li", element("b", name), f": {words}") for name, words in misses(judged)]
     if told:

@@ -41,7 +41,8 @@ def judged_phases(document: Mapping[str, object]) -> list[Document]:
 def misses(phases: Iterable[Mapping[str, object]]) -> list[tuple[str, str]]:
     """Return for each phase, in words, the figures that lie outside their limits.
 
-    The first few come with their figures, the others by name.
+    The first few come with their figures, the others by name. A phase that cannot be judged
+    has none.
 
     Parameters
     ----------
@@ -55,6 +56,8 @@ def misses(phases: Iterable[Mapping[str, object]]) -> list[tuple[str, str]]:
     """
     told = []
     for phase in phases:
+        if outcome_of(text(phase, "verdict")) is not Outcome.FAIL:
+            continue
         missed = [
             (name, metric)
             for name, metric in named_parts(phase, "metrics").items()
@@ -68,18 +71,22 @@ def misses(phases: Iterable[Mapping[str, object]]) -> list[tuple[str, str]]:
     return told
 
 
-def findings_told(phases: Iterable[Mapping[str, object]]) -> list[tuple[str, list[str]]]:
+def findings_told(document: Mapping[str, object]) -> list[tuple[str, list[str]]]:
     """Return each finding once, with the names of the phases that it was made in.
+
+    One that the reasons of the run tell already is left out.
 
     Parameters
     ----------
-    phases : iterable of mapping
-        Phases of the verdict document.
+    document : mapping
+        The verdict document.
     """
+    reasons = " ".join(texts(document, "reasons")).lower()
     told: dict[str, list[str]] = {}
-    for phase in phases:
+    for phase in parts(document, "phases"):
         for finding in texts(phase, "findings"):
-            told.setdefault(finding, []).append(text(phase, "name"))
+            if finding.rstrip(".").lower() not in reasons:
+                told.setdefault(finding, []).append(text(phase, "name"))
     return list(told.items())
 
 

@@ -12,7 +12,7 @@ from rich.text import Text
 
 from harness.domain.signals import Quality
 from harness.domain.verdict import Outcome
-from harness.reporting.document import Document, named_parts, number, part, parts, text, texts
+from harness.reporting.document import Document, named_parts, number, part, text, texts
 from harness.reporting.summary import findings_told, judged_phases, misses
 from harness.reporting.words import (
     figure,
@@ -101,8 +101,7 @@ def verdict_table(document: Mapping[str, object], *, full: bool = False) -> Rend
         _remark("", reason) for reason in texts(document, "reasons")
     ]
     remarks += [
-        _remark(", ".join(names), finding)
-        for finding, names in findings_told(parts(document, "phases"))
+        _remark(", ".join(names), finding) for finding, names in findings_told(document)
     ]
     remarks += [_remark(name, words) for name, words in misses(phases)]
     table = _metric_table(phases) if full else _summary_table(phases)
