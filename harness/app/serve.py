@@ -8,9 +8,11 @@ import sys
 import time
 from contextlib import ExitStack
 from dataclasses import dataclass
+from string import ascii_uppercase
 from typing import TYPE_CHECKING
 
 from rich.live import Live
+from rich.text import Text
 
 from harness.app.loading import LinkChoice, read_rig
 from harness.app.output import write_output
@@ -27,7 +29,7 @@ from harness.links.raw import RawView
 from harness.recording.process import RecorderProcess
 from harness.reporting.tables import TagLine, tag_table
 from harness.reporting.terminal import make_console
-from harness.reporting.words import CAUTIONS
+from harness.reporting.words import CAUTIONS, duration, event_text
 from harness.runtime.clock import PacedClock
 from harness.runtime.link_process import LinkProcess
 from harness.runtime.requests import NothingToCompute
@@ -251,6 +253,7 @@ class _Table:
         self._view = view
         self._live = Live(console=console, auto_refresh=False) if live else None
         self._last_ns = 0
+        self._letters: dict[str, str] = {}
 
     def __enter__(self) -> _Table:
         if self._live is not None:
@@ -263,15 +266,15 @@ class _Table:
 
     def event(self, event: Event) -> None:
         if event.kind is not EventKind.ORDER:
-            self._console.print(
-                f"tick {event.tick}: {event.kind.value}: {event.subject}: {event.text}"
-            )
+            words = event_text(event.subject, event.kind.value, event.text)
+            self._console.print(Text(f"tick {event.tick}: {words}"), soft_wrap=True)
 
     def look(self, session: Session) -> None:
         now_ns = time.perf_counter_ns()
         if self._live is None or now_ns - self._last_ns < _FRAME_NS:
             return
         self._last_ns = now_ns
+        pace = f"pace {session.pace:g}"
         lines = [
             TagLine(
                 name=name,
@@ -279,13 +282,28 @@ class _Table:
                 unit=point.range.unit,
                 raw=raw_text(self._view.of(name, value, current, quality), current),
                 quality=Quality(int(quality)),
-                read_by=contact_text(session.last_reader.get(name), now_ns),
-                written_by=contact_text(session.last_writer.get(name), now_ns),
+                read_by=self._who(session.last_reader.get(name), now_ns),
+                written_by=self._who(session.last_writer.get(name), now_ns),
             )
             for name, (point, value, current, quality) in session.image().items()
         ]
-        title = f"{session.rig.name}: {session.time:.0f} s"
-        self._live.update(tag_table(lines, title), refresh=True)
+        title = f"{session.rig.name}: plant time {duration(session.time)}, {pace}"
+        peers = {letter: peer for peer, letter in self._letters.items()}
+        self._live.update(tag_table(lines, title, peers, self._console.height), refresh=True)
+
+    def _who(self, contact: Contact | None, now_ns: int) -> str:
+        """Return the letter of a peer, and how long ago; empty for nobody."""
+        if contact is None:
+            return ""
+        peer = f"{contact.peer} over {contact.link}"
+        letter = self._letters.setdefault(peer, _letter(len(self._letters)))
+        return f"{letter} {_ago(contact, now_ns):.1f} s ago"
+
+
+def _letter(index: int) -> str:
+    """Return A to Z, then A1 to Z1, and so on."""
+    turn, place = divmod(index, len(ascii_uppercase))
+    return ascii_uppercase[place] + (str(turn) if turn else "")
 
 
 def raw_text(raw: Raw | None, current: float) -> str:
@@ -298,27 +316,14 @@ def raw_text(raw: Raw | None, current: float) -> str:
     current : float
         Loop current; NaN where there is none [mA].
     """
-    parts = [f"{current:.3f} mA"] if math.isfinite(current) else []
+    parts = []
     if raw is not None:
         number = "" if raw.number is None else f"{raw.number} = "
         where = f" at {raw.address}" if raw.address.isdigit() else ""
         parts.append(f"{number}{raw.content}{where}")
+    if math.isfinite(current):
+        parts.append(f"{current:.3f} mA")
     return ", ".join(parts)
-
-
-def contact_text(contact: Contact | None, now_ns: int) -> str:
-    """Return who dealt with a point, over which link and how long ago; empty for nobody.
-
-    Parameters
-    ----------
-    contact : Contact or None
-        Who, and when.
-    now_ns : int
-        Time on the clock of the arrivals [ns].
-    """
-    if contact is None:
-        return ""
-    return f"{contact.link} {contact.peer}, {_ago(contact, now_ns):.1f} s ago"
 
 
 def _ago(contact: Contact, now_ns: int) -> float:

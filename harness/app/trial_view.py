@@ -24,7 +24,7 @@ from harness.reporting.view_state import (
     PhaseView,
     ViewState,
 )
-from harness.reporting.words import duration
+from harness.reporting.words import duration, event_text
 
 if TYPE_CHECKING:
     from multiprocessing.connection import Connection
@@ -201,8 +201,7 @@ def _event_words(event: Event) -> str:
         words = f"{event.subject}: {event.text}"
         expected = float(str(event.data.get("expected", 0.0)))
         return f"{words}, about {duration(expected)}" if expected > 0.0 else words
-    subject = "" if event.subject == "run" else f"{event.subject}, "
-    return f"{subject}{event.kind.value}: {event.text}"
+    return event_text(event.subject, event.kind.value, event.text)
 
 
 class DirectView:

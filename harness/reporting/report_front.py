@@ -51,7 +51,11 @@ GLANCE = (
 def head_block(document: Mapping[str, object], header: RunHeader) -> Markup:
     """Return name and verdict of the run."""
     outcome = outcome_of(text(document, "verdict"))
-    reasons = joined(element("li", reason) for reason in texts(document, "reasons"))
+    kind = outcome.value.replace(" ", "-")
+    reasons = joined(
+        element("li", f"{reason[:1].upper()}{reason[1:].rstrip('.')}.")
+        for reason in texts(document, "reasons")
+    )
     names = element(
         "div",
         element("p", "Control loop test report", css="kind"),
@@ -63,10 +67,11 @@ def head_block(document: Mapping[str, object], header: RunHeader) -> Markup:
         "div",
         badge(outcome, "large"),
         element("p", MEANING[outcome]),
-        Markup(f"<ul>{reasons}</ul>") if reasons else "",
-        css=f"verdict {outcome.value.replace(' ', '-')}",
+        css=f"verdict {kind}",
     )
-    return Markup(f"<header>{names}{verdict}</header>\n")
+    # Beneath both, over the whole width: a reason is often a long sentence.
+    why = element("ul", reasons, css=f"reasons {kind}") if reasons else ""
+    return Markup(f"<header>{names}{verdict}</header>{why}\n")
 
 
 def title_block(document: Mapping[str, object], header: RunHeader) -> Markup:

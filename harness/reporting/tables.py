@@ -5,7 +5,7 @@ from __future__ import annotations
 from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
-from rich.console import Group, RenderableType
+from rich.console import Group, JustifyMethod, RenderableType
 from rich.padding import Padding
 from rich.table import Table
 from rich.text import Text
@@ -25,7 +25,7 @@ from harness.reporting.words import (
 )
 
 if TYPE_CHECKING:
-    from collections.abc import Iterable, Mapping
+    from collections.abc import Iterable, Mapping, Sequence
 
 # Words stand beside every colour, so that none is needed to read the table.
 OUTCOME_STYLES = {
@@ -50,6 +50,7 @@ MARKS = {
 MARK_WORDS = {"!": "outside its limits", "?": "not decidable"}
 LEAST_OFFSET = 1e-3  # [fraction of span]; a smaller one is rounding, not proportional control
 LEAST_COLUMN = 6  # [characters]
+TAG_TABLE_LINES = 4  # [lines]; title, head, what is left out, and the cursor
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -69,7 +70,7 @@ class TagLine:
     quality : Quality
         Quality.
     read_by, written_by : str
-        Peer and how long ago, in words; empty for never.
+        Peer, or the letter that stands for it, and how long ago; empty for never.
     """
 
     name: str
@@ -109,32 +110,53 @@ def verdict_table(document: Mapping[str, object], *, full: bool = False) -> Rend
     return Group(*pieces, head, *remarks)
 
 
-def tag_table(lines: Iterable[TagLine], title: str = "") -> Table:
-    """Return the tags of a live session as a table.
+def tag_table(
+    lines: Sequence[TagLine],
+    title: str = "",
+    peers: Mapping[str, str] | None = None,
+    height: int | None = None,
+) -> RenderableType:
+    """Return the tags of a live session as a table, a line a tag.
 
     Parameters
     ----------
-    lines : iterable of TagLine
+    lines : sequence of TagLine
         Tags, in order.
     title : str
         Title of the table.
+    peers : mapping of str to str, or None
+        Peers by the letters that stand for them in the table.
+    height : int or None
+        Lines that there is room for; None for as many as it takes [-].
     """
+    told = [f"{letter} = {peer}" for letter, peer in (peers or {}).items()]
+    room = len(lines) if height is None else max(1, height - TAG_TABLE_LINES - len(told))
+    if len(lines) > room:
+        told.append(f"{len(lines) - room} more points; a higher window shows them")
+    names = ("Tag", "Value", "Unit", "Quality", "Last read", "Last written", "Raw")
+    rows = [names, *(_tag_cells(line) for line in lines[:room])]
     table = plain_table(title)
-    for name in ("Tag", "Value", "Unit", "Raw", "Quality", "Last read by", "Last written by"):
-        right = name in {"Value", "Raw"}
-        table.add_column(name, justify="right" if right else "left", min_width=LEAST_COLUMN)
-    for line in lines:
-        quality = Text(line.quality.name.lower(), style=QUALITY_STYLES[line.quality])
-        table.add_row(
-            Text(line.name),
-            figure(line.value, "none"),
-            Text(shown_unit(line.unit) if line.unit != "1" else ""),
-            Text(line.raw),
-            quality,
-            Text(line.read_by or "never"),
-            Text(line.written_by or "never"),
-        )
-    return table
+    for index, name in enumerate(names):
+        # Where room is short the raw content is cut, and nothing else.
+        widest = max(len(row[index]) for row in rows) if name != "Raw" else LEAST_COLUMN
+        justify: JustifyMethod = "right" if name == "Value" else "left"
+        table.add_column(name, justify=justify, min_width=widest, no_wrap=True)
+    for line, cells in zip(lines, rows[1:], strict=False):
+        styles = [QUALITY_STYLES[line.quality] if name == "Quality" else "" for name in names]
+        table.add_row(*(Text(c, style=s) for c, s in zip(cells, styles, strict=True)))
+    return Group(table, *(Text(words, no_wrap=True, overflow="ellipsis") for words in told))
+
+
+def _tag_cells(line: TagLine) -> tuple[str, ...]:
+    return (
+        line.name,
+        figure(line.value, "none"),
+        shown_unit(line.unit) if line.unit != "1" else "",
+        line.quality.name.lower(),
+        line.read_by or "never",
+        line.written_by or "never",
+        line.raw,
+    )
 
 
 def _remark(name: str, words: str) -> RenderableType:

@@ -182,6 +182,11 @@ def limit_words(limit: Mapping[str, object], unit: str) -> str:
     return f"at least {figure_in(low, unit)}" if low is not None else "none"
 
 
+def event_text(subject: str, kind: str, text: str) -> str:
+    """Return an event in one line: who, what kind, and its text; a run needs no name."""
+    return f"{kind}: {text}" if subject == "run" else f"{subject}, {kind}: {text}"
+
+
 def duration(seconds: float) -> str:
     """Return a duration as ``h:mm:ss``, or ``m:ss`` below an hour [s]."""
     whole = max(0, round(seconds))

@@ -135,7 +135,7 @@ def test_a_failure_shows_in_the_head_and_at_its_metric(failed_document, header):
     page = render_report(failed_document, [], [], header)
     text = read(page).text
     assert "outside its limits" in text
-    assert failed_document["reasons"][0] in text
+    assert "Setpoint up: settling time and overshoot outside their limits." in text
     assert "not reached" in text
     assert page.count('class="outside"') == 1
 

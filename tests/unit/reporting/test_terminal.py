@@ -282,3 +282,24 @@ def test_the_tags_of_a_live_session():
     text = drawn(tag_table(lines, "Modbus TCP on 127.0.0.1:5020"))
     for words in ("Modbus TCP", "LT-102", "none", "0x9F3A", "bad", "51882", "never"):
         assert words in text
+
+
+def test_tags_keep_a_line_each_and_say_what_a_low_window_leaves_out():
+    line = TagLine(
+        name="LIC-102.MODE.RB",
+        value=0.7527,
+        unit="m3/h",
+        raw="3F40 B25A at 12, 12.029 mA",
+        quality=Quality.GOOD,
+        read_by="A 0.1 s ago",
+        written_by="A 12.4 s ago",
+    )
+    text = drawn(tag_table([line] * 30, "skid", {"A": "127.0.0.1:51882 over modbus"}, 20), 80)
+    lines = text.splitlines()
+    assert len(lines) <= 19  # and the line of the cursor
+    assert all(len(line) <= 80 for line in lines)
+    shown = [line for line in lines if line.startswith("LIC-102.MODE.RB")]
+    assert f"{30 - len(shown)} more points" in text
+    assert "A = 127.0.0.1:51882 over modbus" in text
+    for words in ("0.7527", "m³/h", "good", "A 0.1 s ago", "A 12.4 s ago", "3F40"):
+        assert words in shown[0]
