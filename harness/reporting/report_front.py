@@ -154,11 +154,19 @@ def _result_words(judged: list[dict[str, object]]) -> str:
     if not judged:
         return "No phase was judged."
     outcomes = [outcome_of(text(phase, "verdict")) for phase in judged]
-    passed = _count(outcomes, Outcome.PASS)
-    words = f"{passed} of {len(judged)} judged phases pass"
+    valid = [
+        phase
+        for phase, outcome in zip(judged, outcomes, strict=True)
+        if outcome is not Outcome.INVALID
+    ]
+    lost = len(judged) - len(valid)
+    cannot = f"{lost} of {len(judged)} phases cannot be judged"
+    if not valid:
+        return f"{cannot}."
+    words = f"{_count(outcomes, Outcome.PASS)} of {len(valid)} judged phases pass"
     figures = [
         outcome_of(text(metric, "verdict"))
-        for phase in judged
+        for phase in valid
         for metric in named_parts(phase, "metrics").values()
     ]
     judged_figures = len(figures) - _count(figures, Outcome.SHOWN)
@@ -167,7 +175,7 @@ def _result_words(judged: list[dict[str, object]]) -> str:
     for outcome, told in ((Outcome.FAIL, "outside"), (Outcome.NOT_DECIDABLE, "not decidable")):
         if count := _count(figures, outcome):
             words += f", {count} {told}"
-    return words + "."
+    return f"{words}; {cannot}." if lost else f"{words}."
 
 
 def _count(outcomes: list[Outcome], wanted: Outcome) -> int:

@@ -246,6 +246,13 @@ def test_the_summary_counts_phases_and_figures(page, failed_document, header):
     )
 
 
+def test_the_figures_of_a_phase_that_cannot_be_judged_do_not_count(document, header):
+    document["phases"][3]["verdict"] = "invalid"
+    text = read(render_report(document, [], [], header)).text
+    assert "2 of 2 judged phases pass; of 15 figures judged 14 lie within limits" in text
+    assert "1 not decidable; 1 of 3 phases cannot be judged." in text
+
+
 def test_the_controllers_scan_is_told_as_measured(document, header):
     document["loops"]["LIC-102"] |= {
         "scan": 1.0,
