@@ -14,7 +14,7 @@ from harness.errors import UsageError
 from harness.runtime.clock import PacedClock
 from harness.runtime.plc_block import NO_FAULTS, SoftPlcFaults, program_of, warm_up
 from harness.runtime.soft_plc import run_soft_plc
-from harness.runtime.steadiness import set_memory_aside
+from harness.runtime.steadiness import set_memory_aside, steady_thread
 
 if TYPE_CHECKING:
     from collections.abc import Callable, Iterator, Sequence
@@ -72,7 +72,8 @@ def run_soft_plc_blocking(
     client = make_client(end, points, host, port)
     warm_up(program)
     set_memory_aside()
-    asyncio.run(_run_until_signal(client, program, pace, on_event))
+    with steady_thread():
+        asyncio.run(_run_until_signal(client, program, pace, on_event))
 
 
 def find_link(rig: Rig, link: str) -> ModbusServerLink | OpcUaServerLink:

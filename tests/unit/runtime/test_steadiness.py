@@ -3,9 +3,14 @@
 from __future__ import annotations
 
 import gc
+import os
+import sys
+import threading
 import weakref
 
-from harness.runtime.steadiness import steady_memory
+import pytest
+
+from harness.runtime.steadiness import steady_memory, steady_thread
 
 
 class Node:
@@ -32,3 +37,17 @@ def test_garbage_made_before_is_collected_first_and_garbage_made_later_as_ever()
         later = weakref.ref(Node())
         gc.collect()
         assert later() is None
+
+
+@pytest.mark.skipif(sys.platform != "linux", reason="elsewhere there is nothing to ask for")
+def test_a_real_time_thread_where_granted_alone_and_for_as_long_as_asked() -> None:
+    before = os.sched_getscheduler(0)
+    inside: list[int] = []
+    with steady_thread() as granted:
+        here = os.sched_getscheduler(0) & ~os.SCHED_RESET_ON_FORK
+        other = threading.Thread(target=lambda: inside.append(os.sched_getscheduler(0)))
+        other.start()
+        other.join()
+    assert here == (os.SCHED_RR if granted else before)
+    assert inside == [os.SCHED_OTHER]
+    assert os.sched_getscheduler(0) == before
