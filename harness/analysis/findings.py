@@ -171,7 +171,7 @@ def _input_findings(score: LoopScore, law: ReadLaw) -> list[str]:
     weight = law.setpoint_weight
     if weight is not None and abs(weight - 1.0) > _LAW_TOLERANCE:
         findings.append(
-            f"Its proportional part acts on {weight:.2f} of a change of setpoint, not on the whole: "
+            f"Its proportional part acts on {round(weight, 2) + 0.0:.2f} of a change of setpoint, not on the whole: "
             "look for a setpoint weight, filter or ramp."
         )
     if law.delay > 0.0:
@@ -214,11 +214,14 @@ def _at_limit(score: LoopScore, span: PhaseSpan) -> list[str]:
             f"{words}, on the side the error asks for: more than the valve can give was wanted. "
             "Look at the range the controller takes its input to have, and for a windup."
         ]
-    before = _law_between(score, 0, span.end)
-    if before is not None and before.gain > _ANSWERS * score.settings.gain:
+    manual = np.flatnonzero(score.data.trace[f"{loop.tag}.mode"][: span.end] == 0.0)
+    since = _law_between(score, int(manual[-1]) + 1 if len(manual) else 0, span.end)
+    gain = 0.0 if since is None else since.gain / score.settings.gain
+    if gain > -_ANSWERS:
+        before = ", and it did act the right way before" if gain > _ANSWERS else ""
         return [
-            f"{words}, though the error asks for the opposite, and it did act the right way "
-            "before: look for a frozen input and for a windup."
+            f"{words}, though the error asks for the opposite{before}: look for a frozen input, "
+            "for a windup, and at its action setting."
         ]
     return [
         f"{words}, and the error asks for the opposite: the controller acts the wrong way. "

@@ -13,13 +13,20 @@ from harness.analysis.plan import plan_phase
 from harness.analysis.steady import SteadyDetector
 from harness.analysis.step_record import LEAD_IN, StepRecord
 from harness.controllers.block import AUTOMATIC, MANUAL
-from harness.domain.models import FittedModel, LagModel, LoopModels
+from harness.domain.models import FittedModel, LoopModels
 from harness.domain.points import shown_range
 from harness.domain.run import EventKind
 from harness.domain.trial import Mode, ModelSource, PhaseKind, SettingsSource
 from harness.errors import InvalidRunError
 from harness.runtime.requests import Advance, Compute
 from harness.runtime.session import require_controllers
+from harness.runtime.trial_words import (
+    PATHS,
+    known_words,
+    model_document,
+    models_told,
+    phase_words,
+)
 from harness.tuning.identification import fit_best
 from harness.tuning.synthesis import direct_synthesis
 
@@ -38,7 +45,6 @@ if TYPE_CHECKING:
     Floats = NDArray[np.float64]
 
 WAIT_FOR_CONTROLLER = 30.0  # for a controller to be found or to take an order [wall s]
-_PATHS = ("output", "load")
 _CONFIDENCE = 0.95  # of the limits of a fit [-]
 
 
@@ -240,33 +246,11 @@ class _TrialRunner:
         )
         work.identified = True
         # A trial cut to some of its phases may have had no steps to identify a path from.
-        source = "identified" if len(fits) == len(_PATHS) else "identified in part"
+        source = "identified" if len(fits) == len(PATHS) else "identified in part"
         self._tell_models(work, fits, source if fits else ModelSource.LINEARISED.value)
 
     def _tell_models(self, work: _LoopWork, fits: dict[str, FittedModel], source: str) -> None:
-        data: dict[str, object] = {"source": source}
-        for path in _PATHS:
-            model: LagModel = getattr(work.models, path)
-            fit = fits.get(path)
-            document = model_document(model)
-            document["source"] = (
-                source if not fits else "identified" if fit else ModelSource.LINEARISED.value
-            )
-            if fit is not None:
-                document["limits"] = {
-                    name: {"low": limit.low, "high": limit.high, "level": limit.level}
-                    for name, limit in fit.limits.items()
-                }
-                document["residual_rms"] = fit.residual_rms
-                document["samples"] = fit.samples
-            document["linearised"] = model_document(getattr(work.linearised, path))
-            data[path] = document
-        output = work.models.output
-        lags = " + ".join(f"{lag:.3g}" for lag in output.time_constants)
-        text = (
-            f"{source}: gain {output.gain:.4g} %/%, total lag {output.total_lag:.4g} s "
-            f"(lags {lags} s, dead time {output.dead_time:.2g} s)"
-        )
+        text, data = models_told(work.models, work.linearised, fits, source)
         self._session.event(EventKind.MODELS, work.loop.tag, text, data)
 
     # Phases.
@@ -281,7 +265,7 @@ class _TrialRunner:
         session.event(
             EventKind.PHASE_STARTED,
             phase.name,
-            _phase_words(phase),
+            phase_words(phase),
             {
                 "index": index,
                 "loop": phase.loop,
@@ -296,7 +280,7 @@ class _TrialRunner:
         session.event(
             EventKind.ORDER_KNOWN,
             phase.name,
-            _known_words(phase, (session.tick - order) * session.rig.tick),
+            known_words(phase, (session.tick - order) * session.rig.tick),
             {"order": order},
         )
         rows += yield from self._until_steady(phase, work, plan)
@@ -395,42 +379,3 @@ class _TrialRunner:
             (value - span.lower) / span.span,
             len(lead_in),
         )
-
-
-def _phase_words(phase: Phase) -> str:
-    """Return what a phase does, in words."""
-    if phase.kind is PhaseKind.SETTLE:
-        return f"wait for a steady state, in {phase.mode.value}"
-    return f"{phase.kind.value.replace('_', ' ')} of {100 * phase.change:+.3g} %, in {phase.mode.value}"
-
-
-def _known_words(phase: Phase, after: float) -> str:
-    """Return since when a phase's step acts; ``after`` is the time since its order [s]."""
-    match phase.kind:
-        case PhaseKind.SETTLE:
-            return "nothing was ordered"
-        case PhaseKind.LOAD_STEP:
-            return "the load acts from here on"
-        case _:
-            return f"the controller has it {after:.3g} s after the order"
-
-
-def model_document(model: LagModel) -> dict[str, object]:
-    """Return a model as JSON-able facts.
-
-    Parameters
-    ----------
-    model : LagModel
-        The model.
-
-    Returns
-    -------
-    dict
-        Gain [-], time constants [s], dead time [s], total lag [s].
-    """
-    return {
-        "gain": model.gain,
-        "time_constants": list(model.time_constants),
-        "dead_time": model.dead_time,
-        "total_lag": model.total_lag,
-    }

@@ -23,9 +23,10 @@ NOT_DECIDABLE = "cannot be decided"
 def verdict_of(runs):
     """Return the verdict of a trial under a changed right controller, by its overrides."""
 
-    def make(trial="short", **overrides):
+    def make(*first, **overrides):
         kind = type("Controller", (runs.Right,), overrides)
-        return score_run(runs.run(runs.rig(), runs.trial(trial), kind)).document
+        trial = runs.only(runs.trial("short"), *first, "setpoint up", "load up")
+        return score_run(runs.run(runs.rig(), trial, kind)).document
 
     return make
 
@@ -91,7 +92,7 @@ def _rate_limited(self, output, seen):
 
 
 def _frozen(self, seen):
-    if seen.tick < 1400:  # the setpoint is stepped before
+    if seen.tick < 200:  # the setpoint is stepped before
         self.__dict__["kept"] = seen.process_variable
     return self.kept
 
@@ -214,11 +215,11 @@ INVALID = {
     "answers 20 s after reading": ({"delay": 40}, r"answered what the controller read 20 s"),
     "scans every 20 s": ({"period": 40}, r"held for 20 s"),
     "stops writing": (
-        {"answer": lambda self, output, seen: None if seen.tick > 1400 else output},
+        {"answer": lambda self, output, seen: None if seen.tick > 250 else output},
         r"held for [67]\d\d s",
     ),
     "writes no more near the end": (
-        {"answer": lambda self, output, seen: None if seen.tick > 3600 else output},
+        {"answer": lambda self, output, seen: None if seen.tick > 2600 else output},
         r"phase 'load up': an output of FV-101 was held for",
     ),
     "Ti in seconds where minutes are meant": (
@@ -240,7 +241,9 @@ def test_what_cannot_be_judged_is_invalid_and_says_why(verdict_of, case):
 
 
 def test_an_unsteady_settling_names_the_cause(verdict_of):
-    document = verdict_of(integral_time=lambda self, seen: seen.integral_time / 60.0)
+    document = verdict_of("settle", integral_time=lambda self, seen: seen.integral_time / 60.0)
+    assert document["phases"][0]["kind"] == "settle"
+    assert len(document["phases"]) == 1
     assert re.search(r"Ti of about .* 0\.02 times", " ".join(findings_of(document)))
 
 
