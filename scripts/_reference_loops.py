@@ -15,13 +15,13 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import TYPE_CHECKING
 
+from harness.domain.orders import LoopOrders
 from harness.domain.rig import (
     Action,
     Characteristic,
     ControlValve,
     Loop,
     Measurement,
-    OrderBy,
     Orifice,
     Rig,
     Source,
@@ -143,7 +143,7 @@ def benchmark_rig(noise: float = NOISE) -> Rig:
                 output_delay=0,
                 watchdog=10.0,
                 heartbeat_timeout=None,
-                orders=OrderBy.LINK,
+                orders=LoopOrders(),
             ),
         ),
         links=(),

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import pytest
 
+from harness.domain.orders import LoopOrders
 from harness.domain.rig import (
     DRAIN,
     Action,
@@ -11,7 +12,6 @@ from harness.domain.rig import (
     ControlValve,
     Loop,
     Measurement,
-    OrderBy,
     Orifice,
     Overflow,
     Rig,
@@ -132,7 +132,7 @@ def make_two_tanks(**changes):
                 output_delay=0,
                 watchdog=10.0,
                 heartbeat_timeout=None,
-                orders=OrderBy.LINK,
+                orders=LoopOrders(),
             ),
         ),
         "links": (),

@@ -9,6 +9,7 @@ from typing import TYPE_CHECKING
 from harness.config.findings import not_one_of
 from harness.config.loop_checks import transmitter_range
 from harness.config.rig_tables import ModbusServerTable, OpcUaServerTable
+from harness.domain.orders import LoopOrders
 from harness.domain.points import points_of, read_back_point
 from harness.domain.rig import (
     Action,
@@ -16,7 +17,6 @@ from harness.domain.rig import (
     ControlValve,
     Loop,
     Measurement,
-    OrderBy,
     Rig,
     Transmitter,
 )
@@ -178,7 +178,7 @@ def _stand_in_loop(tag: str, measured: str, output: str) -> Loop:
         output_delay=0,
         watchdog=1.0,
         heartbeat_timeout=None,
-        orders=OrderBy.LINK,
+        orders=LoopOrders(),
     )
 
 

@@ -4,9 +4,10 @@ from __future__ import annotations
 
 from typing import TYPE_CHECKING
 
-from harness.config.findings import not_one_of
-from harness.config.quantities import FLOW, LENGTH, parse_quantity
+from harness.config.findings import not_one_of, show
+from harness.config.quantities import FLOW, LENGTH, SHOWN_FLOW, parse_quantity
 from harness.config.rig_draft import tags, with_tag
+from harness.config.rig_tables import BlockTable, OrdersTable
 from harness.domain.points import position_point
 from harness.domain.signals import Range
 
@@ -37,6 +38,8 @@ def check_loops(draft: RigDraft) -> None:
         _loop_times(loop, draft)
         _output_limits(loop, draft)
         _setpoint(loop, draft)
+        _orders(loop)
+        _block(loop, draft)
     _shared_outputs(draft)
 
 
@@ -204,6 +207,51 @@ def _setpoint(loop: Entry, draft: RigDraft) -> None:
             f"{loop.shown('initial_setpoint')} is outside the range"
             f" {transmitter.shown('range')} of {transmitter.raw['tag']}",
         )
+
+
+def _orders(loop: Entry) -> None:
+    """Note a function that is missing, without a use, or no name of one."""
+    orders = loop.get("orders")
+    if not isinstance(orders, OrdersTable):
+        return
+    ways = (orders.setpoint, orders.mode, orders.manual_output, orders.settings)
+    module, _, name = orders.function.partition(":")
+    if "callable" in ways and not orders.function:
+        loop.problem(
+            "orders",
+            '"callable" wants a function that takes the order; write it as a table with'
+            ' function = "module:name"',
+        )
+    elif orders.function and "callable" not in ways:
+        loop.problem("orders.function", f'"{orders.function}" has no use; no order goes by it')
+    elif orders.function and not (
+        all(part.isidentifier() for part in module.split(".")) and name.isidentifier()
+    ):
+        loop.problem(
+            "orders.function", f'"{orders.function}" is no function; write "module:name"'
+        )
+
+
+def _block(loop: Entry, draft: RigDraft) -> None:
+    """Note what does not go together in the units of a block."""
+    block = loop.get("block")
+    if not isinstance(block, BlockTable):
+        return
+    for key in ("process_variable_counts", "output_counts"):
+        if key in block.model_fields_set and block.gain_unit != "counts":
+            loop.problem(f"block.{key}", 'has a meaning only with gain_unit = "counts"')
+    transmitter = with_tag(draft.transmitters, loop.text("process_variable"))
+    if block.setpoint_resolution is None or transmitter is None:
+        return
+    quantity = LENGTH if transmitter.text("measures") == "level" else SHOWN_FLOW
+    written = show(block.setpoint_resolution)
+    try:
+        step = parse_quantity(block.setpoint_resolution, quantity)
+    except ValueError as error:
+        loop.problem("block.setpoint_resolution", f"{written} {error}")
+        return
+    if not step > 0.0:
+        loop.problem("block.setpoint_resolution", f"{written} is no step; it must be above 0")
 
 
 def _shared_outputs(draft: RigDraft) -> None:

@@ -88,6 +88,7 @@ PRESSURE = Quantity(name="a pressure", unit="Pa", example="3 bar")
 DENSITY = Quantity(name="a density", unit="kg/m3", example="998.2 kg/m3")
 ACCELERATION = Quantity(name="an acceleration", unit="m/s2", example="9.80665 m/s2")
 FLOW = Quantity(name="a volume flow", unit="m3/s", example="6 m3/h")
+SHOWN_FLOW = Quantity(name="a volume flow", unit="m3/h", example="0.01 m3/h")
 PART = Quantity(name="a percentage", unit="", example="5 %")
 CURRENT = Quantity(name="a current", unit="mA", example="3.6 mA")
 # Kv is the flow in m3/h at a pressure drop of 1 bar (IEC 60534-2-1), not a flow to convert:

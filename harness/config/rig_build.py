@@ -5,13 +5,14 @@ from __future__ import annotations
 from typing import TYPE_CHECKING, TypeVar
 
 from harness.config.loop_checks import transmitter_range
-from harness.config.quantities import FLOW, LENGTH, parse_quantity
+from harness.config.quantities import FLOW, LENGTH, SHOWN_FLOW, parse_quantity
 from harness.config.rig_tables import (
     ActuatorTable,
     ItemTable,
     LoopTable,
     ModbusServerTable,
     OpcUaServerTable,
+    OrdersTable,
     OrificeTable,
     OverflowTable,
     RigTable,
@@ -20,6 +21,14 @@ from harness.config.rig_tables import (
     TransmitterTable,
     ValveTable,
     VesselTable,
+)
+from harness.domain.orders import (
+    BlockForm,
+    BlockUnits,
+    GainUnit,
+    LoopOrders,
+    OrderBy,
+    TimeUnit,
 )
 from harness.domain.rig import (
     Action,
@@ -30,7 +39,6 @@ from harness.domain.rig import (
     Measurement,
     ModbusServerLink,
     OpcUaServerLink,
-    OrderBy,
     Orifice,
     Overflow,
     RegisterItem,
@@ -200,7 +208,8 @@ def _loop(table: LoopTable) -> Loop:
         output_delay=table.output_delay,
         watchdog=table.watchdog,
         heartbeat_timeout=table.heartbeat_timeout,
-        orders=OrderBy(table.orders),
+        orders=_orders(table.orders),
+        block=_block(table),
     )
 
 
@@ -209,6 +218,35 @@ def _setpoint(table: LoopTable) -> float | None:
         return None
     quantity = LENGTH if table.process_variable.startswith("L") else FLOW
     return parse_quantity(table.initial_setpoint, quantity)
+
+
+def _orders(table: OrdersTable) -> LoopOrders:
+    return LoopOrders(
+        setpoint=OrderBy(table.setpoint),
+        mode=OrderBy(table.mode),
+        manual_output=OrderBy(table.manual_output),
+        settings=OrderBy(table.settings),
+        function=table.function,
+    )
+
+
+def _block(loop: LoopTable) -> BlockUnits:
+    table = loop.block
+    step = None
+    if table.setpoint_resolution is not None:
+        quantity = LENGTH if loop.process_variable.startswith("L") else SHOWN_FLOW
+        step = parse_quantity(table.setpoint_resolution, quantity)
+    return BlockUnits(
+        form=BlockForm(table.form),
+        gain_unit=GainUnit(table.gain_unit),
+        time_unit=TimeUnit(table.time_unit),
+        gain_resolution=table.gain_resolution,
+        time_resolution=table.time_resolution,
+        setpoint_resolution=step,
+        output_resolution=table.output_resolution,
+        process_variable_counts=table.process_variable_counts,
+        output_counts=table.output_counts,
+    )
 
 
 def _link(entry: Entry, draft: RigDraft) -> ModbusServerLink | OpcUaServerLink:

@@ -11,6 +11,7 @@ from harness.config.quantities import (
     LoopCurrent,
     NonNegativeLength,
     NonNegativeTime,
+    OpenPercentage,
     Percentage,
     PositiveAcceleration,
     PositiveDensity,
@@ -144,6 +145,54 @@ class TransmitterTable(Table):
     failure_current: LoopCurrent
 
 
+_Way = Literal["link", "prompt", "callable"]
+_WAYS = ("link", "prompt", "callable")
+_Step = Annotated[float, Field(gt=0.0)]  # of a number that people type
+
+
+def _orders(value: object) -> object:
+    """Return the long form of ``orders``; one word stands for all kinds."""
+    if isinstance(value, str):
+        if value not in _WAYS:
+            raise ValueError('must be "link", "prompt" or "callable"')
+        return dict.fromkeys(("setpoint", "mode", "manual_output", "settings"), value)
+    if not isinstance(value, (dict, OrdersTable)):
+        raise ValueError('must be "link", "prompt" or "callable", or a table of them')  # noqa: TRY004  pydantic gathers only these
+    return value
+
+
+class OrdersTable(Table):
+    """``[loop.orders]``."""
+
+    setpoint: _Way = "link"
+    mode: _Way = "link"
+    manual_output: _Way = "link"
+    settings: _Way = "link"
+    function: str = ""
+
+
+class BlockTable(Table):
+    """``[loop.block]``.
+
+    Parameters
+    ----------
+    gain_resolution, time_resolution : float
+        In the block's own units.
+    process_variable_counts, output_counts : int
+        Counts of the spans [-].
+    """
+
+    form: Literal["ideal", "series", "parallel"] = "ideal"
+    gain_unit: Literal["%/%", "engineering", "proportional band", "counts"] = "%/%"
+    time_unit: Literal["s", "min", "repeats per minute", "1/s"] = "s"
+    gain_resolution: _Step | None = None
+    time_resolution: _Step | None = None
+    setpoint_resolution: Any = None  # in a unit of its process variable
+    output_resolution: OpenPercentage = 0.001
+    process_variable_counts: Annotated[int, Field(ge=1)] = 65_535
+    output_counts: Annotated[int, Field(ge=1)] = 65_535
+
+
 class LoopTable(Table):
     """``[[loop]]``."""
 
@@ -159,7 +208,8 @@ class LoopTable(Table):
     output_delay: Count = 0
     watchdog: PositiveTime
     heartbeat_timeout: PositiveTime | None = None
-    orders: Literal["link", "prompt", "callable"] = "link"
+    orders: Annotated[OrdersTable, BeforeValidator(_orders)] = OrdersTable()
+    block: BlockTable = BlockTable()
 
 
 class ItemTable(Table):

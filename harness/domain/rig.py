@@ -7,6 +7,7 @@ from dataclasses import dataclass, field
 from enum import StrEnum
 from typing import TypeVar
 
+from harness.domain.orders import BlockUnits, LoopOrders
 from harness.domain.signals import Range
 
 _Tagged = TypeVar("_Tagged", "Vessel", "ControlValve", "Transmitter", "Loop")
@@ -232,14 +233,6 @@ class Action(StrEnum):
     REVERSE = "reverse"
 
 
-class OrderBy(StrEnum):
-    """How setpoint, mode, manual output and settings reach the controller."""
-
-    LINK = "link"
-    PROMPT = "prompt"
-    CALLABLE = "callable"
-
-
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Loop:
     """A control loop of the rig, whoever closes it.
@@ -270,8 +263,10 @@ class Loop:
         Silence after which the controller counts as lost [plant s].
     heartbeat_timeout : float or None
         Longest time the optional heartbeat point may stand still [plant s].
-    orders : OrderBy
+    orders : LoopOrders
         How orders reach an external controller.
+    block : BlockUnits
+        Form and units in which people type into its block.
     """
 
     tag: str
@@ -287,7 +282,8 @@ class Loop:
     output_delay: int
     watchdog: float
     heartbeat_timeout: float | None
-    orders: OrderBy
+    orders: LoopOrders = field(default_factory=LoopOrders)
+    block: BlockUnits = field(default_factory=BlockUnits)
 
 
 class Encoding(StrEnum):

@@ -1,315 +1,257 @@
-"""Settings as a block takes them: its form, its units, and rounded to its steps."""
+"""Settings as one block takes them: in its form, in its units, rounded to what it can hold."""
 
 from __future__ import annotations
 
-import math
-from dataclasses import dataclass, replace
-from enum import StrEnum
+from dataclasses import dataclass
+from decimal import Decimal
+from typing import TYPE_CHECKING
 
-from harness.domain.signals import Range
-from harness.errors import ModelError, UsageError
+from harness.domain.models import ControllerSettings
+from harness.domain.orders import BlockForm, GainUnit, TimeUnit
+from harness.errors import ModelError
 from harness.tuning.forms import (
-    Form,
-    IdealForm,
-    ParallelForm,
-    SeriesForm,
     gain_engineering,
-    ideal_to_parallel,
-    ideal_to_series,
-    parallel_to_ideal,
-    series_to_ideal,
+    gain_from_engineering,
+    gain_from_proportional_band,
+    proportional_band,
 )
-from harness.tuning.process import PidSettings
 
-_MINUTE = 60.0  # [s]
+if TYPE_CHECKING:
+    from harness.domain.orders import BlockUnits
+    from harness.domain.rig import Action
+    from harness.domain.signals import Range
 
-
-class GainUnit(StrEnum):
-    """What a block calls its gain."""
-
-    GAIN = "gain"
-    BAND = "band"
-    ENGINEERING = "engineering"
-    COUNTS = "counts"
-
-
-class IntegralUnit(StrEnum):
-    """What a block calls its integral setting."""
-
-    SECONDS = "s"
-    MINUTES = "min"
-    REPEATS_PER_MINUTE = "repeats/min"
-    PER_SECOND = "1/s"
-
-
-class DerivativeUnit(StrEnum):
-    """What a block calls its derivative setting."""
-
-    SECONDS = "s"
-    MINUTES = "min"
+_PERCENT_SPAN = 100.0  # of an output in percent [%]
+_PER_MINUTE = 60.0  # seconds in a minute [s]
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
-class Spans:
-    """Ranges behind gains that are not fractions.
+class BlockEntry:
+    """What somebody types into a block, and what the block then has.
 
     Parameters
     ----------
-    pv, output : Range or None
-        Ranges of process variable and controller output, in their own units.
-    pv_counts, output_counts : float or None
-        Counts over the same ranges, as the block sees them [counts].
+    gain : float
+        Number for the gain [``gain_unit``].
+    gain_name, gain_text, gain_unit : str
+        What the block calls it, the number to type, and its unit.
+    integral : float or None
+        Number for the integral action; None where there is none [``integral_unit``].
+    integral_name, integral_text, integral_unit : str
+        The same of the integral action.
+    settings : ControllerSettings
+        What these numbers are in ideal form: what a prediction has to use.
     """
 
-    pv: Range | None = None
-    output: Range | None = None
-    pv_counts: float | None = None
-    output_counts: float | None = None
+    gain: float
+    gain_name: str
+    gain_text: str
+    gain_unit: str
+    integral: float | None
+    integral_name: str
+    integral_text: str
+    integral_unit: str
+    settings: ControllerSettings
+
+    @property
+    def words(self) -> str:
+        """Return both numbers in words."""
+        gain = f"{self.gain_name} {self.gain_text} {self.gain_unit}".strip()
+        if self.integral is None:
+            return f"{gain}, integral action off"
+        return f"{gain}, {self.integral_name} {self.integral_text} {self.integral_unit}".strip()
 
 
-@dataclass(frozen=True, slots=True, kw_only=True)
-class BlockFormat:
-    """How a block takes its settings.
-
-    Parameters
-    ----------
-    form : Form
-        Ideal, series or parallel.
-    gain_unit : GainUnit
-        Unit of the gain.
-    integral_unit : IntegralUnit
-        Unit of the integral setting.
-    derivative_unit : DerivativeUnit
-        Unit of the derivative setting.
-    gain_step, time_step : float
-        Smallest steps that the block resolves of its gain and of its integral and derivative
-        settings, each in its own unit; 0 takes any number [unit of the setting].
-    """
-
-    form: Form = Form.IDEAL
-    gain_unit: GainUnit = GainUnit.GAIN
-    integral_unit: IntegralUnit = IntegralUnit.SECONDS
-    derivative_unit: DerivativeUnit = DerivativeUnit.SECONDS
-    gain_step: float = 0.0
-    time_step: float = 0.0
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class Entered:
-    """Numbers to type into the block.
+def block_entry(settings: ControllerSettings, block: BlockUnits, measured: Range) -> BlockEntry:
+    """Return what to type into a block so that it has given settings, as nearly as it can.
 
     Parameters
     ----------
-    values : dict of str to float
-        By name of the setting [unit of the setting].
-    units : dict of str to str
-        Units by the same names.
-    settings : PidSettings
-        What the block then does, in ideal form.
-    """
-
-    values: dict[str, float]
-    units: dict[str, str]
-    settings: PidSettings
-
-
-def entered(settings: PidSettings, block: BlockFormat, spans: Spans) -> Entered:
-    """Return settings as a block takes them, rounded to its steps.
-
-    Parameters
-    ----------
-    settings : PidSettings
+    settings : ControllerSettings
         Ideal form.
-    block : BlockFormat
-        How the block takes them.
-    spans : Spans
-        Ranges, where the gain is not a fraction.
+    block : BlockUnits
+        The block. Without derivative action its series form is the ideal one.
+    measured : Range
+        Range of the process variable in the unit shown.
 
     Returns
     -------
-    Entered
-        Numbers, units, and what they come to.
+    BlockEntry
+        Numbers, and the settings that they stand for.
 
     Raises
     ------
     ModelError
-        When the form does not exist for these settings, or a setting rounds to nothing.
-    UsageError
-        When a range is missing, or form and unit do not go together.
+        When the block cannot hold them: a number rounds to nothing.
     """
-    factor, unit = gain_factor(block.gain_unit, spans)
-    if block.form is Form.PARALLEL:
-        return _parallel(settings, block, factor, unit)
-    gain, integral, derivative = settings.gain, settings.integral_time, settings.derivative_time
-    if block.form is Form.SERIES and derivative > 0.0:
-        series = ideal_to_series(_ideal(settings))
-        gain, integral, derivative = series.gain, series.integral_time, series.derivative_time
-    values, units = (
-        {"gain": _round("gain", _told(gain, block, factor), block.gain_step)},
-        {"gain": unit},
-    )
-    back = _untold(values["gain"], block, factor)
-    if integral is not None:
-        shown = _round("integral", _integral(integral, block.integral_unit), block.time_step)
-        values["integral"], units["integral"] = shown, block.integral_unit.value
-        integral = _seconds(shown, block.integral_unit)
-    if derivative > 0.0:
-        scale = _scale(block.derivative_unit)
-        shown = _round("derivative", derivative / scale, block.time_step, may_vanish=True)
-        values["derivative"], units["derivative"] = shown, block.derivative_unit.value
-        derivative = shown * scale
-    if block.form is Form.SERIES and derivative > 0.0 and integral is not None:
-        ideal = series_to_ideal(
-            SeriesForm(gain=back, integral_time=integral, derivative_time=derivative)
-        )
-        back, integral, derivative = ideal.gain, ideal.integral_time, ideal.derivative_time
-    return Entered(
-        values=values, units=units, settings=_with(settings, back, integral, derivative)
+    wanted = _gain_shown(settings.gain, block, measured)
+    gain, gain_text = rounded(wanted, block.gain_resolution)
+    _require(gain, wanted, "gain", block.gain_resolution)
+    integral, integral_text = None, ""
+    if settings.integral_time is not None:
+        wanted = _integral_shown(settings.gain, settings.integral_time, block, measured)
+        integral, integral_text = rounded(wanted, block.time_resolution)
+        _require(integral, wanted, "integral action", block.time_resolution)
+    names = _names(block, measured)
+    return BlockEntry(
+        gain=gain,
+        gain_name=names[0],
+        gain_text=gain_text,
+        gain_unit=names[1],
+        integral=integral,
+        integral_name=names[2],
+        integral_text=integral_text,
+        integral_unit=names[3],
+        settings=block_settings(gain, integral, settings.action, block, measured),
     )
 
 
-def gain_factor(unit: GainUnit, spans: Spans) -> tuple[float, str]:
-    """Return what a gain in fractions is multiplied by, and the name of the unit.
+def block_settings(
+    gain: float, integral: float | None, action: Action, block: BlockUnits, measured: Range
+) -> ControllerSettings:
+    """Return the settings that the numbers in a block stand for.
 
     Parameters
     ----------
-    unit : GainUnit
-        Unit; the proportional band is the reciprocal of what comes out, times 100.
-    spans : Spans
-        Ranges.
+    gain : float
+        The gain as the block shows it; above 0 [unit of the block].
+    integral : float or None
+        The integral action as the block shows it; None where it is off [unit of the block].
+    action : Action
+        Direct or reverse.
+    block : BlockUnits
+        The block.
+    measured : Range
+        Range of the process variable in the unit shown.
 
     Returns
     -------
-    factor : float
-        Factor [unit of the gain per fraction of output per fraction of PV span].
-    name : str
-        Unit in words.
-
-    Raises
-    ------
-    UsageError
-        When a range is missing.
+    ControllerSettings
+        Ideal form.
     """
-    match unit:
-        case GainUnit.GAIN:
-            return 1.0, "%/%"
-        case GainUnit.BAND:
-            return 1.0, "% proportional band"
+    fraction = _gain_from(gain, block, measured)
+    time = None
+    if integral is not None:
+        seconds = {
+            TimeUnit.SECONDS: lambda: integral,
+            TimeUnit.MINUTES: lambda: integral * _PER_MINUTE,
+            TimeUnit.REPEATS: lambda: _PER_MINUTE / integral,
+            TimeUnit.RATE: lambda: 1.0 / integral,
+        }[block.time_unit]()
+        # In the parallel form the integral part has a gain of its own: 1/seconds = Kp / Ti.
+        time = seconds * (_parallel_gain(fraction, block, measured) or 1.0)
+    return ControllerSettings(gain=fraction, integral_time=time, action=action)
+
+
+def rounded(value: float, resolution: float | None) -> tuple[float, str]:
+    """Return a number as it can be typed, and its text.
+
+    Parameters
+    ----------
+    value : float
+        The number [any unit].
+    resolution : float or None
+        Smallest step; None for four significant digits [unit of ``value``].
+
+    Returns
+    -------
+    number : float
+        Nearest number that can be typed, halves to the even step [unit of ``value``].
+    text : str
+        With the decimals that the step has.
+    """
+    if resolution is None:
+        text = f"{value:.4g}"
+        return float(text), text
+    step = Decimal(repr(resolution)).normalize()  # 1.0 has no decimals
+    number = (Decimal(repr(value)) / step).quantize(Decimal(1)) * step
+    return float(number), f"{number:f}"
+
+
+def _gain_shown(gain: float, block: BlockUnits, measured: Range) -> float:
+    match block.gain_unit:
+        case GainUnit.PERCENT:
+            return gain
         case GainUnit.ENGINEERING:
-            if spans.pv is None or spans.output is None:
-                raise UsageError(
-                    "gain in engineering units: the ranges of process variable and output are "
-                    "not known; give --output-range LOW HIGH of the "
-                    "process variable and --input-range LOW HIGH of the controller output"
-                )
-            name = f"{spans.output.unit or 'output unit'} per {spans.pv.unit or 'PV unit'}"
-            return gain_engineering(1.0, spans.pv.span, spans.output.span), name
+            return gain_engineering(gain, measured.span, _PERCENT_SPAN)
+        case GainUnit.BAND:
+            return proportional_band(gain)
         case GainUnit.COUNTS:
-            if not spans.pv_counts or not spans.output_counts:
-                raise UsageError(
-                    "gain in raw counts: the counts over the ranges are not known; give "
-                    "--counts PV OUTPUT, e.g. --counts 27648 16000"
-                )
-            return gain_engineering(
-                1.0, spans.pv_counts, spans.output_counts
-            ), "counts per count"
+            return gain_engineering(gain, block.process_variable_counts, block.output_counts)
 
 
-def _parallel(settings: PidSettings, block: BlockFormat, factor: float, unit: str) -> Entered:
-    """Return Kp, Ki and Kd; Ki and Kd per second or per minute, as the integral unit has it."""
-    if block.gain_unit is GainUnit.BAND:
-        raise UsageError(
-            "parallel form with a proportional band: its three settings are gains; choose "
-            "another gain unit or form"
-        )
-    minutes = block.integral_unit in {IntegralUnit.MINUTES, IntegralUnit.REPEATS_PER_MINUTE}
-    integral_scale = factor * (_MINUTE if minutes else 1.0)
-    derivative_scale = factor / _scale(block.derivative_unit)
-    form = ideal_to_parallel(_ideal(settings))
-    values = {
-        "proportional": _round("proportional", form.proportional * factor, block.gain_step)
-    }
-    units = {"proportional": unit}
-    if settings.integral_time is not None:
-        values["integral"] = _round("integral", form.integral * integral_scale, block.time_step)
-        units["integral"] = f"{unit} per {'min' if minutes else 's'}"
-    if form.derivative > 0.0:
-        values["derivative"] = _round(
-            "derivative", form.derivative * derivative_scale, block.time_step, may_vanish=True
-        )
-        units["derivative"] = f"{unit} times {block.derivative_unit}"
-    ideal = parallel_to_ideal(
-        ParallelForm(
-            proportional=values["proportional"] / factor,
-            integral=values.get("integral", 0.0) / integral_scale,
-            derivative=values.get("derivative", 0.0) / derivative_scale,
-        )
-    )
-    integral = None if settings.integral_time is None else ideal.integral_time
-    changed = _with(settings, ideal.gain, integral, ideal.derivative_time)
-    return Entered(values=values, units=units, settings=changed)
+def _gain_from(shown: float, block: BlockUnits, measured: Range) -> float:
+    match block.gain_unit:
+        case GainUnit.PERCENT:
+            return shown
+        case GainUnit.ENGINEERING:
+            return gain_from_engineering(shown, measured.span, _PERCENT_SPAN)
+        case GainUnit.BAND:
+            return gain_from_proportional_band(shown)
+        case GainUnit.COUNTS:
+            return gain_from_engineering(
+                shown, block.process_variable_counts, block.output_counts
+            )
 
 
-def _ideal(settings: PidSettings) -> IdealForm:
-    return IdealForm(
-        gain=settings.gain,
-        integral_time=math.inf if settings.integral_time is None else settings.integral_time,
-        derivative_time=settings.derivative_time,
-    )
+def _integral_shown(
+    gain: float, integral_time: float, block: BlockUnits, measured: Range
+) -> float:
+    seconds = integral_time / (_parallel_gain(gain, block, measured) or 1.0)
+    match block.time_unit:
+        case TimeUnit.SECONDS:
+            return seconds
+        case TimeUnit.MINUTES:
+            return seconds / _PER_MINUTE
+        case TimeUnit.REPEATS:
+            return _PER_MINUTE / seconds
+        case TimeUnit.RATE:
+            return 1.0 / seconds
 
 
-def _with(
-    settings: PidSettings, gain: float, integral: float | None, derivative: float
-) -> PidSettings:
-    lag = settings.derivative_filter if derivative > 0.0 else 0.0
-    return replace(
-        settings,
-        gain=gain,
-        integral_time=integral,
-        derivative_time=derivative,
-        derivative_filter=lag,
-    )
+def _parallel_gain(gain: float, block: BlockUnits, measured: Range) -> float | None:
+    """Return the gain that is part of a parallel block's integral number; None in other forms.
+
+    A proportional band has no integral counterpart; the gain is then that of fractions.
+    """
+    if block.form is not BlockForm.PARALLEL:
+        return None
+    return gain if block.gain_unit is GainUnit.BAND else _gain_shown(gain, block, measured)
 
 
-def _told(gain: float, block: BlockFormat, factor: float) -> float:
-    return 100.0 / gain if block.gain_unit is GainUnit.BAND else gain * factor
+def _names(block: BlockUnits, measured: Range) -> tuple[str, str, str, str]:
+    """Return names and units of both numbers."""
+    gain_name, gain_unit = {
+        GainUnit.PERCENT: ("gain", "%/%"),
+        GainUnit.ENGINEERING: ("gain", f"%/{measured.unit}"),
+        GainUnit.BAND: ("proportional band", "%"),
+        GainUnit.COUNTS: ("gain", "counts/count"),
+    }[block.gain_unit]
+    name = {
+        TimeUnit.SECONDS: "integral time",
+        TimeUnit.MINUTES: "integral time",
+        TimeUnit.REPEATS: "integral action",
+        TimeUnit.RATE: "integral action",
+    }[block.time_unit]
+    unit = block.time_unit.value
+    if block.form is not BlockForm.PARALLEL:
+        return gain_name, gain_unit, name, unit
+    of_gain = "%/%" if block.gain_unit is GainUnit.BAND else gain_unit
+    parallel = {
+        TimeUnit.SECONDS: ("integral time of its own", f"s per {of_gain}"),
+        TimeUnit.MINUTES: ("integral time of its own", f"min per {of_gain}"),
+        TimeUnit.REPEATS: ("integral gain", f"{of_gain} per minute"),
+        TimeUnit.RATE: ("integral gain", f"{of_gain} per second"),
+    }[block.time_unit]
+    if block.gain_unit is not GainUnit.BAND:
+        gain_name = "proportional gain"
+    return gain_name, gain_unit, *parallel
 
 
-def _untold(value: float, block: BlockFormat, factor: float) -> float:
-    return 100.0 / value if block.gain_unit is GainUnit.BAND else value / factor
-
-
-def _integral(value: float, unit: IntegralUnit) -> float:
-    """Return an integral time [s] in a unit."""
-    match unit:
-        case IntegralUnit.SECONDS:
-            return value
-        case IntegralUnit.REPEATS_PER_MINUTE:
-            return _MINUTE / value
-        case IntegralUnit.PER_SECOND:
-            return 1.0 / value
-        case IntegralUnit.MINUTES:
-            return value / _MINUTE
-
-
-def _seconds(value: float, unit: IntegralUnit) -> float:
-    """Return the integral time [s] of a setting; reciprocals undo themselves."""
-    return value * _MINUTE if unit is IntegralUnit.MINUTES else _integral(value, unit)
-
-
-def _scale(unit: DerivativeUnit) -> float:
-    return _MINUTE if unit is DerivativeUnit.MINUTES else 1.0
-
-
-def _round(name: str, value: float, step: float, *, may_vanish: bool = False) -> float:
-    """Round to a step of the block; a derivative may vanish, the others may not."""
-    if step <= 0.0:
-        return value
-    rounded = round(value / step) * step
-    if rounded == 0.0 and not may_vanish:
+def _require(number: float, wanted: float, what: str, resolution: float | None) -> None:
+    if number == 0.0:
         raise ModelError(
-            f"rounding: the block takes its {name} in steps of {step:g}, and {value:.4g} would "
-            "round to 0; choose another unit, or a block with a finer step"
+            f"{what}: {wanted:.4g} is less than half of the block's resolution of {resolution:g}, "
+            "and would be typed as 0; give the block a finer resolution or another unit, or ask "
+            "for another closed-loop time"
         )
-    decimals = max(0, 2 - math.floor(math.log10(step)))
-    return round(rounded, decimals)

@@ -12,6 +12,7 @@ from hypothesis import strategies as st
 
 from harness.config.load import load_rig, load_trial, rig_from_text, trial_from_text
 from harness.domain.models import ControlLaw, ControllerSettings, LagModel, LoopModels
+from harness.domain.orders import LoopOrders
 from harness.domain.rig import (
     Action,
     Characteristic,
@@ -21,7 +22,6 @@ from harness.domain.rig import (
     Measurement,
     ModbusServerLink,
     OpcUaServerLink,
-    OrderBy,
     Orifice,
     Overflow,
     RegisterItem,
@@ -154,7 +154,7 @@ def test_instruments_and_loop_of_a_rig():
             output_delay=0,
             watchdog=10.0,
             heartbeat_timeout=5.0,
-            orders=OrderBy.LINK,
+            orders=LoopOrders(),
         ),
     )
 

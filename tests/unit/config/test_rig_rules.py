@@ -657,6 +657,54 @@ CASES = (
         ('110: loop[0].heartbeat_timeout: "500 ms" is shorter than the scan of "1 s"',),
     ),
     Case(
+        "callable without function",
+        'watchdog = "10 s"',
+        'watchdog = "10 s"\norders = { mode = "callable" }',
+        (
+            '110: loop[0].orders: "callable" wants a function that takes the order; write it as a table with function = "module:name"',
+        ),
+    ),
+    Case(
+        "function without callable",
+        'watchdog = "10 s"',
+        'watchdog = "10 s"\norders = { mode = "prompt", function = "bench:take" }',
+        ('110: loop[0].orders.function: "bench:take" has no use; no order goes by it',),
+    ),
+    Case(
+        "function no function",
+        'watchdog = "10 s"',
+        'watchdog = "10 s"\norders = { mode = "callable", function = "bench.py" }',
+        ('110: loop[0].orders.function: "bench.py" is no function; write "module:name"',),
+    ),
+    Case(
+        "way unknown",
+        'watchdog = "10 s"',
+        'watchdog = "10 s"\norders = { mode = "post" }',
+        ('110: loop[0].orders.mode: "post" must be "link", "prompt" or "callable"',),
+    ),
+    Case(
+        "setpoint resolution of another kind",
+        'watchdog = "10 s"',
+        'watchdog = "10 s"\nblock = { setpoint_resolution = "1 s" }',
+        (
+            '110: loop[0].block.setpoint_resolution: "1 s" is not a length: "s" is of another kind; write a length with its unit, e.g. "250 mm"',
+        ),
+    ),
+    Case(
+        "counts without a gain in counts",
+        'watchdog = "10 s"',
+        'watchdog = "10 s"\nblock = { output_counts = 4095 }',
+        ('110: loop[0].block.output_counts: has a meaning only with gain_unit = "counts"',),
+    ),
+    Case(
+        "gain unit unknown",
+        'watchdog = "10 s"',
+        'watchdog = "10 s"\nblock = { gain_unit = "dB" }',
+        (
+            '110: loop[0].block.gain_unit: "dB" must be "%/%", "engineering", "proportional band" or "counts"',
+        ),
+    ),
+    Case(
         "orders unknown",
         'watchdog = "10 s"',
         'watchdog = "10 s"\norders = "post"',
