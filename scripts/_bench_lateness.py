@@ -3,7 +3,8 @@
 Blocks alternate, all in one run: the ticks of a live session, with links and recorder in their
 processes, and a loop that does nothing but sleep to absolute deadlines, both while the clients
 poll; then the same bare loop without them. The second says what a loaded machine does to any
-program, the third what this machine does. The ratios set the first against the second.
+program, the third what this machine does. The ratios set the first against the second. Both of
+them run on a real-time thread where the system grants one, the third on an ordinary one.
 """
 
 from __future__ import annotations
@@ -32,7 +33,7 @@ from harness.runtime.clock import PacedClock
 from harness.runtime.link_process import LinkProcess
 from harness.runtime.requests import NothingToCompute
 from harness.runtime.session import Pacing, Session
-from harness.runtime.steadiness import steady_memory
+from harness.runtime.steadiness import steady_memory, steady_thread
 
 if TYPE_CHECKING:
     from collections.abc import Iterator
@@ -70,6 +71,7 @@ def lateness(minutes: float) -> Iterator[Figure]:
         recorder = stack.enter_context(RecorderProcess.create(folder, bench.header()))
         stack.enter_context(bench.links)
         stack.enter_context(steady_memory())
+        granted = stack.enter_context(steady_thread())
         load = Load(
             bench.links.addresses["modbus"],
             bench.links.addresses["opcua"],
@@ -90,6 +92,12 @@ def lateness(minutes: float) -> Iterator[Figure]:
     yield from _percentiles("bare_loaded", bare)
     yield from _percentiles("bare_idle", idle)
     yield from _ratios(ticks, bare)
+    yield Figure(
+        name="lateness.real_time_thread",
+        value=float(granted),
+        unit="1",
+        note="whether the system granted one to ticks and bare timer",
+    )
     yield Figure(
         name="lateness.work_of_a_tick",
         value=float(np.median(bench.clock.work)),
