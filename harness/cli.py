@@ -10,6 +10,7 @@ import traceback
 from pathlib import Path
 from typing import TYPE_CHECKING
 
+from harness.app.fit_command import add_fit
 from harness.app.tune_command import add_tune
 from harness.errors import DryrigError, ExitCode, UsageError
 
@@ -87,6 +88,7 @@ def build_parser() -> argparse.ArgumentParser:
     _add_control(commands)
     _add_trial(commands)
     _add_score(commands)
+    add_fit(commands)
     add_tune(commands)
     return parser
 
@@ -168,6 +170,7 @@ def _add_faults(parser: argparse.ArgumentParser) -> None:
     ):
         parser.add_argument(name, type=kind, default=default, help=argparse.SUPPRESS)
     parser.add_argument("--fault-reversed", action="store_true", help=argparse.SUPPRESS)
+    parser.add_argument("--mistake", metavar="NAME", help=argparse.SUPPRESS)
 
 
 def _add_trial(commands: argparse._SubParsersAction[argparse.ArgumentParser]) -> None:

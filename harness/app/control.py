@@ -41,6 +41,7 @@ def control(options: argparse.Namespace) -> None:
         host=options.host,
         port=options.port,
         scan=options.scan,
+        mistake=options.mistake,
         faults=SoftPlcFaults(
             gain_factor=options.fault_gain,
             integral_time_factor=options.fault_integral_time,

@@ -87,6 +87,7 @@ class EventKind(StrEnum):
     PEER_CONNECTED = "peer connected"
     PEER_GONE = "peer gone"
     REFUSED = "refused"
+    PREFLIGHT = "pre-flight"
     NOTE = "note"
     INVALID = "invalid"
 

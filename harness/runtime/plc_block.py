@@ -358,7 +358,10 @@ def writes_of(
         program.loop.output: PERCENT.from_fraction(biased),
         heartbeat_point(program.loop.tag): float(state.scans % _HEARTBEATS),
     }
-    has = {name: readings[name].value for name in program.echoes}
+    has = {
+        name: math.nan if readings[name].quality is Quality.BAD else readings[name].value
+        for name in program.echoes
+    }
     if state.orders is not None:
         has |= {
             setpoint_point(program.loop.tag): program.measured.from_fraction(

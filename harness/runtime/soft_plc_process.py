@@ -13,6 +13,7 @@ from harness.domain.rig import ModbusServerLink, OpcUaServerLink
 from harness.errors import UsageError
 from harness.runtime.clock import PacedClock
 from harness.runtime.plc_block import NO_FAULTS, SoftPlcFaults, program_of, warm_up
+from harness.runtime.plc_mistakes import MistakenClient, Setup, mistake_of
 from harness.runtime.soft_plc import run_soft_plc
 from harness.runtime.steadiness import set_memory_aside, steady_thread
 
@@ -36,6 +37,7 @@ def run_soft_plc_blocking(
     port: int | None = None,
     scan: float | None = None,
     faults: SoftPlcFaults = NO_FAULTS,
+    mistake: str | None = None,
 ) -> None:
     """Run the soft PLC until Ctrl-C or a request of the system to end; the body of a process.
 
@@ -58,22 +60,76 @@ def run_soft_plc_blocking(
     scan : float or None
         Scan period; None takes the loop's [plant s].
     faults : SoftPlcFaults
-        Mistakes made on purpose.
+        Faults of the block made on purpose.
+    mistake : str or None
+        Name of a mistake of ``plc_mistakes.MISTAKES`` made on purpose.
 
     Raises
     ------
     UsageError
-        When the rig has no such link or loop.
+        When the rig has no such link or loop, or the table no such mistake.
     """
-    points = points_of(rig, external=True)
-    end = find_link(rig, link)
-    shown = shown_points(end, points)
-    program = program_of(_loop(rig, loop_tag), points, scan, faults, shown)
-    client = make_client(end, points, host, port)
+    client, program = soft_plc_parts(
+        rig, link, loop_tag, host=host, port=port, scan=scan, faults=faults, mistake=mistake
+    )
     warm_up(program)
     set_memory_aside()
     with steady_thread():
         asyncio.run(_run_until_signal(client, program, pace, on_event))
+
+
+def soft_plc_parts(
+    rig: Rig,
+    link: str,
+    loop_tag: str,
+    *,
+    host: str | None = None,
+    port: int | None = None,
+    scan: float | None = None,
+    faults: SoftPlcFaults = NO_FAULTS,
+    mistake: str | None = None,
+) -> tuple[FieldClient, PlcProgram]:
+    """Return client and program of a soft PLC; see `run_soft_plc_blocking`.
+
+    Parameters
+    ----------
+    rig : Rig
+        The rig, for its points, map and loop.
+    link : str
+        Name of a link of the rig, or ``"modbus"`` or ``"opcua"`` for the first of that kind.
+    loop_tag : str
+        Tag of the loop.
+    host : str or None
+        Where the rig is; None takes the link's address.
+    port : int or None
+        Its port; None takes the link's [-].
+    scan : float or None
+        Scan period; None takes the loop's [plant s].
+    faults : SoftPlcFaults
+        Faults of the block made on purpose.
+    mistake : str or None
+        Name of a mistake of the table.
+
+    Raises
+    ------
+    UsageError
+        When the rig has no such link or loop, or the table no such mistake.
+    """
+    points = points_of(rig, external=True)
+    end, loop = find_link(rig, link), _loop(rig, loop_tag)
+    shown = shown_points(end, points)
+    if mistake is None:
+        return make_client(end, points, host, port), program_of(
+            loop, points, scan, faults, shown
+        )
+    made = mistake_of(mistake)
+    if not isinstance(end, ModbusServerLink):
+        raise UsageError(
+            f'mistake "{mistake}": it is one of a register map; take a Modbus link'
+        )
+    setup = made.apply(Setup(loop=loop, link=end, points=points, faults=faults))
+    client = MistakenClient(make_client(setup.link, setup.points, host, port), setup)
+    return client, program_of(loop, points, scan, setup.faults, shown)
 
 
 def find_link(rig: Rig, link: str) -> ModbusServerLink | OpcUaServerLink:
