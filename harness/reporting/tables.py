@@ -106,7 +106,9 @@ def verdict_table(document: Mapping[str, object], *, full: bool = False) -> Rend
     ]
     remarks += [_remark(name, words) for name, words in misses(phases)]
     table = _metric_table(phases) if full else _summary_table(phases)
-    pieces: list[RenderableType] = [Text(""), table, Text("")] if phases else []
+    scored = any(named_parts(phase, "metrics") for phase in phases)
+    pieces: list[RenderableType] = [Text(""), table] if scored else []
+    pieces.append(Text(""))
     return Group(*pieces, head, *remarks)
 
 

@@ -16,7 +16,7 @@ if TYPE_CHECKING:
 BRAILLE = 0x2800  # first of the 256 patterns of Unicode's block Braille Patterns
 # Bit of each dot in its cell, by column and row from the top (Unicode, Braille Patterns).
 DOTS = ((0x01, 0x02, 0x04, 0x40), (0x08, 0x10, 0x20, 0x80))
-LEAST_RANGE = 1e-3  # of the size of the values: a flat line is drawn as one, not its last digit
+LEAST_RANGE = 1e-2  # of the size of the values: a flat line is drawn as one, not as its noise
 LABEL_WIDTH = 8  # [characters]
 SIGNAL_STYLE, REFERENCE_STYLE = "bold", "cyan"
 

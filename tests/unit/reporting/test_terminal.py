@@ -303,3 +303,17 @@ def test_tags_keep_a_line_each_and_say_what_a_low_window_leaves_out():
     assert "A = 127.0.0.1:51882 over modbus" in text
     for words in ("0.7527", "m³/h", "good", "A 0.1 s ago", "A 12.4 s ago", "3F40"):
         assert words in shown[0]
+
+
+def test_a_run_without_any_figure_has_no_table_of_them():
+    phase = {"name": "settle", "verdict": "invalid", "findings": ["It did not end steady."]}
+    text = drawn(verdict_table({"verdict": "invalid", "phases": [phase]}))
+    assert "settle: It did not end steady." in text
+    assert "Measured" not in text
+
+
+def test_noise_on_a_level_at_rest_does_not_fill_the_trend():
+    nan = [float("nan")] * 40
+    noisy = [0.7527 + 0.0004 * (-1) ** i for i in range(40)]  # 0.05 % of a span of 1.5 m
+    rows = trend(noisy, nan, width=49, height=7, braille=False).plain.split("\n")
+    assert sum("*" in row for row in rows) <= 2
