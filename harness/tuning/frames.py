@@ -14,7 +14,7 @@ if TYPE_CHECKING:
     from numpy.typing import NDArray
 
     Array = NDArray[np.float64]
-    Shape = tuple[float, float, float]  # first lag, second lag, dead time [s]
+    Shape = tuple[float, ...]  # first lag, second lag, dead time, and what a family adds [s]
 
 _SHORTEST = 1e-6  # shortest sum of lags looked at, over the longest or the fitted total lag
 _MOST_DEAD = 0.999  # share of the total lag that may be dead time; some lag must be left

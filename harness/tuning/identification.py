@@ -10,12 +10,15 @@ import numpy as np
 
 from harness.domain.models import FittedModel, LagModel
 from harness.errors import DataError
-from harness.tuning.frames import unit_frame
+from harness.tuning.families import LagFamily
 from harness.tuning.least_squares import Problem, Solution, search
-from harness.tuning.limits import effective_samples, parameter_count, profile_limits
+from harness.tuning.limits import effective_samples, profile_limits
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
+
+    from harness.tuning.families import Family
+    from harness.tuning.least_squares import Record
 
     Array = NDArray[np.float64]
 
@@ -141,9 +144,8 @@ def fit_best(
         _check_solution(problem, solution, own)
         fits[order] = _fitted(problem, solution, order, confidence, own)
         mean_square = max(solution.cost / solution.residuals.size, np.finfo(float).tiny)
-        criterion[order] = samples * math.log(mean_square) + parameter_count(
-            problem, order
-        ) * math.log(samples)
+        fitted = LagFamily(order=order).count(problem)
+        criterion[order] = samples * math.log(mean_square) + fitted * math.log(samples)
     best = fits[min(criterion, key=lambda order: criterion[order])]
     return OrderChoice(
         best=best,
@@ -204,20 +206,34 @@ def _check_record(inputs: Array, outputs: Array, tick: float) -> None:
 def _solve(problem: Problem, order: int) -> Solution:
     """Return the best fit from the best points of a coarse grid over shapes."""
     record = problem.output.size * problem.tick
-    frame = unit_frame(order, 2.0 * record)
-    even = 0.8 if order > 1 else 0.0
-    points = [
-        np.array([total, dead, even])
-        for total in np.geomspace(max(problem.tick, 1e-3 * record), record, 10)
-        for dead in (0.02, 0.3, 0.7)
-    ]
+    return best_of_grid(problem, LagFamily(order=order), problem.tick, record)
+
+
+def best_of_grid(problem: Record, family: Family, tick: float, record: float) -> Solution:
+    """Return the best fit from the best points of a coarse grid over shapes.
+
+    Parameters
+    ----------
+    problem : Record
+        Record.
+    family : Family
+        Family of the shape.
+    tick, record : float
+        Spacing of the rows, and length of the record [s].
+
+    Returns
+    -------
+    Solution
+        The best fit.
+    """
+    frame = family.unit_frame(2.0 * record)
 
     def cost(x: Array) -> float:
         unit = problem.response(frame.shape(x))
         energy = float(unit @ unit)
         return -(float(unit @ problem.output) ** 2) / energy if energy > 0.0 else 0.0
 
-    starts = sorted(points, key=cost)[:3]
+    starts = sorted(family.starts(tick, record), key=cost)[:3]
     found = [search(problem, frame, start, _COARSE_TOLERANCE) for start in starts]
     best = min(found, key=lambda solution: solution.cost)
     return search(problem, frame, best.coordinates, _TOLERANCE)
@@ -226,7 +242,8 @@ def _solve(problem: Problem, order: int) -> Solution:
 def _effective(problem: Problem, solution: Solution, order: int) -> float:
     """Return the effective number of samples of a fit."""
     rows_per_lag = int(sum(solution.shape) / problem.tick)
-    return effective_samples(solution.residuals, rows_per_lag, parameter_count(problem, order))
+    fitted = LagFamily(order=order).count(problem)
+    return effective_samples(solution.residuals, rows_per_lag, fitted)
 
 
 def _check_solution(problem: Problem, solution: Solution, samples: float) -> None:
@@ -262,7 +279,7 @@ def _fitted(
             time_constants=(first,) if order == 1 else (first, second),
             dead_time=dead,
         ),
-        limits=profile_limits(problem, solution, order, confidence, samples),
+        limits=profile_limits(problem, solution, LagFamily(order=order), confidence, samples),
         residual_rms=math.sqrt(solution.cost / solution.residuals.size),
         samples=solution.residuals.size,
     )

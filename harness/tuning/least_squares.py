@@ -8,7 +8,7 @@ simplification, BIT 15:49, 1975).
 from __future__ import annotations
 
 from dataclasses import dataclass, replace
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Protocol
 
 import numpy as np
 
@@ -25,6 +25,24 @@ if TYPE_CHECKING:
 _DIFFERENCE = 1e-6  # relative step of a forward difference; the response is exact to 1e-14
 _ITERATIONS = 60
 _LARGEST_DAMPING = 1e10
+
+
+class Record(Protocol):
+    """A record to fit a shape to."""
+
+    @property
+    def output(self) -> Array:
+        """Return the output, nuisance terms projected out, shape (n,) [fraction of PV span]."""
+        ...
+
+    @property
+    def nuisance(self) -> Array:
+        """Return orthonormal rows, level and drift, shape (m, n) [-]."""
+        ...
+
+    def response(self, shape: Shape) -> Array:
+        """Return the unit-gain response of a shape, nuisance terms projected out."""
+        ...
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -69,7 +87,7 @@ class Solution:
     coordinates : ndarray, shape (k,)
         Coordinates in the frame [s, or a share].
     shape : tuple of float
-        First lag, second lag, dead time [s].
+        First lag, second lag, dead time, and what a family adds [s].
     gain : float
         Gain [fraction of PV span per fraction of output].
     residuals : ndarray, shape (n,)
@@ -85,12 +103,12 @@ class Solution:
     cost: float
 
 
-def search(problem: Problem, frame: Frame, start: Array, tolerance: float) -> Solution:
+def search(problem: Record, frame: Frame, start: Array, tolerance: float) -> Solution:
     """Minimise the squared residuals by damped Gauss-Newton steps within bounds.
 
     Parameters
     ----------
-    problem : Problem
+    problem : Record
         Record.
     frame : Frame
         Coordinates and bounds.
@@ -140,14 +158,14 @@ def search(problem: Problem, frame: Frame, start: Array, tolerance: float) -> So
     )
 
 
-def deviations(problem: Problem, frame: Frame, solution: Solution) -> Array:
+def deviations(problem: Record, frame: Frame, solution: Solution) -> Array:
     """Return what the Jacobian says of the spread of each coordinate, and of the gain.
 
     Good enough to start a search for limits, and no more: it knows neither bounds nor curvature.
 
     Parameters
     ----------
-    problem : Problem
+    problem : Record
         Record.
     frame : Frame
         Frame of the solution, the gain free.
@@ -167,7 +185,7 @@ def deviations(problem: Problem, frame: Frame, solution: Solution) -> Array:
     return np.sqrt(np.maximum(np.diag(covariance), 0.0))
 
 
-def _evaluate(problem: Problem, frame: Frame, x: Array) -> tuple[float, Array, Array]:
+def _evaluate(problem: Record, frame: Frame, x: Array) -> tuple[float, Array, Array]:
     """Return gain, residuals and projected unit response at one point."""
     unit = problem.response(frame.shape(x))
     energy = float(unit @ unit)
@@ -177,7 +195,7 @@ def _evaluate(problem: Problem, frame: Frame, x: Array) -> tuple[float, Array, A
     return gain, problem.output - gain * unit, unit
 
 
-def _jacobian(problem: Problem, frame: Frame, x: Array, gain: float, unit: Array) -> Array:
+def _jacobian(problem: Record, frame: Frame, x: Array, gain: float, unit: Array) -> Array:
     """Return the derivative of the model by each coordinate, the gain's part projected out."""
     rows = np.zeros((x.size, unit.size))
     energy = float(unit @ unit)
@@ -197,7 +215,7 @@ def _jacobian(problem: Problem, frame: Frame, x: Array, gain: float, unit: Array
 
 def _plain(shape: Shape) -> Shape:
     """Return a shape of Python floats."""
-    return float(shape[0]), float(shape[1]), float(shape[2])
+    return tuple(float(value) for value in shape)
 
 
 def _free(frame: Frame, x: Array, gradient: Array) -> NDArray[np.bool_]:

@@ -10,11 +10,12 @@ import numpy as np
 from scipy.special import stdtrit
 
 from harness.domain.models import Interval
-from harness.tuning.frames import evenness_of, profile_frame, unit_frame
-from harness.tuning.least_squares import Problem, Solution, deviations, search
+from harness.tuning.least_squares import Record, Solution, deviations, search
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
+
+    from harness.tuning.families import Family
 
 _ROUNDS = 15
 _CLOSE = 0.05  # of the critical value; from there on the root deviance is taken as straight
@@ -61,35 +62,8 @@ def effective_samples(residuals: NDArray[np.float64], longest: int, fitted: int)
     return n / inflation
 
 
-def parameters_of(solution: Solution, order: int) -> dict[str, float]:
-    """Return the parameters that get limits, by name.
-
-    Parameters
-    ----------
-    solution : Solution
-        The fit.
-    order : int
-        Lags [-].
-
-    Returns
-    -------
-    dict of str to float
-        Values, ``total_lag`` first [s; the gain as fraction of PV span per fraction of output].
-    """
-    first, second, dead = solution.shape
-    values = {
-        "total_lag": first + second + dead,
-        "gain": solution.gain,
-        "dead_time": dead,
-        "time_constant_1": first,
-    }
-    if order > 1:
-        values["time_constant_2"] = second
-    return values
-
-
 def profile_limits(
-    problem: Problem, best: Solution, order: int, confidence: float, samples: float
+    problem: Record, best: Solution, family: Family, confidence: float, samples: float
 ) -> dict[str, Interval]:
     """Return limits of every parameter by profile likelihood.
 
@@ -100,12 +74,12 @@ def profile_limits(
 
     Parameters
     ----------
-    problem : Problem
+    problem : Record
         Record.
     best : Solution
         The fit, in the unit frame.
-    order : int
-        Lags [-].
+    family : Family
+        Family of the shape.
     confidence : float
         Level, e.g. 0.95 [-].
     samples : float
@@ -116,15 +90,16 @@ def profile_limits(
     dict of str to Interval
         By parameter.
     """
-    freedom = max(samples - parameter_count(problem, order), _LEAST_FREEDOM)
+    freedom = max(samples - family.count(problem), _LEAST_FREEDOM)
     critical = float(stdtrit(freedom, 0.5 + 0.5 * confidence))
     sigma = math.sqrt(best.cost / freedom)
-    profile = _Profile(problem=problem, best=best, order=order, sigma=sigma)
-    spread = deviations(problem, unit_frame(order, 2.0 * sum(best.shape)), best) * sigma
+    profile = _Profile(problem=problem, best=best, family=family, sigma=sigma)
+    scale = family.scale(best)
+    spread = deviations(problem, family.unit_frame(2.0 * scale), best) * sigma
     limits: dict[str, Interval] = {}
-    for name, value in parameters_of(best, order).items():
-        size = abs(value) if name == "gain" else sum(best.shape)
-        guess = max(_offset(best, name, spread * critical), _SMALLEST_OFFSET * size)
+    for name, value in family.parameters(best).items():
+        size = abs(value) if name == "gain" else scale
+        guess = max(family.offset(best, name, spread * critical), _SMALLEST_OFFSET * size)
         limits[name] = Interval(
             low=profile.limit(name, value, -guess, critical),
             high=profile.limit(name, value, guess, critical),
@@ -133,39 +108,21 @@ def profile_limits(
     return limits
 
 
-def parameter_count(problem: Problem, order: int) -> int:
-    """Return how many parameters a fit has: gain, dead time, lags, level and drift.
-
-    Parameters
-    ----------
-    problem : Problem
-        Record.
-    order : int
-        Lags [-].
-
-    Returns
-    -------
-    int
-        Parameters [-].
-    """
-    return order + 2 + int(problem.nuisance.shape[0])
-
-
 @dataclass(frozen=True, slots=True, kw_only=True)
 class _Profile:
     """Cost of the best fit as a function of one parameter."""
 
-    problem: Problem
+    problem: Record
     best: Solution
-    order: int
+    family: Family
     sigma: float
 
     def limit(self, name: str, value: float, offset: float, critical: float) -> float:
         """Return where the root deviance meets the critical value, starting at an offset."""
-        bound = {"gain": -math.inf, "total_lag": 1e-6 * value}.get(name, 0.0)
+        bound = self.family.bound(name, value)
         if self.sigma == 0.0 or (offset < 0.0 and value <= bound):
             return value
-        home = profile_frame(self.best.shape, self.order, name, value)[1]
+        home = self.family.profile_frame(self.best.shape, name, value)[1]
         direction = np.zeros(home.size)  # of the other parameters, per unit of this one
         inside, inside_root, outside, outside_root = 0.0, 0.0, math.inf, math.inf
         for _ in range(_ROUNDS):
@@ -173,7 +130,7 @@ class _Profile:
             distance = abs(tried - value)
             if distance == 0.0:
                 return value
-            frame, _ = profile_frame(self.best.shape, self.order, name, tried)
+            frame, _ = self.family.profile_frame(self.best.shape, name, tried)
             tolerance = _PRECISION * self.sigma**2 / self.best.cost
             found = search(self.problem, frame, home + direction * distance, tolerance)
             direction = (found.coordinates - home) / distance
@@ -199,17 +156,3 @@ def _next_distance(
         return inside * min(max(target / max(inside_root, 1e-9), 1.2), 4.0)
     share = (target - inside_root) / (outside_root - inside_root)
     return inside + (outside - inside) * min(max(share, 0.05), 0.95)
-
-
-def _offset(best: Solution, name: str, spread: NDArray[np.float64]) -> float:
-    """Return a first guess of the distance from a parameter to its limit."""
-    total, even = sum(best.shape), evenness_of(best.shape)
-    if name == "gain":
-        return float(spread[-1])
-    if name == "total_lag":
-        return float(spread[0])
-    if name == "dead_time":
-        return float(spread[1] * total)
-    root = math.sqrt(max(1.0 - even, 0.0))
-    parting = 0.5 * total * (math.sqrt(1.0 - even + float(spread[2])) - root)
-    return max(parting, 0.5 * float(spread[1]) * total)
