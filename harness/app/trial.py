@@ -17,12 +17,14 @@ from harness.app.stopping import StopRequest
 from harness.app.trial_view import DirectView, TrialView, ViewProcess
 from harness.domain.points import points_of
 from harness.domain.run import Closing, EventKind, RunEnd, RunHeader
+from harness.domain.trial import ModelSource
 from harness.engine.engine import Engine
 from harness.errors import DryrigError, RecordError, UsageError
 from harness.recording.process import RecorderProcess
 from harness.recording.writer import Recorder
 from harness.runtime.clock import PacedClock
 from harness.runtime.link_process import LinkProcess
+from harness.runtime.requests import NothingToCompute
 from harness.runtime.session import Pacing, Session
 from harness.runtime.steadiness import steady_memory, steady_thread
 from harness.runtime.trial_script import WAIT_FOR_CONTROLLER, trial_script
@@ -33,6 +35,7 @@ if TYPE_CHECKING:
     from harness.domain.rig import Rig
     from harness.domain.trial import Trial
     from harness.recording.port import RecordWriter
+    from harness.runtime.session import Computer
 
 _VIRTUAL = "virtual"
 _INTERRUPTED = "interrupted by the user"
@@ -216,7 +219,7 @@ def _carry_out(
         stop = stack.enter_context(StopRequest())
         clock = PacedClock()
         paced = options.clock != _VIRTUAL
-        pacing = _pacing(stack, options, engine.rig, clock) if paced else None
+        pacing = _pacing(stack, options, engine.rig, trial, clock) if paced else None
         folder = make_run_folder(options.out, header)
         recorder: RecordWriter
         if paced:
@@ -276,13 +279,18 @@ def _close(session: Session, recorder: RecordWriter, end: RunEnd, reason: str) -
     return end
 
 
-def _pacing(stack: ExitStack, options: TrialOptions, rig: Rig, clock: PacedClock) -> Pacing:
+def _pacing(
+    stack: ExitStack, options: TrialOptions, rig: Rig, trial: Trial, clock: PacedClock
+) -> Pacing:
     links = None
     if options.controller == "external":
         points = points_of(rig, external=True)
         links = stack.enter_context(LinkProcess(rig.links, points, rig.name))
         for name, (host, port) in links.addresses.items():
             print(f"link {name}: listening on {host}:{port}", file=sys.stderr, flush=True)  # noqa: T201
-    computer = stack.enter_context(ProcessComputer())
-    computer.wait_until_warm()
+    computer: Computer = NothingToCompute()
+    if trial.models is ModelSource.IDENTIFIED:  # only such a trial makes fits
+        fits = stack.enter_context(ProcessComputer())
+        fits.wait_until_warm()
+        computer = fits
     return Pacing(clock=clock, pace=options.pace, links=links, computer=computer)

@@ -11,6 +11,9 @@ from pathlib import Path
 
 import pytest
 
+from harness.domain.run import EventKind
+from harness.errors import RecordError
+from harness.recording.reader import RunFolder
 from harness.runtime.clock import PacedClock
 
 ROOT = Path(__file__).resolve().parents[3]
@@ -137,6 +140,29 @@ class Bench:
     def start_soft_plc(self, name, port, *arguments, link="modbus"):
         where = ("--link", link, "--port", port, "--pace", PACE)
         return self.start(name, "control", self.rig, *where, *arguments)
+
+    def wait_for_phase(self, name):
+        """Wait until the record of a run says that its phase has begun; return the folder."""
+        clock = PacedClock()
+        end = clock.now_ns() + int(PATIENCE * 1e9)
+        while clock.now_ns() < end:
+            pause()
+            for record in (self.folder / name).glob("*/trace.sqlite"):
+                if self._has_begun(record.parent):
+                    return record.parent
+        raise AssertionError("\n".join(program.complained for program in self.programs))
+
+    @staticmethod
+    def _has_begun(folder):
+        try:
+            events = RunFolder.open(folder).events()
+        except RecordError:  # it is only being made
+            return False
+        return any(event.kind is EventKind.PHASE_STARTED for event in events)
+
+    @staticmethod
+    def pause(seconds=0.02):
+        pause(seconds)
 
     @staticmethod
     def free_port():
