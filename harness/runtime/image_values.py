@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -10,11 +11,10 @@ import numpy as np
 from harness.domain.points import position_point
 from harness.domain.signals import PointKind
 from harness.engine import places as place
+from harness.links.codecs import CURRENT_LOW_MA, CURRENT_SPAN_MA
 from plants import layout as at
 
 if TYPE_CHECKING:
-    from collections.abc import Callable
-
     from numpy.typing import NDArray
 
     from harness.domain.signals import Point
@@ -22,9 +22,14 @@ if TYPE_CHECKING:
 
     Floats = NDArray[np.float64]
 
+_WRITTEN = (PointKind.HEARTBEAT, PointKind.READ_BACK)  # what a peer wrote, not of the engine
+
 
 class ImageValues:
     """Makes the image of an engine's present tick.
+
+    Nearly every point is a place in the state on a straight line, and they are all worked out
+    together: point by point it took 200 microseconds of every tick for 80 points.
 
     Parameters
     ----------
@@ -42,20 +47,29 @@ class ImageValues:
         self._qualities = np.zeros(n)
         self.heartbeats: dict[str, float] = {}
         self.read_backs: dict[str, float] = {}
-        written = {
-            PointKind.HEARTBEAT: self.heartbeats,
-            PointKind.READ_BACK: self.read_backs,
-        }
-        self._readers = [
-            _reader(engine, point, written.get(point.kind, {})) for point in points
+        self._number = {point.name: i for i, point in enumerate(points)}
+        apart = (*_WRITTEN, PointKind.TICK)
+        shown = [(i, point) for i, point in enumerate(points) if point.kind not in apart]
+        lines = [_line(engine, point) for _, point in shown]
+        self._shown = np.array([i for i, _ in shown], dtype=np.intp)
+        self._places = np.array([line.place for line in lines], dtype=np.intp)
+        self._zeros = np.array([line.zero for line in lines])
+        self._spans = np.array([line.span for line in lines])
+        self._lowers = np.array([line.lower for line in lines])
+        self._gains = np.array([line.gain for line in lines])
+        self._ticks = [i for i, point in enumerate(points) if point.kind is PointKind.TICK]
+        self._integral_times = [
+            i for i, point in enumerate(points) if point.kind is PointKind.INTEGRAL_TIME
         ]
-        self._measurements = [
+        measured = [
             (i, engine.place_of_transmitter(point.name))
             for i, point in enumerate(points)
             if point.kind is PointKind.MEASUREMENT
         ]
-        self._current = int(engine.table[at.AT_CURRENT])
-        self._quality = int(engine.table[at.AT_QUALITY])
+        numbers = np.array([number for _, number in measured], dtype=np.intp)
+        self._measured = np.array([i for i, _ in measured], dtype=np.intp)
+        self._current_places = numbers + int(engine.table[at.AT_CURRENT])
+        self._quality_places = numbers + int(engine.table[at.AT_QUALITY])
 
     def take(self) -> tuple[Floats, Floats, Floats]:
         """Return values, currents and qualities of the present tick.
@@ -66,53 +80,69 @@ class ImageValues:
             Values in each point's unit; currents [mA], not a number where there is none;
             ``Quality`` numbers [-]. The arrays are used again by the next call.
         """
-        for i, read in enumerate(self._readers):
-            self._values[i] = read()
-        for i, number in self._measurements:
-            self._currents[i] = self._engine.state[self._current + number]
-            self._qualities[i] = self._engine.state[self._quality + number]
-        return self._values, self._currents, self._qualities
+        state, values = self._engine.state, self._values
+        fractions = (state[self._places] - self._zeros) / self._spans
+        values[self._shown] = self._lowers + fractions * self._gains
+        for i in self._integral_times:
+            if not math.isfinite(values[i]):
+                values[i] = 0.0  # stands for no integral action
+        for i in self._ticks:
+            values[i] = self._engine.tick
+        for written in (self.heartbeats, self.read_backs):
+            for name, value in written.items():
+                values[self._number[name]] = value
+        self._currents[self._measured] = state[self._current_places]
+        self._qualities[self._measured] = state[self._quality_places]
+        return values, self._currents, self._qualities
 
 
-def _reader(engine: Engine, point: Point, written: dict[str, float]) -> Callable[[], float]:
-    """Return a function that reads one point in its unit; ``written`` is what a peer wrote."""
-    state = engine.state
+@dataclass(frozen=True, slots=True, kw_only=True)
+class _Line:
+    """A point as lower + gain * (state - zero) / span."""
+
+    place: int
+    lower: float = 0.0
+    gain: float = 1.0
+    zero: float = 0.0
+    span: float = 1.0
+
+
+def _line(engine: Engine, point: Point) -> _Line:
+    """Return how a point follows from one place of the state."""
     match point.kind:
         case PointKind.MEASUREMENT:
-            return lambda: engine.measured(point.name)
+            number = engine.place_of_transmitter(point.name)
+            return _Line(
+                place=int(engine.table[at.AT_CURRENT]) + number,
+                zero=CURRENT_LOW_MA,
+                span=CURRENT_SPAN_MA,
+                lower=point.range.lower,
+                gain=point.range.span,
+            )
         case PointKind.COMMAND:
-            command = engine.place_of_valve(point.name, at.AT_COMMAND)
-            return lambda: 100.0 * state[command]
+            return _Line(place=engine.place_of_valve(point.name, at.AT_COMMAND), gain=100.0)
         case PointKind.POSITION:
             tags = {position_point(valve.tag): valve.tag for valve in engine.rig.valves}
-            travel = engine.place_of_valve(tags[point.name], at.AT_TRAVEL)
-            return lambda: 100.0 * state[travel]
-        case PointKind.HEARTBEAT | PointKind.READ_BACK:
-            return lambda: written.get(point.name, 0.0)
-        case PointKind.TICK:
-            return lambda: float(engine.tick)
+            return _Line(
+                place=engine.place_of_valve(tags[point.name], at.AT_TRAVEL), gain=100.0
+            )
         case _:
-            return _order_reader(engine, point)
+            return _order_line(engine, point)
 
 
-def _order_reader(engine: Engine, point: Point) -> Callable[[], float]:
-    """Return a function that reads one order of a loop."""
-    state = engine.state
+def _order_line(engine: Engine, point: Point) -> _Line:
+    """Return how an order of a loop follows from its place."""
     base = engine.place_of_loop(point.name.rpartition(".")[0])
     match point.kind:
         case PointKind.SETPOINT:
-            shown = point.range
-            return lambda: shown.from_fraction(state[base + place.SETPOINT])
+            return _Line(
+                place=base + place.SETPOINT, lower=point.range.lower, gain=point.range.span
+            )
         case PointKind.MODE:
-            return lambda: float(state[base + place.MODE])
+            return _Line(place=base + place.MODE)
         case PointKind.MANUAL_OUTPUT:
-            return lambda: 100.0 * state[base + place.MANUAL_OUTPUT]
+            return _Line(place=base + place.MANUAL_OUTPUT, gain=100.0)
         case PointKind.GAIN:
-            return lambda: float(state[base + place.GAIN])
+            return _Line(place=base + place.GAIN)
         case _:
-            return lambda: _finite_or_zero(state[base + place.INTEGRAL_TIME])
-
-
-def _finite_or_zero(integral_time: float) -> float:
-    """Return the integral time; 0 stands for no integral action."""
-    return float(integral_time) if math.isfinite(integral_time) else 0.0
+            return _Line(place=base + place.INTEGRAL_TIME)
