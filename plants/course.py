@@ -22,6 +22,8 @@ _PIECE = 0.25
 _CHANGE = 1.0 / 16.0
 # Near the seat, where the characteristic bends, at most this travel [-].
 _SEAT_CHANGE = SEAT_TRAVEL / 16.0
+# A lag this close to its input has arrived: rounding of a travel of 1, and no denormals [-].
+_LANDED = 1e-16
 _MOST_PIECES = 200
 # A lag this close to its input has settled, as far as the flow's integral goes [-].
 _SETTLED = 1e-9
@@ -230,6 +232,11 @@ def valve_course(
         rate = math.copysign(1.0 / stroke_time, command - position)
     else:
         position = command
+        if abs(travel - position) < _LANDED:
+            last = installed_flow(
+                position, kind, rangeability, log_rangeability, kv, line_kv, flow_per_kv
+            )
+            return last, last, last, position, position, last
     split = 0.0 < corner < interval
     first, first_decay, second_decay = interval, half_decay, 1.0
     if split:
