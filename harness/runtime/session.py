@@ -303,7 +303,7 @@ class Session:
         Returns
         -------
         ndarray, shape (ticks, n_columns)
-            The rows.
+            The rows, each number in its column's unit.
         """
         if self._pacing is None:
             self._heed_stop()

@@ -339,8 +339,9 @@ class _TrialRunner:
                 )
                 raise InvalidRunError(
                     f"phase {phase.name!r}: not steady within its time limit of "
-                    f"{phase.time_limit:g} s ({detector.reason}); judge nothing from it. Look at "
-                    "the trace: is the loop swinging, or the limit too short?"
+                    f"{phase.time_limit:g} s ({detector.reason}), so that nothing can be judged. "
+                    "See in the trace whether the loop swings; where it only needs longer, give "
+                    "the phase a longer time_limit in the trial file"
                 )
             block = yield Advance(ticks=chunk)
             require_controllers(session)
