@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
@@ -66,19 +67,29 @@ def step_findings(
     ):
         if size == 0.0:
             continue
-        for signed in (size, -size):
-            name = f"{what} step of {100.0 * signed:+.3g} %"
-            found += _limit_findings(name, curve, signed, test)
+        found += _limit_findings(what, curve, abs(size), test)
         name = f"{what} step of {100.0 * abs(size):.3g} %"
         found += _rate_findings(name, curve, abs(size), test)
     return found
 
 
 def _limit_findings(
-    name: str, curve: ContinuousResponse, size: float, test: StepTest
+    what: str, curve: ContinuousResponse, size: float, test: StepTest
 ) -> list[str]:
+    """Say whether the step meets a limit; one sentence where it does so up and down alike."""
+    ways = [_limit_words(curve, signed, test) for signed in (size, -size)]
+    if all(ways):
+        return [f"{what} step of {100.0 * size:.3g} %, up or down: {ways[0]}"]
+    return [
+        f"{what} step of {100.0 * signed:+.3g} %: {words}"
+        for words, signed in zip(ways, (size, -size), strict=True)
+        if words
+    ]
+
+
+def _limit_words(curve: ContinuousResponse, size: float, test: StepTest) -> str:
     if test.output is None:
-        return []
+        return ""
     wanted = test.output + size * curve.output
     final = float(wanted[-1])
     for limit, beyond, worst in (
@@ -88,23 +99,20 @@ def _limit_findings(
         if not beyond.any():
             continue
         if not test.output_low <= final <= test.output_high:
-            return [
-                f"{name}: in the end it needs an output of {100.0 * final:.4g} %, beyond the limit "
-                f"of {100.0 * limit:g} %; it cannot be held there: make the step smaller, or start elsewhere"
-            ]
+            return (
+                f"in the end it needs an output of {100.0 * final:.4g} %, beyond the limit of "
+                f"{100.0 * limit:g} %; it cannot be held there: make the step smaller, or start "
+                "elsewhere"
+            )
         spent = float(np.sum(np.diff(curve.times)[beyond[:-1]]))
-        return [
-            f"{name}: the output would go to {100.0 * worst:.4g} %, and stand at its limit of "
+        reach = worst - test.output
+        largest = math.floor(1000.0 * abs(size * (limit - test.output) / reach)) / 10.0
+        return (
+            f"the output would go to {100.0 * worst:.4g} %, and stand at its limit of "
             f"{100.0 * limit:g} % for about {spent:.3g} s; the prediction is without limits: make "
-            f"the step at most {_within(test.output, size, curve.output, limit):.3g} %"
-        ]
-    return []
-
-
-def _within(output: float, size: float, curve: Array, limit: float) -> float:
-    """Return the largest step, in per cent and of the same sign, that stays within a limit."""
-    reach = float((size * curve).max() if limit > output else (size * curve).min())
-    return 100.0 * size * (limit - output) / reach if reach else 100.0 * size
+            f"the step at most {largest:g} %"
+        )
+    return ""
 
 
 def _rate_findings(

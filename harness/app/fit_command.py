@@ -89,10 +89,24 @@ def run_fit(options: argparse.Namespace) -> int:
     """
     from harness.app.fit import fit  # noqa: PLC0415  kept out of --help
 
-    found = fit(_asked(options))
+    if options.plot is not None:
+        from harness.reporting.figure_files import check_figure_path  # noqa: PLC0415
+
+        check_figure_path(options.plot)
+    asked = _asked(options)
+    found = fit(asked)
+    if options.plot is not None:
+        from harness.app.drawings import draw_fit_file  # noqa: PLC0415
+
+        draw_fit_file(options.plot, found, asked)
     if options.json:
         text = json.dumps(found.document, indent=2, ensure_ascii=False, allow_nan=False)
         sys.stdout.write(text + "\n")
+        return ExitCode.PASS
+    from harness.reporting.terminal import make_console  # noqa: PLC0415
+    from harness.reporting.tuning_tables import fit_view  # noqa: PLC0415
+
+    make_console().print(fit_view(found.document))
     return ExitCode.PASS
 
 

@@ -10,7 +10,7 @@ from harness.analysis.metrics import METRIC_UNITS
 from harness.analysis.step_limits import StepTest, step_findings
 from harness.analysis.tuning_study import Evaluation, LoopConditions, evaluate
 from harness.errors import ModelError, UsageError
-from harness.tuning.block_units import BlockFormat, GainUnit, entered, gain_factor
+from harness.tuning.entered import BlockFormat, GainUnit, entered, gain_factor
 from harness.tuning.forms import Form, IdealForm, ideal_to_parallel, ideal_to_series
 from harness.tuning.process import action_for, reduce_process
 from harness.tuning.rule_settings import ideal_settings

@@ -16,7 +16,7 @@ if TYPE_CHECKING:
 
     from harness.app.tune import TuneOptions
     from harness.app.tune_source import TuningSource
-    from harness.tuning.block_units import BlockFormat, Spans
+    from harness.tuning.entered import BlockFormat, Spans
 
 _EPILOG = (
     "Rules: ds-p, ds-pi, ds-pid (direct synthesis for setpoint); load-pi, load-pid (direct "
@@ -187,12 +187,37 @@ def run_tune(options: argparse.Namespace) -> int:
     """
     from harness.app.tune import tune  # noqa: PLC0415  kept out of --help
 
-    source = _source(options)
-    tuning = tune(source, _asked(options))
+    _check_files(options)
+    tuning = tune(_source(options), _asked(options))
+    if options.plot is not None or options.sheet is not None:
+        from harness.app.drawings import draw_tuning_file, tuning_element  # noqa: PLC0415
+
+        if options.plot is not None:
+            draw_tuning_file(options.plot, tuning)
+        if options.sheet is not None:
+            from harness.recording.export import write_file  # noqa: PLC0415
+            from harness.reporting.tuning_sheet import render_sheet  # noqa: PLC0415
+
+            write_file(options.sheet, render_sheet(tuning.document, tuning_element(tuning)))
     if options.json:
         text = json.dumps(tuning.document, indent=2, ensure_ascii=False, allow_nan=False)
         sys.stdout.write(text + "\n")
+        return ExitCode.PASS
+    from harness.reporting.terminal import make_console  # noqa: PLC0415
+    from harness.reporting.tuning_tables import tuning_view  # noqa: PLC0415
+
+    make_console().print(tuning_view(tuning.document))
     return ExitCode.PASS
+
+
+def _check_files(options: argparse.Namespace) -> None:
+    """Refuse file names before any work is done."""
+    if options.plot is not None:
+        from harness.reporting.figure_files import check_figure_path  # noqa: PLC0415
+
+        check_figure_path(options.plot)
+    if options.sheet is not None and options.sheet.suffix.lower() not in {".html", ".htm"}:
+        raise UsageError(f"{options.sheet}: a tuning sheet is written as .html")
 
 
 def _source(options: argparse.Namespace) -> TuningSource:
@@ -225,7 +250,7 @@ def _source(options: argparse.Namespace) -> TuningSource:
 
 def _spans(options: argparse.Namespace) -> Spans:
     from harness.domain.signals import Range  # noqa: PLC0415  kept out of --help
-    from harness.tuning.block_units import Spans  # noqa: PLC0415
+    from harness.tuning.entered import Spans  # noqa: PLC0415
 
     def given(name: str, ends: Sequence[float] | None, unit: str) -> Range | None:
         if ends is None:
@@ -275,7 +300,7 @@ def _asked(options: argparse.Namespace) -> TuneOptions:
 
 
 def _block(options: argparse.Namespace) -> BlockFormat | None:
-    from harness.tuning.block_units import (  # noqa: PLC0415  kept out of --help
+    from harness.tuning.entered import (  # noqa: PLC0415  kept out of --help
         BlockFormat,
         DerivativeUnit,
         GainUnit,

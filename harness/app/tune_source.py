@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING, Any
 
 from harness.domain.signals import Range
 from harness.errors import UsageError
-from harness.tuning.block_units import Spans
+from harness.tuning.entered import Spans
 from harness.tuning.process import ProcessModel, process_of
 
 if TYPE_CHECKING:

@@ -91,12 +91,12 @@ def phase_drawing(
         lower.set_ylabel("Valves [%]")
         figure.align_ylabels((upper, lower))
         for axes in (upper, lower):
-            _frame(axes, curves.time)
+            frame_axes(axes, curves.time)
         buffer = io.StringIO()
         figure.savefig(
             buffer, format="svg", transparent=True, metadata={"Date": None, "Creator": None}
         )
-    return _inline(buffer.getvalue(), f"Curves of the phase {curves.name}")
+    return inline_svg(buffer.getvalue(), f"Curves of the phase {curves.name}")
 
 
 def line_sample(name: str) -> str:
@@ -201,7 +201,16 @@ def _draw_outputs(axes: Any, curves: PhaseCurves) -> None:
     axes.set_xlabel("Time since metric time zero [s]")
 
 
-def _frame(axes: Any, time: NDArray[np.float64]) -> None:
+def frame_axes(axes: Any, time: NDArray[np.float64]) -> None:
+    """Give axes over a time the look of all drawings.
+
+    Parameters
+    ----------
+    axes : matplotlib axes
+        Axes.
+    time : ndarray, shape (n,)
+        Times drawn [s].
+    """
     axes.set_xlim(float(time[0]), float(time[-1]))
     axes.grid(visible=True, color="#e3e6e9", linewidth=0.5)
     axes.set_axisbelow(True)
@@ -211,8 +220,16 @@ def _frame(axes: Any, time: NDArray[np.float64]) -> None:
     axes.margins(y=0.08)
 
 
-def _inline(document: str, label: str) -> str:
-    """Return the svg element alone, as wide as its place, without ids that nothing refers to."""
+def inline_svg(document: str, label: str) -> str:
+    """Return the svg element alone, as wide as its place, without ids that nothing refers to.
+
+    Parameters
+    ----------
+    document : str
+        What matplotlib wrote.
+    label : str
+        What the drawing shows, for those who hear it.
+    """
     element = document[document.index("<svg") :].strip()
     element = re.sub(r'<g id="[^"]*"', "<g", element)
     element = re.sub(r'(<svg[^>]*?) width="[^"]*"', r"\1", element, count=1)
