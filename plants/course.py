@@ -172,7 +172,7 @@ def _course_in_pieces(
 
 
 @kernel
-def valve_course(
+def valve_course(  # noqa: PLR0915  straight-line arithmetic; parts would pass on twenty scalars
     travel: float,
     position: float,
     command: float,

@@ -5,6 +5,7 @@ from __future__ import annotations
 import pytest
 
 from harness.domain.orders import LoopOrders
+from harness.app.trial import warm_up
 from harness.domain.rig import (
     DRAIN,
     Action,
@@ -21,6 +22,7 @@ from harness.domain.rig import (
     Vessel,
 )
 from harness.domain.signals import Range
+from harness.engine.engine import Engine
 
 
 def _valve(tag, destination, characteristic, **changes):
@@ -138,6 +140,12 @@ def make_two_tanks(**changes):
         "links": (),
     }
     return Rig(**(values | changes))
+
+
+def pytest_sessionstart(session):
+    """Compile the kernels before any test's time limit runs: half a minute on a new machine."""
+    engine = Engine(make_two_tanks())
+    warm_up(engine)
 
 
 @pytest.fixture
