@@ -4,8 +4,8 @@ from __future__ import annotations
 
 import pytest
 
-from harness.domain.orders import LoopOrders
 from harness.app.trial import warm_up
+from harness.domain.orders import LoopOrders
 from harness.domain.rig import (
     DRAIN,
     Action,
@@ -142,7 +142,7 @@ def make_two_tanks(**changes):
     return Rig(**(values | changes))
 
 
-def pytest_sessionstart(session):
+def pytest_sessionstart():
     """Compile the kernels before any test's time limit runs: half a minute on a new machine."""
     engine = Engine(make_two_tanks())
     warm_up(engine)
