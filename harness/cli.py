@@ -41,6 +41,11 @@ def main(arguments: Sequence[str] | None = None) -> int:
     int
         0 pass, 1 fail, 2 wrong configuration or use, 3 invalid run, 130 interrupted [-].
     """
+    for stream in (sys.stdout, sys.stderr):
+        # A pipe on Windows may have a code page without signs as common as a degree or a minus.
+        reconfigure = getattr(stream, "reconfigure", None)
+        if reconfigure is not None:
+            reconfigure(errors="backslashreplace")
     options = build_parser().parse_args(arguments)
     run: Callable[[argparse.Namespace], int] = options.run
     try:

@@ -5,7 +5,7 @@ from __future__ import annotations
 from typing import TYPE_CHECKING
 
 from harness.app.loading import read_rig
-from harness.app.output import leave_output
+from harness.app.output import is_reader_gone, leave_output
 from harness.errors import UsageError
 from harness.runtime.plc_block import SoftPlcFaults
 from harness.runtime.soft_plc_process import run_soft_plc_blocking
@@ -55,5 +55,7 @@ def control(options: argparse.Namespace) -> None:
 def _say(text: str) -> None:
     try:
         print(text, flush=True)  # noqa: T201
-    except BrokenPipeError:
+    except OSError as error:
+        if not is_reader_gone(error):
+            raise
         leave_output()  # a controller does not stop because nobody listens to it

@@ -2,8 +2,11 @@
 
 from __future__ import annotations
 
+import errno
 import os
 import sys
+
+from harness.errors import RecordError
 
 
 def write_output(text: str) -> None:
@@ -15,13 +18,36 @@ def write_output(text: str) -> None:
     ----------
     text : str
         The document.
+
+    Raises
+    ------
+    RecordError
+        When it cannot be written where it was sent to.
     """
     try:
         sys.stdout.flush()
         sys.stdout.buffer.write(text.encode("utf-8"))
         sys.stdout.flush()
-    except BrokenPipeError:
+    except OSError as error:
+        if not is_reader_gone(error):
+            raise RecordError(
+                f"standard output could not be written ({error}): is the disk full that it goes "
+                "to? The same document is in the run folder, if there is one"
+            ) from error
         leave_output()
+
+
+def is_reader_gone(error: OSError) -> bool:
+    """Return whether a write failed because nobody reads any more.
+
+    Parameters
+    ----------
+    error : OSError
+        What the write raised; Windows calls a broken pipe an invalid argument.
+    """
+    return isinstance(error, BrokenPipeError) or (
+        sys.platform == "win32" and error.errno == errno.EINVAL
+    )
 
 
 def leave_output() -> None:

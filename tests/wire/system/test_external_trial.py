@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import sys
 
 import pytest
 
@@ -43,8 +44,10 @@ def test_a_good_controller_passes_over_either_link(bench, capfdbinary):
         assert "Traceback" not in trial.complained
         assert "leaked" not in trial.complained
     for program in bench.programs[::2]:
-        assert program.stop() == 0, program.said
-        assert "stopped after" in program.said
+        code = program.stop()
+        if sys.platform != "win32":  # a process cannot be asked to end there
+            assert code == 0, program.said
+            assert "stopped after" in program.said
 
     capfdbinary.readouterr()
     assert main(["score", str(bench.run_folder("modbus")), "--json"]) == 0
