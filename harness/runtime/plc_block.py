@@ -261,12 +261,15 @@ def hold(state: BlockState) -> BlockState:
 
 
 def scan_once(
-    program: PlcProgram, state: BlockState, readings: Mapping[str, Reading]
+    program: PlcProgram,
+    state: BlockState,
+    readings: Mapping[str, Reading],
+    periods: int = 1,
 ) -> BlockState:
     """Execute one scan.
 
     Settings that change in automatic do not bump the output: the integral part takes up the
-    difference.
+    difference. It integrates over the time since the last scan, also where one was left out.
 
     Parameters
     ----------
@@ -276,6 +279,8 @@ def scan_once(
         State after the last scan.
     readings : mapping of str to Reading
         What was read, by point.
+    periods : int
+        Scan periods since the last scan [-].
 
     Returns
     -------
@@ -306,7 +311,7 @@ def scan_once(
         sign,
         program.loop.output_low,
         program.loop.output_high,
-        program.scan,
+        periods * program.scan,
         integral,
         state.output,
         state.held,

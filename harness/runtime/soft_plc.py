@@ -138,12 +138,12 @@ class SoftPlc:
             start_ns=self._clock.now_ns(), period=self._program.scan, pace=self._pace
         )
         scan = 0
+        periods = 1
         while not stop.is_set():
-            await self._scan()
+            await self._scan(periods)
             due = schedule.tick_at(self._clock.now_ns()) + 1
-            self._missed += due - (
-                scan + 1
-            )  # a scan that came too late is left out, as in a PLC
+            periods = due - scan
+            self._missed += periods - 1  # a scan that came too late is left out, as in a PLC
             scan = due
             await self._wait_until(schedule.deadline_ns(scan), stop)
 
@@ -153,12 +153,12 @@ class SoftPlc:
         if not stop.is_set():
             self._clock.wait_until(deadline_ns)
 
-    async def _scan(self) -> None:
+    async def _scan(self, periods: int) -> None:
         if self._state is not None and is_silent(self._program, self._state):
             return
         try:
             readings = await self._client.read(self._program.reads)
-            writes = self._execute(readings)
+            writes = self._execute(readings, periods)
             if writes:
                 await self._client.write(writes)
         except LinkError as error:
@@ -172,13 +172,13 @@ class SoftPlc:
                 self._trouble = None
                 self._say("link back")
 
-    def _execute(self, readings: Mapping[str, Reading]) -> Mapping[str, float]:
+    def _execute(self, readings: Mapping[str, Reading], periods: int) -> Mapping[str, float]:
         """Do what lies between reading and writing."""
         if self._state is None or readings[TICK_POINT].value < self._state.tick:
             self._take_over(readings)
         if self._state is None:
             return {}
-        self._state = scan_once(self._program, self._state, readings)
+        self._state = scan_once(self._program, self._state, readings, periods)
         return writes_of(self._program, self._state, readings)
 
     def _take_over(self, readings: Mapping[str, Reading]) -> None:

@@ -113,6 +113,18 @@ async def test_a_scan_that_takes_too_long_leaves_out_those_it_ran_into(two_tanks
     assert said[-1].endswith("stopped after 4 scans, 2 missed")
 
 
+async def test_a_scan_left_out_is_made_up_for_in_the_integral(two_tanks):
+    def slow(far_end, scan):
+        far_end.values["LT-2"] = 0.75 if scan == 1 else 0.60
+        if scan == 2:
+            far_end.clock.advance(45 * MS)
+
+    far_end, said, _ = await run(two_tanks, slow, scans=4)
+    # Kc 2, T/Ti 0.1, error 0.1 of span: kick 20 % and 2 % a scan; the third covers three periods
+    assert [each["FV-1"] for each in far_end.writes] == pytest.approx([55.0, 77.0, 83.0, 85.0])
+    assert said[-1].endswith("2 missed")
+
+
 async def test_it_waits_for_the_rig_and_says_so_once(two_tanks):
     far_end, said, _ = await run(two_tanks, refusing=3)
     assert far_end.connects == 4
