@@ -33,7 +33,7 @@ from harness.runtime.clock import PacedClock
 from harness.runtime.link_process import LinkProcess
 from harness.runtime.requests import NothingToCompute
 from harness.runtime.session import Pacing, Session
-from harness.runtime.steadiness import steady_memory, steady_thread
+from harness.runtime.steadiness import steady_memory, steady_threads
 
 if TYPE_CHECKING:
     from collections.abc import Iterator
@@ -71,7 +71,7 @@ def lateness(minutes: float) -> Iterator[Figure]:
         recorder = stack.enter_context(RecorderProcess.create(folder, bench.header()))
         stack.enter_context(bench.links)
         stack.enter_context(steady_memory())
-        granted = stack.enter_context(steady_thread())
+        granted = stack.enter_context(steady_threads())
         load = Load(
             bench.links.addresses["modbus"],
             bench.links.addresses["opcua"],

@@ -34,7 +34,7 @@ from harness.runtime.clock import PacedClock
 from harness.runtime.link_process import LinkProcess
 from harness.runtime.requests import NothingToCompute
 from harness.runtime.session import Pacing, Session
-from harness.runtime.steadiness import steady_memory, steady_thread
+from harness.runtime.steadiness import steady_memory, steady_threads
 
 if TYPE_CHECKING:
     from pathlib import Path
@@ -147,7 +147,7 @@ def serve(options: ServeOptions) -> ExitCode:
             stop_asked=stop.asked,
         )
         stack.enter_context(steady_memory())
-        stack.enter_context(steady_thread())
+        stack.enter_context(steady_threads())
         stop.defer(clock.stop)
         try:
             end = _run(session, options)

@@ -26,7 +26,7 @@ from harness.runtime.clock import PacedClock
 from harness.runtime.link_process import LinkProcess
 from harness.runtime.requests import NothingToCompute
 from harness.runtime.session import Pacing, Session
-from harness.runtime.steadiness import steady_memory, steady_thread
+from harness.runtime.steadiness import steady_memory, steady_threads
 from harness.runtime.trial_script import WAIT_FOR_CONTROLLER, trial_script
 from plants.compile import is_compiled
 
@@ -229,7 +229,7 @@ def _carry_out(
         view = TrialView(_view(stack, options), engine.rig.name, trial, expected)
         if paced:
             stack.enter_context(steady_memory())
-            stack.enter_context(steady_thread())
+            stack.enter_context(steady_threads())
         session = Session(
             engine,
             recorder,

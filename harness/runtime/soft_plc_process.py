@@ -15,7 +15,7 @@ from harness.runtime.clock import PacedClock
 from harness.runtime.plc_block import NO_FAULTS, SoftPlcFaults, program_of, warm_up
 from harness.runtime.plc_mistakes import MistakenClient, Setup, mistake_of
 from harness.runtime.soft_plc import run_soft_plc
-from harness.runtime.steadiness import set_memory_aside, steady_thread
+from harness.runtime.steadiness import set_memory_aside, steady_threads
 
 if TYPE_CHECKING:
     from collections.abc import Callable, Iterator, Sequence
@@ -74,7 +74,7 @@ def run_soft_plc_blocking(
     )
     warm_up(program)
     set_memory_aside()
-    with steady_thread():
+    with steady_threads():
         asyncio.run(_run_until_signal(client, program, pace, on_event))
 
 

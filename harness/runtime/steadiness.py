@@ -7,8 +7,9 @@ start is therefore set aside; what is made later is still collected, and there i
 
 On a machine whose processors are all busy, an ordinary thread waits for its turn when its time
 has come: 5 to 18 ms at the 99th percentile beside two or three programs that only count, 0.14 ms
-on a real-time thread. A lower priority for the other processes of a run did not help, and made
-the links slower to answer.
+on a real-time thread. The other threads of its process have to be of the same kind: one that is
+held up while it has the interpreter's lock holds up all. A lower priority for the other
+processes of a run did not help, and made the links slower to answer.
 """
 
 from __future__ import annotations
@@ -16,7 +17,8 @@ from __future__ import annotations
 import gc
 import os
 import sys
-from contextlib import contextmanager
+import threading
+from contextlib import contextmanager, suppress
 from typing import TYPE_CHECKING
 
 if TYPE_CHECKING:
@@ -46,40 +48,43 @@ def steady_memory() -> Iterator[None]:
 
 
 @contextmanager
-def steady_thread() -> Iterator[bool]:
-    """Have the calling thread run as soon as it wakes, where the system lets it.
+def steady_threads() -> Iterator[bool]:
+    """Have the present threads of this process run as soon as they wake, where the system lets it.
 
     Linux grants real-time threads to a privileged user, and to others by ``ulimit -r``. Threads
-    and processes that are started from this one do not inherit it. A thread that waits for
-    every tick takes little of a processor; should it ever fail to wait, the system keeps a
-    twentieth of the time for others, and with one processor alone nothing is asked for.
+    and processes that are started later do not inherit it. Threads that wait for every tick
+    take little of a processor; should one ever fail to wait, the system keeps a twentieth of
+    the time for others, and with one processor alone nothing is asked for.
 
     Yields
     ------
     bool
         Whether the system grants it.
     """
-    granted = _ask_for_real_time()
+    numbers = [each.native_id for each in threading.enumerate() if each.native_id]
+    changed = [number for number in numbers if _ask_for_real_time(number)]
     try:
-        yield granted
+        yield bool(changed)
     finally:
-        if granted:
-            _be_ordinary()
+        for number in changed:
+            _be_ordinary(number)
 
 
-def _ask_for_real_time() -> bool:
+def _ask_for_real_time(number: int) -> bool:
+    """Ask for a thread, by its number in the system, and return whether it is granted."""
     if sys.platform != "linux" or (os.cpu_count() or 1) < _PROCESSORS:
         return False
-    if os.sched_getscheduler(0) != os.SCHED_OTHER:
-        return False  # whoever started the program has chosen already
     lowest = os.sched_param(os.sched_get_priority_min(os.SCHED_RR))
     try:
-        os.sched_setscheduler(0, os.SCHED_RR | os.SCHED_RESET_ON_FORK, lowest)
-    except OSError:  # not allowed to this user
+        if os.sched_getscheduler(number) != os.SCHED_OTHER:
+            return False  # whoever started the program has chosen already
+        os.sched_setscheduler(number, os.SCHED_RR | os.SCHED_RESET_ON_FORK, lowest)
+    except OSError:  # not allowed to this user, or the thread has ended
         return False
     return True
 
 
-def _be_ordinary() -> None:
+def _be_ordinary(number: int) -> None:
     if sys.platform == "linux":
-        os.sched_setscheduler(0, os.SCHED_OTHER, os.sched_param(0))
+        with suppress(ProcessLookupError):  # a thread may have ended by now
+            os.sched_setscheduler(number, os.SCHED_OTHER, os.sched_param(0))

@@ -10,7 +10,7 @@ import weakref
 
 import pytest
 
-from harness.runtime.steadiness import steady_memory, steady_thread
+from harness.runtime.steadiness import steady_memory, steady_threads
 
 
 class Node:
@@ -40,14 +40,25 @@ def test_garbage_made_before_is_collected_first_and_garbage_made_later_as_ever()
 
 
 @pytest.mark.skipif(sys.platform != "linux", reason="elsewhere there is nothing to ask for")
-def test_a_real_time_thread_where_granted_alone_and_for_as_long_as_asked() -> None:
-    before = os.sched_getscheduler(0)
-    inside: list[int] = []
-    with steady_thread() as granted:
-        here = os.sched_getscheduler(0) & ~os.SCHED_RESET_ON_FORK
-        other = threading.Thread(target=lambda: inside.append(os.sched_getscheduler(0)))
+def test_real_time_threads_where_granted_those_that_are_there_and_for_as_long_as_asked() -> (
+    None
+):
+    def kind(number: int | None) -> int:
+        return os.sched_getscheduler(number or 0) & ~os.SCHED_RESET_ON_FORK
+
+    done = threading.Event()
+    there = threading.Thread(target=done.wait)
+    there.start()
+    before = kind(0)
+    later: list[int] = []
+    with steady_threads() as granted:
+        inside = [kind(0), kind(there.native_id)]
+        other = threading.Thread(target=lambda: later.append(kind(0)))
         other.start()
         other.join()
-    assert here == (os.SCHED_RR if granted else before)
-    assert inside == [os.SCHED_OTHER]
-    assert os.sched_getscheduler(0) == before
+    after = [kind(0), kind(there.native_id)]
+    done.set()
+    there.join()
+    assert inside == ([os.SCHED_RR] * 2 if granted else [before] * 2)
+    assert later == [os.SCHED_OTHER]
+    assert after == [before] * 2
