@@ -203,6 +203,18 @@ def _add_trial(commands: argparse._SubParsersAction[argparse.ArgumentParser]) ->
         help="how long to wait for an external controller (default 30)",
     )
     parser.add_argument(
+        "--answers",
+        type=Path,
+        metavar="FILE",
+        help="take answers to prompts from lines appended to this file, not from the terminal",
+    )
+    parser.add_argument(
+        "--order-timeout",
+        type=_above_zero,
+        metavar="SECONDS",
+        help="how long to wait for an order by prompt (default as in the trial file)",
+    )
+    parser.add_argument(
         "--phases", type=_names, metavar="NAME[,NAME...]", help="run these phases only"
     )
     parser.add_argument(
@@ -372,6 +384,8 @@ def _trial(options: argparse.Namespace) -> int:
             out=options.out,
             links=_link_choice(options),
             json=options.json,
+            answers=options.answers,
+            order_timeout=options.order_timeout,
             **waiting,
         )
     )
@@ -387,7 +401,10 @@ def _refuse_idle_options(options: argparse.Namespace, *, external: bool) -> None
         )
     if external:
         return
-    for name in ("link", "host", "modbus_port", "opcua_port", "controller_pace", "wait"):
+    for name in (
+        "link", "host", "modbus_port", "opcua_port", "controller_pace", "wait", "answers",
+        "order_timeout",
+    ):  # fmt: skip
         value = getattr(options, name)
         if value is not None:
             raise UsageError(

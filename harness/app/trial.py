@@ -2,12 +2,14 @@
 
 from __future__ import annotations
 
+import dataclasses
 import sys
 from contextlib import ExitStack
 from dataclasses import dataclass, field
 from pathlib import Path
 from typing import TYPE_CHECKING
 
+from harness.app.answering import answers_for
 from harness.app.compute import ProcessComputer
 from harness.app.forecast import Forecast, forecast
 from harness.app.loading import LinkChoice, read_rig, read_trial
@@ -22,6 +24,7 @@ from harness.engine.engine import Engine
 from harness.errors import DryrigError, RecordError, UsageError
 from harness.recording.process import RecorderProcess
 from harness.recording.writer import Recorder
+from harness.runtime.answers import AnyAnswers
 from harness.runtime.clock import PacedClock
 from harness.runtime.link_process import LinkProcess
 from harness.runtime.requests import NothingToCompute
@@ -35,6 +38,8 @@ if TYPE_CHECKING:
     from harness.domain.rig import Rig
     from harness.domain.trial import Trial
     from harness.recording.port import RecordWriter
+    from harness.runtime.answers import Answers
+    from harness.runtime.requests import Script
     from harness.runtime.session import Computer
 
 _VIRTUAL = "virtual"
@@ -67,6 +72,10 @@ class TrialOptions:
         Whether standard output is kept for the document.
     wait : float
         Longest wait for an external controller to be there, and to take an order [wall s].
+    answers : Path or None
+        File to which answers to prompts are appended; None takes them from the terminal.
+    order_timeout : float or None
+        Longest wait for an order by prompt or callable; None as the trial says [wall s].
     """
 
     rig: Path
@@ -80,6 +89,8 @@ class TrialOptions:
     links: LinkChoice = field(default_factory=LinkChoice)
     json: bool = False
     wait: float = WAIT_FOR_CONTROLLER
+    answers: Path | None = None
+    order_timeout: float | None = None
 
 
 def run_trial(options: TrialOptions) -> RunResult:
@@ -116,12 +127,15 @@ def run_trial(options: TrialOptions) -> RunResult:
         raise UsageError(
             f"{options.rig}: an external controller needs a link, and this rig has none"
         )
+    if options.order_timeout is not None:
+        trial = dataclasses.replace(trial, order_timeout=options.order_timeout)
+    answers = answers_for(rig, trial, options.answers) if external else AnyAnswers(())
     say_compiling()
     expected = forecast(rig, trial)
     engine = Engine(rig, built_in=not external)
     warm_up(engine)
     header = _header(options, rig, rig_text, trial, trial_text, engine)
-    folder, interrupted = _carry_out(options, trial, engine, header, expected)
+    folder, interrupted = _carry_out(options, trial, engine, header, expected, answers)
     if interrupted:
         print(  # noqa: T201
             f"interrupted; what was recorded is kept in {folder}, and "
@@ -212,6 +226,7 @@ def _carry_out(
     engine: Engine,
     header: RunHeader,
     expected: Forecast,
+    answers: Answers,
 ) -> tuple[Path, bool]:
     """Run the script to its end, however that comes; return folder, and whether interrupted."""
     external = options.controller == "external"
@@ -240,7 +255,9 @@ def _carry_out(
             stop_asked=stop.asked,
         )
         stop.defer(clock.stop)
-        end = _run_script(session, trial, recorder, options.wait)
+        end = _run_script(
+            session, trial_script(session, trial, options.wait, answers), recorder
+        )
         view.look(session)
     return folder, end is RunEnd.INTERRUPTED or stop.asked()
 
@@ -251,10 +268,10 @@ def _view(stack: ExitStack, options: TrialOptions) -> ViewPort:
     return stack.enter_context(ViewProcess(to_stderr=options.json))
 
 
-def _run_script(session: Session, trial: Trial, recorder: RecordWriter, wait: float) -> RunEnd:
+def _run_script(session: Session, script: Script, recorder: RecordWriter) -> RunEnd:
     """Run the script and close the record, which says how the run ended."""
     try:
-        session.run(trial_script(session, trial, wait))
+        session.run(script)
     except KeyboardInterrupt:
         session.event(EventKind.NOTE, "run", _INTERRUPTED)
         return _close(session, recorder, RunEnd.INTERRUPTED, _INTERRUPTED)

@@ -123,6 +123,7 @@ class TrialView:
                     for at, text, of_phase in self._events
                 ),
                 events_before=self._dropped,
+                prompt=session.prompt,
             )
         )
 

@@ -10,7 +10,7 @@ from harness.config.findings import not_one_of
 from harness.config.loop_checks import transmitter_range
 from harness.config.rig_tables import ModbusServerTable, OpcUaServerTable
 from harness.domain.orders import LoopOrders
-from harness.domain.points import points_of, read_back_point
+from harness.domain.points import acknowledge_point, points_of, read_back_point
 from harness.domain.rig import (
     Action,
     Characteristic,
@@ -201,8 +201,10 @@ def _item(item: Entry, points: dict[str, Point]) -> None:
 
 def _unknown(name: str, points: dict[str, Point]) -> str:
     """Say that there is no such point; read-backs are suggested only to who asks for one."""
-    asked = name.endswith(read_back_point(""))
-    near = [each for each in points if each.endswith(read_back_point("")) is asked]
+    asked = name.endswith((read_back_point(""), acknowledge_point("")))
+    near = [
+        each for each, point in points.items() if (point.kind is PointKind.READ_BACK) is asked
+    ]
     return not_one_of(name, near or points, "this rig", "point")
 
 

@@ -141,6 +141,7 @@ def build_trial(draft: TrialDraft) -> Trial:
             overshoot=tolerances.overshoot,
             offset=tolerances.offset,
         ),
+        order_timeout=table.order_timeout,
     )
 
 

@@ -21,6 +21,7 @@ class TrialTable(Table):
     closed_loop_time: PositiveTime
     models: Literal["identified", "linearised", "given"]
     settings: Literal["computed", "as found"]
+    order_timeout: PositiveTime = 300.0
 
 
 class ModelTable(Table):

@@ -18,7 +18,8 @@ SWITCH = Range(lower=0.0, upper=1.0, unit="")
 COUNTER_16 = Range(lower=0.0, upper=65_535.0, unit="")
 COUNTER_32 = Range(lower=0.0, upper=4_294_967_295.0, unit="")
 TICK_POINT = "TICK"
-READ_BACK_LIMIT = 1e9  # so wide that a wrong value is received and named instead of refused
+# So wide that a wrong value is received and named instead of refused: largest float32 (IEEE 754).
+READ_BACK_LIMIT = 3.4028234663852886e38
 _READ_BACK_ENDING = ".RB"
 
 
@@ -39,7 +40,7 @@ def points_of(rig: Rig, external: bool) -> tuple[Point, ...]:
     tuple of Point
         A measurement for each transmitter (flows in m3/h), command and position for each
         valve, orders and heartbeat for each loop, the tick counter; then a read-back for each
-        transmitter, and for setpoint and mode of each loop.
+        transmitter, for setpoint and mode of each loop, and for orders carried out.
     """
     outputs = {loop.output for loop in rig.loops}
     points = [_measurement(transmitter) for transmitter in rig.transmitters]
@@ -143,23 +144,36 @@ def read_back_point(name: str) -> str:
     return name + _READ_BACK_ENDING
 
 
+def acknowledge_point(loop_tag: str) -> str:
+    """Return the name of the point that changes when somebody has carried out an order."""
+    return f"{loop_tag}.ACK"
+
+
 def _read_backs(rig: Rig, writable: bool) -> tuple[Point, ...]:
-    """Return the read-backs: transmitters, then setpoint and mode of each loop."""
+    """Return the read-backs: transmitters, setpoint and mode of each loop; orders carried out."""
     shown = [
         (transmitter.tag, shown_range(transmitter).unit) for transmitter in rig.transmitters
     ]
     for loop in rig.loops:
         unit = shown_range(rig.transmitter(loop.process_variable)).unit
         shown += [(setpoint_point(loop.tag), unit), (mode_point(loop.tag), "")]
+    told = [
+        (read_back_point(name), unit, f"{name} as the controller has it")
+        for name, unit in shown
+    ]
+    told += [
+        (acknowledge_point(loop.tag), "", f"Changed when an order is carried out ({loop.tag})")
+        for loop in rig.loops
+    ]
     return tuple(
         Point(
-            name=read_back_point(name),
+            name=name,
             kind=PointKind.READ_BACK,
             range=Range(lower=-READ_BACK_LIMIT, upper=READ_BACK_LIMIT, unit=unit),
             writable=writable,
-            description=f"{name} as the controller has it",
+            description=text,
         )
-        for name, unit in shown
+        for name, unit, text in told
     )
 
 

@@ -79,6 +79,7 @@ class EventKind(StrEnum):
     PHASE_ENDED = "phase ended"
     ORDER = "order"
     ORDER_KNOWN = "order known"
+    PROMPT = "prompt"
     MODELS = "models"
     SETTINGS = "settings"
     CONTROLLER_FOUND = "controller found"

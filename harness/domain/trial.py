@@ -135,6 +135,8 @@ class Trial:
         Rule for the end of a phase.
     tolerances : Tolerances
         Allowed distance from the prediction.
+    order_timeout : float
+        Longest wait for an order by prompt or callable to be carried out [wall s].
     """
 
     name: str
@@ -148,3 +150,4 @@ class Trial:
     phases: tuple[Phase, ...]
     steady: SteadyRule
     tolerances: Tolerances
+    order_timeout: float = 300.0

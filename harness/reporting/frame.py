@@ -45,9 +45,12 @@ def frame(state: ViewState, console: Console) -> RenderableType:
         Decides width, height and characters.
     """
     told = [event for event in state.events if not event.of_phase]
-    layout = _layout(console, len(state.loops), len(told))
+    layout = _layout(console, len(state.loops), len(told), _prompt_words(state))
     phases = _around_running(state.phases, layout.phases)
     pieces: list[RenderableType] = [*_head(state, layout), _phase_list(phases, layout)]
+    if state.prompt:
+        # Never cut: it is to be typed to the digit.
+        pieces += [Text(""), Text(_prompt_words(state), style="bold reverse")]
     for loop in state.loops:
         pieces += [Text(""), _loop_values(loop, layout)]
         drawn = trend(
@@ -67,10 +70,16 @@ def frame(state: ViewState, console: Console) -> RenderableType:
     return Group(*pieces)
 
 
-def _layout(console: Console, loops: int, told: int) -> _Layout:
+def _prompt_words(state: ViewState) -> str:
+    return f"To do now: {state.prompt}" if state.prompt else ""
+
+
+def _layout(console: Console, loops: int, told: int, prompt: str) -> _Layout:
     trend_height, most = (4, 2) if console.height < LOW else (7, 4)
     events = max(1, min(most, told))
     taken = OTHER_LINES + events + (LOOP_LINES + trend_height) * loops
+    if prompt:
+        taken += 2 + len(prompt) // max(NARROW, console.width)
     return _Layout(
         width=max(NARROW, min(console.width, WIDE)),
         phases=max(3, console.height - taken),

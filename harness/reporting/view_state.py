@@ -118,6 +118,8 @@ class ViewState:
         All events so far or the latest of them, newest last.
     events_before : int
         Events that came before the first of ``events`` [-].
+    prompt : str
+        What somebody is asked to do at the controller now; empty for nothing.
     """
 
     rig: str
@@ -129,3 +131,4 @@ class ViewState:
     loops: tuple[LoopView, ...] = ()
     events: tuple[EventLine, ...] = ()
     events_before: int = 0
+    prompt: str = ""

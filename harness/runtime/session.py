@@ -7,6 +7,7 @@ and takes the row.
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any, Protocol
 
@@ -124,6 +125,7 @@ class Session:
         self.last_reader: dict[str, Contact] = {}
         self.read_backs: dict[str, ReadBack] = {}
         self.losses: dict[str, str] = {}
+        self.prompt = ""  # what somebody is asked to do now
         self._recorder = recorder
         self._pacing = pacing
         self._on_event = on_event
@@ -169,6 +171,7 @@ class Session:
         mode: int | None = None,
         manual_output: float | None = None,
         settings: ControllerSettings | None = None,
+        how: Mapping[str, object] | None = None,
     ) -> int:
         """Give orders to a loop's controller, from the present tick on.
 
@@ -184,6 +187,8 @@ class Session:
             Output in manual [-].
         settings : ControllerSettings or None
             Settings.
+        how : mapping or None
+            How the controller came to have them, where it was not over the link.
 
         Returns
         -------
@@ -205,7 +210,7 @@ class Session:
             orders["mode"] = mode
         unit = shown_range(self.rig.transmitter(loop.process_variable)).unit
         text = ", ".join(_order_words(name, value, unit) for name, value in orders.items())
-        self.event(EventKind.ORDER, loop.tag, text, orders)
+        self.event(EventKind.ORDER, loop.tag, text, orders | dict(how or {}))
         return self.tick
 
     def set_load(self, valve: str, output: float) -> int:
@@ -448,7 +453,8 @@ class Session:
         point = self._by_name.get(exchange.point)
         if point is not None and point.kind is PointKind.READ_BACK:
             self.read_backs[exchange.point] = read_back_of(exchange, self.tick)
-            self._image.read_backs[exchange.point] = exchange.value
+            if math.isfinite(exchange.value):  # no number: the last one stays in the image
+                self._image.read_backs[exchange.point] = exchange.value
 
     def _link_event(self, event: LinkEvent) -> None:
         kinds = {

@@ -14,10 +14,19 @@ from harness.analysis.steady import SteadyDetector
 from harness.analysis.step_record import LEAD_IN, StepRecord
 from harness.controllers.block import AUTOMATIC, MANUAL
 from harness.domain.models import FittedModel, LoopModels
-from harness.domain.points import shown_range
+from harness.domain.orders import OrderBy
+from harness.domain.points import (
+    acknowledge_point,
+    manual_output_point,
+    setpoint_point,
+    shown_range,
+)
 from harness.domain.run import EventKind
 from harness.domain.trial import Mode, ModelSource, PhaseKind, SettingsSource
 from harness.errors import InvalidRunError
+from harness.runtime.answers import AnyAnswers, PointAnswers
+from harness.runtime.order_words import Order
+from harness.runtime.orders import OrderDesk, Taken
 from harness.runtime.requests import Advance, Compute
 from harness.runtime.session import require_controllers
 from harness.runtime.trial_words import (
@@ -39,6 +48,7 @@ if TYPE_CHECKING:
     from harness.domain.models import ControllerSettings
     from harness.domain.rig import Loop
     from harness.domain.trial import Phase, Trial
+    from harness.runtime.answers import Answers
     from harness.runtime.requests import Request, Script
     from harness.runtime.session import Session
 
@@ -57,13 +67,19 @@ class _LoopWork:
     models: LoopModels
     settings: ControllerSettings | None = None
     automatic: bool = False
+    begun: bool = False
     identified: bool = False
     recent: list[Floats] = field(default_factory=list)
     output_record: StepRecord = field(default_factory=StepRecord)
     load_record: StepRecord = field(default_factory=StepRecord)
 
 
-def trial_script(session: Session, trial: Trial, wait: float = WAIT_FOR_CONTROLLER) -> Script:
+def trial_script(
+    session: Session,
+    trial: Trial,
+    wait: float = WAIT_FOR_CONTROLLER,
+    answers: Answers | None = None,
+) -> Script:
     """Return the script of a trial.
 
     Parameters
@@ -74,21 +90,29 @@ def trial_script(session: Session, trial: Trial, wait: float = WAIT_FOR_CONTROLL
         The trial.
     wait : float
         Longest wait for an external controller to be there, and to take an order [wall s].
+    answers : Answers or None
+        Where the answers to prompts come from; None for none but the data.
 
     Yields
     ------
     Request
         Time to pass, and computations.
     """
-    runner = _TrialRunner(session, trial, wait)
+    runner = _TrialRunner(session, trial, wait, answers or AnyAnswers(()))
     yield from runner.run()
 
 
 class _TrialRunner:
-    def __init__(self, session: Session, trial: Trial, wait: float) -> None:
+    def __init__(self, session: Session, trial: Trial, wait: float, answers: Answers) -> None:
         self._session = session
         self._trial = trial
         self._wait = wait
+        points = [
+            PointAnswers(session, acknowledge_point(loop.tag)) for loop in session.rig.loops
+        ]
+        self._desk = OrderDesk(
+            session, AnyAnswers((answers, *points)), wait, trial.order_timeout
+        )
         self._columns = [column.name for column in session.engine.columns]
         self._works: dict[str, _LoopWork] = {}
 
@@ -98,8 +122,9 @@ class _TrialRunner:
             work = self._work(phase.loop)
             if phase.mode is Mode.AUTOMATIC and not work.automatic:
                 yield from self._go_automatic(work)
-            elif phase.mode is Mode.MANUAL and work.automatic:
-                self._go_manual(work)
+            elif phase.mode is Mode.MANUAL and (work.automatic or not work.begun):
+                yield from self._go_manual(work)
+            work.begun = True
             yield from self._phase(index, phase, work)
         for work in self._works.values():
             if self._trial.models is ModelSource.IDENTIFIED and not work.identified:
@@ -148,43 +173,32 @@ class _TrialRunner:
             "give it longer with --wait"
         )
 
-    def _known(self, loop: Loop, order: int) -> Generator[Request, Any, list[Floats]]:
-        """Wait until the controller is known to have an order; return the rows until then."""
-        session = self._session
-        rows: list[Floats] = []
-        while not session.knows(loop, order):
-            if len(rows) * session.rig.tick / max(session.pace, 1e-9) > self._wait:
-                raise InvalidRunError(
-                    f"loop {loop.tag}: the controller wrote {loop.output} without having read the "
-                    f"rig since the order of tick {order}, for {self._wait:g} s; have it read "
-                    "setpoint, mode, manual output and settings in every scan, on the connection "
-                    "that it writes on"
-                )
-            rows.append((yield Advance(ticks=1)))
-            require_controllers(session)
-        return rows
-
     # Modes.
 
-    def _go_manual(self, work: _LoopWork) -> None:
-        output = self._session.engine.output(work.loop.output)
-        self._session.order(work.loop, mode=MANUAL, manual_output=output)
+    def _go_manual(self, work: _LoopWork) -> Generator[Request, Any, None]:
+        """Order manual at the output that stands now; at the start only to who is not shown it."""
+        orders = work.loop.orders
+        shown = orders.mode is OrderBy.LINK and orders.manual_output is OrderBy.LINK
+        if work.begun or (self._session.external and not shown):
+            output = self._session.engine.output(work.loop.output)
+            order = Order(loop=work.loop.tag, mode=MANUAL, manual_output=output)
+            yield from self._desk.give(order)
         work.automatic = False
 
     def _go_automatic(self, work: _LoopWork) -> Generator[Request, Any, None]:
         """Find settings, give them in manual, then transfer at the present process variable."""
         trial = self._trial
+        if not work.begun:
+            yield from self._go_manual(work)
         if trial.models is ModelSource.IDENTIFIED and not work.identified:
             yield from self._identify(work)
         elif not work.identified:
             self._tell_models(work, {}, trial.models.value)
             work.identified = True
-        self._settle_settings(work)
-        order = self._session.tick
-        yield from self._known(work.loop, order)
+        yield from self._settle_settings(work)
         setpoint = self._process_variable_now(work)
-        order = self._session.order(work.loop, setpoint=setpoint, mode=AUTOMATIC)
-        yield from self._known(work.loop, order)
+        order = Order(loop=work.loop.tag, setpoint=setpoint, mode=AUTOMATIC)
+        yield from self._desk.give(order)
         work.automatic = True
         # A moment in automatic, so that a transfer that bumps shows before the first step.
         yield Advance(ticks=max(10, round(trial.closed_loop_time / self._session.rig.tick)))
@@ -197,7 +211,8 @@ class _TrialRunner:
             return float(np.mean(np.concatenate(work.recent)[-LEAD_IN:, column]))
         return self._session.engine.measured(work.loop.process_variable)
 
-    def _settle_settings(self, work: _LoopWork) -> None:
+    def _settle_settings(self, work: _LoopWork) -> Generator[Request, Any, None]:
+        """Give the settings; the block may round them, and what it has then is what counts."""
         trial = self._trial
         data: dict[str, object] = {}
         if trial.settings is SettingsSource.AS_FOUND and trial.as_found is not None:
@@ -211,15 +226,21 @@ class _TrialRunner:
                 "closed_loop_time": synthesis.closed_loop_time,
                 "reduced": model_document(synthesis.reduced),
             }
-        work.settings = settings
+        taken = yield from self._desk.give(Order(loop=work.loop.tag, settings=settings))
+        work.recent += taken.rows
+        work.settings = settings = taken.order.settings or settings
         data |= {
             "gain": settings.gain,
             "integral_time": settings.integral_time,
             "action": settings.action.value,
+            "by": taken.by.value,
         }
         ti = settings.integral_time
         text = f"gain {settings.gain:.4g} %/%, " + (f"Ti {ti:.4g} s" if ti else "no integral")
-        self._session.order(work.loop, settings=settings)
+        typed = taken.order.typed
+        if typed is not None:
+            data["typed"] = typed.words
+            text += f"; typed in: {typed.words} ({work.loop.block.form.value} form)"
         self._session.event(EventKind.SETTINGS, work.loop.tag, text, data)
 
     # Models.
@@ -275,14 +296,15 @@ class _TrialRunner:
             },
         )
         lead_in = work.recent[-1][-LEAD_IN:] if work.recent else None
-        order = self._order(phase, work)
-        rows = yield from self._known(work.loop, order)
+        asked = session.tick
+        taken = yield from self._carry_out(phase, work)
         session.event(
             EventKind.ORDER_KNOWN,
             phase.name,
-            known_words(phase, (session.tick - order) * session.rig.tick),
-            {"order": order},
+            known_words(phase, (session.tick - asked) * session.rig.tick),
+            taken.facts,
         )
+        rows = taken.rows
         rows += yield from self._until_steady(phase, work, plan)
         self._keep(phase, work, lead_in, rows)
 
@@ -303,23 +325,27 @@ class _TrialRunner:
             (output - loop.output_low, loop.output_high - output),
         )
 
-    def _order(self, phase: Phase, work: _LoopWork) -> int:
+    def _carry_out(self, phase: Phase, work: _LoopWork) -> Generator[Request, Any, Taken]:
+        """Do what a phase does to the rig, and return once it acts."""
         session, loop = self._session, work.loop
+        order = Order(loop=loop.tag)
         match phase.kind:
             case PhaseKind.SETPOINT_STEP:
                 shown = shown_range(session.rig.transmitter(loop.process_variable))
-                setpoint = session.image()[f"{loop.tag}.SP"][1] + phase.change * shown.span
-                return session.order(loop, setpoint=setpoint)
+                setpoint = session.image()[setpoint_point(loop.tag)][1]
+                order = Order(loop=loop.tag, setpoint=setpoint + phase.change * shown.span)
             case PhaseKind.OUTPUT_STEP:
-                present = session.image()[f"{loop.tag}.MO"][1] / 100.0
-                return session.order(loop, manual_output=present + phase.change)
+                present = session.image()[manual_output_point(loop.tag)][1] / 100.0
+                order = Order(loop=loop.tag, manual_output=present + phase.change)
             case PhaseKind.LOAD_STEP:
                 present = session.engine.output(loop.load)
-                session.set_load(loop.load, present + phase.change)
                 # The load is no order to the controller: it acts at once.
-                return -1
+                session.set_load(loop.load, present + phase.change)
             case PhaseKind.SETTLE:
-                return -1
+                pass
+        if not order.kinds:
+            return Taken(order=order, asked=-1)
+        return (yield from self._desk.give(order))
 
     def _until_steady(
         self, phase: Phase, work: _LoopWork, plan: PhasePlan

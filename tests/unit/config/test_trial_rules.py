@@ -293,7 +293,7 @@ CASES = (
             "2: trial.settings: is missing",
             "8: given.output: 1 must be a table",
             "9: given.load: 2 must be a table",
-            "10: trial.x: is not a key here; keys are name, description, law, closed_loop_time, models, settings",
+            "10: trial.x: is not a key here; keys are name, description, law, closed_loop_time, models, settings, order_timeout",
         ),
     ),
     Case(

@@ -36,13 +36,14 @@ def test_names_and_order():
         "FT-101.RB",
         "LIC-102.SP.RB",
         "LIC-102.MODE.RB",
+        "LIC-102.ACK",
     ]
     assert [point.name for point in points_of(RIG, external=False)] == list(POINTS)
 
 
 def test_an_external_controller_writes_its_output_its_heartbeat_and_what_it_has():
     writable = [point.name for point in POINTS.values() if point.writable]
-    backs = [name for name in POINTS if name.endswith(".RB")]
+    backs = [name for name in POINTS if name.endswith((".RB", ".ACK"))]
     assert writable == ["FV-101", "LIC-102.HB", *backs]
 
 
