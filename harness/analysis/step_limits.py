@@ -15,6 +15,7 @@ if TYPE_CHECKING:
 
     Array = NDArray[np.float64]
 
+_TOUCH = 1e-3  # of output; to reach a limit by so little is to stand at it, not beyond
 _NOTICED = 0.005  # of output; below it nobody sees a valve lag behind
 
 
@@ -92,13 +93,14 @@ def _limit_words(curve: ContinuousResponse, size: float, test: StepTest) -> str:
         return ""
     wanted = test.output + size * curve.output
     final = float(wanted[-1])
+    high, low = test.output_high + _TOUCH, test.output_low - _TOUCH
     for limit, beyond, worst in (
-        (test.output_high, wanted > test.output_high, float(wanted.max())),
-        (test.output_low, wanted < test.output_low, float(wanted.min())),
+        (test.output_high, wanted > high, float(wanted.max())),
+        (test.output_low, wanted < low, float(wanted.min())),
     ):
         if not beyond.any():
             continue
-        if not test.output_low <= final <= test.output_high:
+        if not low <= final <= high:
             return (
                 f"in the end it needs an output of {100.0 * final:.4g} %, beyond the limit of "
                 f"{100.0 * limit:g} %; it cannot be held there: make the step smaller, or start "

@@ -244,7 +244,7 @@ def _source(options: argparse.Namespace) -> TuningSource:
             f"tune: a process typed in and {options.source} as well; give the one or the other"
         )
     if options.source.suffix.lower() == ".toml":
-        return rig_source(options.source, options.loop)
+        return rig_source(options.source, options.loop, spans)
     return fit_source(options.source, options.model, spans)
 
 

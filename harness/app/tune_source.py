@@ -182,7 +182,7 @@ def fit_source(path: Path, kind: str | None, spans: Spans) -> TuningSource:
     )
 
 
-def rig_source(path: Path, loop_tag: str | None) -> TuningSource:
+def rig_source(path: Path, loop_tag: str | None, spans: Spans) -> TuningSource:
     """Return the source made of a rig: the linearised output path of one of its loops.
 
     Parameters
@@ -191,6 +191,8 @@ def rig_source(path: Path, loop_tag: str | None) -> TuningSource:
         Rig file.
     loop_tag : str or None
         Tag of the loop; None takes the first.
+    spans : Spans
+        Of the command line: the counts over the ranges; the ranges are the rig's own.
 
     Raises
     ------
@@ -219,11 +221,13 @@ def rig_source(path: Path, loop_tag: str | None) -> TuningSource:
     models = linearised_models(Engine(rig), loop)
     valve = rig.valve(loop.output)
     return TuningSource(
-        name=f"rig {rig.name}, loop {loop.tag}, linearised at {100 * valve.initial_output:g} %",
+        name=f"rig {rig.name}, loop {loop.tag}",
         process=process_of(models.output),
         spans=Spans(
             pv=shown_range(rig.transmitter(loop.process_variable)),
             output=Range(lower=0.0, upper=100.0, unit="%"),
+            pv_counts=spans.pv_counts,
+            output_counts=spans.output_counts,
         ),
         scan=loop.scan,
         output_delay=loop.output_delay * rig.tick,
@@ -232,8 +236,8 @@ def rig_source(path: Path, loop_tag: str | None) -> TuningSource:
         output_high=loop.output_high,
         stroke_time=valve.stroke_time,
         notes=(
-            "Lags of valve and transmitter are counted as dead time; the linearised plant holds "
-            "near its operating point only.",
+            f"The plant is linearised with {loop.output} at {100 * valve.initial_output:g} %, and holds "
+            "near that operating point only; lags of valve and transmitter are counted as dead time.",
         ),
     )
 

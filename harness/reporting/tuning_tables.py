@@ -127,7 +127,7 @@ def tuning_view(document: Mapping[str, object]) -> RenderableType:
         From ``harness.app.tune.tune``.
     """
     pieces: list[RenderableType] = [
-        Text(process_words(document)),
+        Text(f"{text(document, 'source')}: {process_words(document)}"),
         Text(text(document, "action_reason")),
         _comparison(document),
     ]
@@ -205,7 +205,7 @@ def process_words(document: Mapping[str, object]) -> str:
     lags = " and ".join(figure(value) for value in numbers(process, "time_constants"))
     inverse = -sum(value for value in numbers(process, "numerator_times") if value < 0.0)
     words = [
-        f"{text(document, 'source')}: {humanised(text(process, 'kind')).lower()}",
+        humanised(text(process, "kind")),
         f"gain {figure(number(process, 'gain'))}{' per s' if process.get('integrating') else ''}"
         f" [{text(document, 'gain_unit')}]",
         f"time constants {lags} s" if lags else "",

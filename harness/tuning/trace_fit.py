@@ -32,6 +32,8 @@ if TYPE_CHECKING:
 _FEWEST_ROWS = 20
 _FINISHED = 3.0  # total lags after the first step; two equal lags are then at 98 %
 _DISTINCT = 25.0  # gain in fit over noise, in variances: five standard deviations
+_LONGEST_DEAD = 0.2  # of the record, of an integrator: beyond it a fit follows something else
+_REMEMBERED = 3.0  # standard deviations above white before a row counts as remembering the last
 _SMALL_ZERO = 0.02  # of the lags: an inverse response below it is no other model than two lags
 CRITERION = (
     "Schwarz's criterion (BIC) with the effective number of samples of the best fit's residuals"
@@ -184,7 +186,12 @@ def _family(kind: Kind, trace: Trace) -> Family:
 
 
 def _worth(problem: TraceProblem, family: Family, solution: Solution) -> float:
-    """Return the effective number of samples of a fit."""
+    """Return the effective number of samples of a fit, by the stricter of two counts."""
+    return min(_by_means(problem, family, solution), _independent_rows(solution.residuals))
+
+
+def _by_means(problem: TraceProblem, family: Family, solution: Solution) -> float:
+    """Return the effective number of samples by the means of blocks up to the total lag."""
     trace = problem.trace
     slow = family.scale(solution)
     if problem.kind is Kind.INTEGRATING:
@@ -193,12 +200,25 @@ def _worth(problem: TraceProblem, family: Family, solution: Solution) -> float:
     return effective_samples(solution.residuals, rows, family.count(problem))
 
 
+def _independent_rows(residuals: Array) -> float:
+    """Return what n rows are worth if each remembers the one before: n (1 - r)/(1 + r).
+
+    G. V. Bayley and J. M. Hammersley, J. R. Stat. Soc. Suppl. 8:184, 1946 (value from memory).
+    Means over blocks no longer than the lag see only part of a memory that is nearly as long.
+    """
+    n, energy = residuals.size, float(residuals @ residuals)
+    memory = float(residuals[1:] @ residuals[:-1]) / energy if energy > 0.0 else 0.0
+    if memory <= _REMEMBERED / math.sqrt(n):
+        return float(n)
+    return n * (1.0 - memory) / (1.0 + memory)
+
+
 def _check(
     problem: TraceProblem, family: Family, solution: Solution, *, unfinished: bool
 ) -> None:
     """Refuse a fit that says nothing, or that reaches beyond its record."""
     trace = problem.trace
-    variance = solution.cost / _worth(problem, family, solution)
+    variance = solution.cost / _by_means(problem, family, solution)
     won = float(problem.output @ problem.output) - solution.cost
     if won <= _DISTINCT * variance:
         noise = math.sqrt(solution.cost / solution.residuals.size)
@@ -208,6 +228,11 @@ def _check(
             f"{noise:.2g} (root mean square); make larger steps, and move one path at a time"
         )
     if problem.kind is Kind.INTEGRATING:
+        if solution.shape[2] > _LONGEST_DEAD * trace.duration:
+            raise DataError(
+                f"the process does not integrate: the dead time comes out as {solution.shape[2]:.4g} s "
+                f"of a record of {trace.duration:.4g} s"
+            )
         return
     total = family.scale(solution)
     after = trace.duration - float(trace.event_time[0])
