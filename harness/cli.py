@@ -160,6 +160,18 @@ def _add_control(commands: argparse._SubParsersAction[argparse.ArgumentParser]) 
     parser.add_argument(
         "--scan", type=_above_zero, metavar="SECONDS", help="scan period in plant time"
     )
+    parser.add_argument(
+        "--orders",
+        choices=("link", "none"),
+        default="link",
+        help="none: setpoint, mode and settings are typed in here, nothing is taken over the link",
+    )
+    parser.add_argument(
+        "--panel",
+        type=Path,
+        metavar="FILE",
+        help="with --orders none: take what is typed from lines appended to this file",
+    )
     _add_faults(parser)
     _add_pace(parser, 1.0)
     parser.set_defaults(run=_control)

@@ -7,11 +7,14 @@ from typing import TYPE_CHECKING
 from harness.app.loading import read_rig
 from harness.app.output import is_reader_gone, leave_output
 from harness.errors import UsageError
+from harness.runtime.lines import AppendedLines, TypedLines
 from harness.runtime.plc_block import SoftPlcFaults
 from harness.runtime.soft_plc_process import run_soft_plc_blocking
 
 if TYPE_CHECKING:
     import argparse
+
+    from harness.runtime.lines import Lines
 
 
 def control(options: argparse.Namespace) -> None:
@@ -42,6 +45,7 @@ def control(options: argparse.Namespace) -> None:
         port=options.port,
         scan=options.scan,
         mistake=options.mistake,
+        panel=_panel(options),
         faults=SoftPlcFaults(
             gain_factor=options.fault_gain,
             integral_time_factor=options.fault_integral_time,
@@ -50,6 +54,18 @@ def control(options: argparse.Namespace) -> None:
             silent_after=options.fault_silent_after,
         ),
     )
+
+
+def _panel(options: argparse.Namespace) -> Lines | None:
+    """Return where a controller that takes nothing over the link has its orders from."""
+    if options.orders != "none":
+        if options.panel is not None:
+            raise UsageError(
+                f"control: --panel {options.panel} with --orders link: nothing is typed in there; "
+                "take --orders none, or leave --panel out"
+            )
+        return None
+    return TypedLines() if options.panel is None else AppendedLines(options.panel)
 
 
 def _say(text: str) -> None:

@@ -5,21 +5,16 @@ from __future__ import annotations
 import contextlib
 import getpass
 import json
-import os
-import queue
-import threading
 from dataclasses import dataclass
-from pathlib import Path
 from typing import TYPE_CHECKING, Protocol
 
-from harness.errors import UsageError
+from harness.runtime.lines import AppendedLines, TypedLines
 
 if TYPE_CHECKING:
     from collections.abc import Sequence
+    from pathlib import Path
 
     from harness.runtime.session import Session
-
-_CHUNK = 4096  # of a terminal's line [bytes]
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -90,7 +85,7 @@ def user_name() -> str:
 
 
 class TerminalAnswers:
-    """Lines typed into a terminal, read by a thread so that no tick waits for them.
+    """Lines typed into a terminal; the view shows the prompt.
 
     Parameters
     ----------
@@ -101,48 +96,19 @@ class TerminalAnswers:
     how = "press Enter here when it is done"
 
     def __init__(self, descriptor: int = 0) -> None:
-        self._descriptor = descriptor
-        self._lines: queue.SimpleQueue[str] = queue.SimpleQueue()
-        self._thread: threading.Thread | None = None
+        self._lines = TypedLines(descriptor)
 
     def ask(self, ask: Ask) -> None:
-        """Forget what was typed before; the view shows the prompt."""
-        if self._thread is None:
-            self._thread = threading.Thread(target=self._read, name="answers", daemon=True)
-            self._thread.start()
-        while self._next() is not None:
-            pass
+        """Forget what was typed before."""
+        self._lines.skip()
 
     def poll(self) -> Answer | None:
         """Return the next line, or None."""
-        line = self._next()
+        line = self._lines.next()
         return None if line is None else Answer(text=line, who=user_name())
 
     def done(self) -> None:
         """Do nothing: the view takes the prompt away."""
-
-    def _next(self) -> str | None:
-        with contextlib.suppress(queue.Empty):
-            return self._lines.get_nowait()
-        return None
-
-    def _read(self) -> None:
-        """Read lines until the end; the body of the thread.
-
-        The descriptor and no file object: the lock of one held by a daemon thread would stop the
-        interpreter from ending.
-        """
-        kept = b""
-        while True:
-            try:
-                chunk = os.read(self._descriptor, _CHUNK)
-            except OSError:
-                return
-            if not chunk:
-                return
-            *lines, kept = (kept + chunk).split(b"\n")
-            for line in lines:
-                self._lines.put(line.decode("utf-8", "replace").strip())
 
 
 class FileAnswers:
@@ -163,24 +129,15 @@ class FileAnswers:
     """
 
     def __init__(self, path: Path) -> None:
-        self._path = path
+        self._lines = AppendedLines(path)
+        self._name = path.name
         self._prompt = path.with_name(path.name + ".prompt.json")
-        self._offset = 0
-        self._lines: list[str] = []
         self.how = f'append a line "done" to {path} when it is done'
-        try:
-            self._prompt.unlink(missing_ok=True)
-            path.touch()
-        except OSError as error:
-            raise UsageError(
-                f"answers: {path} cannot be written: {error.strerror or error}; name a file in a "
-                "folder that is there"
-            ) from error
+        self.done()
 
     def ask(self, ask: Ask) -> None:
         """Write the prompt, and skip what stands in the file."""
-        self._offset = self._size()
-        self._lines.clear()
+        self._lines.skip()
         document = {
             "number": ask.number,
             "loop": ask.loop,
@@ -196,33 +153,15 @@ class FileAnswers:
 
     def poll(self) -> Answer | None:
         """Return the next whole line, or None."""
-        if not self._lines and self._size() != self._offset:
-            self._read()
-        if not self._lines:
-            return None
-        return Answer(text=self._lines.pop(0), who=f"{user_name()}, in {self._path.name}")
+        line = self._lines.next()
+        return (
+            None if line is None else Answer(text=line, who=f"{user_name()}, in {self._name}")
+        )
 
     def done(self) -> None:
         """Remove the prompt."""
         with contextlib.suppress(OSError):
             self._prompt.unlink(missing_ok=True)
-
-    def _size(self) -> int:
-        try:
-            return self._path.stat().st_size
-        except OSError:
-            return 0
-
-    def _read(self) -> None:
-        with contextlib.suppress(OSError), self._path.open("rb") as file:
-            if self._size() < self._offset:
-                self._offset = 0  # somebody wrote the file anew
-            file.seek(self._offset)
-            whole, newline, _ = file.read().rpartition(b"\n")
-            self._offset += len(whole) + len(newline)
-            if newline:
-                text = whole.decode("utf-8-sig", "replace")
-                self._lines += [line.strip() for line in text.split("\n")]
 
 
 class PointAnswers:

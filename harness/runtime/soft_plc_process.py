@@ -14,6 +14,7 @@ from harness.errors import UsageError
 from harness.runtime.clock import PacedClock
 from harness.runtime.plc_block import NO_FAULTS, SoftPlcFaults, program_of, warm_up
 from harness.runtime.plc_mistakes import MistakenClient, Setup, mistake_of
+from harness.runtime.plc_panel import Panel, PanelClient
 from harness.runtime.soft_plc import run_soft_plc
 from harness.runtime.steadiness import set_memory_aside, steady_threads
 
@@ -23,6 +24,7 @@ if TYPE_CHECKING:
     from harness.domain.rig import Loop, Rig
     from harness.domain.signals import Point
     from harness.links.client import FieldClient
+    from harness.runtime.lines import Lines
     from harness.runtime.plc_block import PlcProgram
 
 
@@ -38,6 +40,7 @@ def run_soft_plc_blocking(
     scan: float | None = None,
     faults: SoftPlcFaults = NO_FAULTS,
     mistake: str | None = None,
+    panel: Lines | None = None,
 ) -> None:
     """Run the soft PLC until Ctrl-C or a request of the system to end; the body of a process.
 
@@ -63,6 +66,8 @@ def run_soft_plc_blocking(
         Faults of the block made on purpose.
     mistake : str or None
         Name of a mistake of ``plc_mistakes.MISTAKES`` made on purpose.
+    panel : Lines or None
+        What is typed at its panel, where it takes nothing over the link; None takes orders there.
 
     Raises
     ------
@@ -72,6 +77,9 @@ def run_soft_plc_blocking(
     client, program = soft_plc_parts(
         rig, link, loop_tag, host=host, port=port, scan=scan, faults=faults, mistake=mistake
     )
+    if panel is not None:
+        face = Panel(loop=program.loop, measured=program.measured)
+        client = PanelClient(client, face, panel, on_event)
     warm_up(program)
     set_memory_aside()
     with steady_threads():

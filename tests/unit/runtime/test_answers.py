@@ -41,7 +41,7 @@ def test_lines_appended_to_a_file_answer(file):
     assert texts(answers) == []  # half a line is none
     say(file, "cked\r\n")
     assert texts(answers) == ["no, locked"]
-    assert user_name() in answers.how or "answers.txt" in answers.how
+    assert str(file) in answers.how
 
 
 def test_what_stood_in_the_file_before_the_prompt_does_not_count(file):
@@ -77,7 +77,7 @@ def test_the_open_prompt_stands_beside_the_file(file):
 
 
 def test_a_file_that_cannot_be_is_told_of(tmp_path):
-    with pytest.raises(UsageError, match=r"answers: .*cannot be written"):
+    with pytest.raises(UsageError, match="cannot be written"):
         FileAnswers(tmp_path / "no" / "such" / "folder")
 
 
