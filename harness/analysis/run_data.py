@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import dataclasses
 from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
@@ -149,6 +150,43 @@ class RunData:
             The kind.
         """
         return tuple(event for event in self.events if event.kind is kind)
+
+
+def with_orders_as_taken(data: RunData) -> RunData:
+    """Return a run with orders that did not go over the link from when the controller had them.
+
+    Such an order is known one scan after the controller has taken it: when that scan has been
+    seen. The record holds it from then on. The scan itself worked on it, which its own entry in
+    the exchange log tells: the tick of the image that it had read.
+
+    Parameters
+    ----------
+    data : RunData
+        The run as recorded.
+
+    Returns
+    -------
+    RunData
+        The run with the columns of setpoint, mode and manual output moved forward by that scan.
+    """
+    trace = dict(data.trace)
+    for event in data.events_of(EventKind.ORDER):
+        if not str(event.data.get("evidence", "")).startswith("seen"):
+            continue
+        loop = data.rig.loop(event.subject)
+        reads = [
+            exchange.image_tick
+            for tick, exchange in data.exchanges
+            if tick == event.tick - 1 and exchange.point == loop.output
+        ]
+        if not reads or reads[-1] < 0 or event.tick >= data.rows:
+            continue
+        for kind in ("setpoint", "mode", "manual_output"):
+            if event.data.get(kind) is not None:
+                column = trace[f"{loop.tag}.{kind}"].copy()
+                column[reads[-1] : event.tick] = column[event.tick]
+                trace[f"{loop.tag}.{kind}"] = column
+    return dataclasses.replace(data, trace=trace)
 
 
 def phases_of(data: RunData) -> tuple[PhaseSpan, ...]:

@@ -7,7 +7,7 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import TYPE_CHECKING
 
-from harness.analysis.run_data import RunData
+from harness.analysis.run_data import RunData, with_orders_as_taken
 from harness.analysis.score import score_run
 from harness.app.loading import only_phases
 from harness.config.load import rig_from_text, trial_from_text
@@ -133,7 +133,7 @@ def read_run(folder: Path) -> RunData:
     rig = rig_from_text(header.rig_text, "rig.toml")
     trial = trial_from_text(header.trial_text, "trial.toml", rig)
     cut = header.extra.get(PHASES, "")
-    return RunData(
+    data = RunData(
         rig=rig,
         trial=only_phases(trial, tuple(cut.split(_SEPARATOR)) if cut else ()),
         header=header,
@@ -142,6 +142,7 @@ def read_run(folder: Path) -> RunData:
         exchanges=run.exchanges(),
         closing=run.closing,
     )
+    return with_orders_as_taken(data)
 
 
 def score_folder(folder: Path) -> RunResult:

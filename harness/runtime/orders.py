@@ -12,12 +12,12 @@ import threading
 from dataclasses import dataclass, field
 from typing import TYPE_CHECKING, Any, Protocol
 
-from harness.controllers.block import AUTOMATIC
 from harness.domain.orders import OrderBy, OrderKind
-from harness.domain.points import mode_point, read_back_point, setpoint_point, shown_range
+from harness.domain.points import shown_range
 from harness.domain.run import EventKind
 from harness.errors import InvalidRunError, ModelError, UsageError
 from harness.runtime.answers import Ask, user_name
+from harness.runtime.order_evidence import Evidence
 from harness.runtime.order_words import Order, as_typed, instruction, parts_by_way
 from harness.runtime.requests import Advance
 from harness.runtime.session import require_controllers
@@ -29,7 +29,6 @@ if TYPE_CHECKING:
     from numpy.typing import NDArray
 
     from harness.domain.rig import Loop
-    from harness.domain.signals import Range
     from harness.runtime.answers import Answers
     from harness.runtime.requests import Request
     from harness.runtime.session import Session
@@ -39,8 +38,6 @@ if TYPE_CHECKING:
 ORDER_TIMEOUT = 300.0  # for somebody to walk to the controller and type [wall s]
 _YES = ("", "done", "ok", "y", "yes")
 _NO = ("no", "cannot", "stop")
-_SEEN_SHARE = 1e-4  # of span: a read-back nearer than this is the order [-]
-_HALF = 0.5  # of a step; and between the two ends of a switch [-]
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -180,7 +177,7 @@ class PromptTaker:
         self._number = 0
         self._text = ""
         self._said: str | None = None
-        self._evidence: _Evidence | None = None
+        self._evidence: Evidence | None = None
         self._doubted = False
 
     def begin(self, order: Order, loop: Loop) -> Order:
@@ -188,26 +185,24 @@ class PromptTaker:
         session = self._session
         measured = shown_range(session.rig.transmitter(loop.process_variable))
         typed = as_typed(order, loop, measured)
-        self._evidence = _Evidence(
-            session=session,
-            order=typed,
-            loop=loop,
-            measured=measured,
-            start=session.engine.output(loop.output),
-        )
+        self._evidence = evidence = Evidence(session, typed, loop)
         self._said, self._doubted = None, False
+        if all(evidence.look().values()):
+            return typed  # the data show it before anybody has to be asked
         self._number += 1
         self._text = instruction(typed, loop, measured)
         how = self._answers.how
-        if not self._evidence.complete() and not how:
+        if not evidence.complete() and not how:
             raise InvalidRunError(
                 f"{self._text}: nobody can say here that it is done, and the controller writes no "
                 "read-back that shows it; run in a terminal, give --answers FILE, or have the "
-                f"controller write {' and '.join(self._evidence.places())}"
+                f"controller write {' and '.join(evidence.places())}"
             )
-        hint = f"; {how}" if how else ""
-        if self._evidence.complete():
+        hint = f"; {how}"
+        if evidence.complete():
             hint = "; it is seen in the data, nothing to confirm"
+        elif evidence.shows_a_jump:
+            hint += ", unless the output has shown it by then"
         session.prompt = f"{self._text}{hint}"
         facts = _facts(typed)
         session.event(EventKind.PROMPT, loop.tag, session.prompt, facts)
@@ -221,7 +216,7 @@ class PromptTaker:
         self._take_answer()
         seen = self._evidence.look()
         if all(seen.values()):
-            return self._take(Known(who=user_name(), evidence="seen in the data"))
+            return self._take(Known(who=user_name(), evidence=self._evidence.words))
         if self._said is None:
             return None
         belied = [kind for kind, sight in seen.items() if sight is False]
@@ -505,79 +500,6 @@ def load_function(name: str) -> Callable[[Order], object]:
         raise UsageError(f'orders: "{name}" is no function but {function!r}')
     found: Callable[[Order], object] = function
     return found
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class _Evidence:
-    """What the data show of an order: yes, no, or nothing."""
-
-    session: Session
-    order: Order
-    loop: Loop
-    measured: Range
-    start: float  # the output when it was asked for [-]
-
-    def complete(self) -> bool:
-        """Return whether the data can show all of it."""
-        return all(sight is not None for sight in self.look().values())
-
-    def places(self) -> list[str]:
-        """Return the read-backs that would show it."""
-        tag = self.loop.tag
-        names = {
-            OrderKind.SETPOINT: setpoint_point(tag),
-            OrderKind.MODE: mode_point(tag),
-        }
-        found = [read_back_point(names[kind]) for kind in self.order.kinds if kind in names]
-        return found or ["what it has"]
-
-    def look(self) -> dict[OrderKind, bool | None]:
-        """Return for each kind whether it is seen; None where the data cannot tell."""
-        return {kind: self._sees(kind) for kind in self.order.kinds}
-
-    def found(self, kinds: list[OrderKind]) -> str:
-        """Return what the data show in place of the order."""
-        return ", ".join(self._found(kind) for kind in kinds)
-
-    def _sees(self, kind: OrderKind) -> bool | None:
-        order, block = self.order, self.loop.block
-        match kind:
-            case OrderKind.SETTINGS:
-                return None
-            case OrderKind.MANUAL_OUTPUT:
-                wanted = order.manual_output or 0.0
-                there = abs(self._output() - wanted) <= block.output_resolution
-                if there and abs(wanted - self.start) <= block.output_resolution:
-                    # It stood there before: that shows something of a block in manual alone.
-                    mode = self._read_back(mode_point(self.loop.tag))
-                    return True if mode is not None and mode < _HALF else None
-                return there
-            case OrderKind.SETPOINT:
-                has = self._read_back(setpoint_point(self.loop.tag))
-                step = _HALF * (block.setpoint_resolution or 0.0)
-                near = max(step, _SEEN_SHARE * self.measured.span)
-                return None if has is None else abs(has - (order.setpoint or 0.0)) <= near
-            case OrderKind.MODE:
-                has = self._read_back(mode_point(self.loop.tag))
-                return None if has is None else (has > _HALF) == (order.mode == AUTOMATIC)
-
-    def _found(self, kind: OrderKind) -> str:
-        match kind:
-            case OrderKind.SETPOINT:
-                has = self._read_back(setpoint_point(self.loop.tag)) or 0.0
-                return f"a setpoint of {has:.5g} {self.measured.unit}"
-            case OrderKind.MODE:
-                manual = self.order.mode == AUTOMATIC
-                return f"the block in {'manual' if manual else 'automatic'}"
-            case _:
-                return f"{self.loop.output} at {100 * self._output():.4g} %"
-
-    def _output(self) -> float:
-        return self.session.engine.output(self.loop.output)
-
-    def _read_back(self, point: str) -> float | None:
-        written = self.session.read_backs.get(read_back_point(point))
-        return None if written is None else written.value
 
 
 def _orders(order: Order) -> dict[str, Any]:

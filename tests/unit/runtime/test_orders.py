@@ -230,6 +230,36 @@ def test_an_answer_that_the_data_belie_is_doubted_until_they_agree(bench):
     assert note.text.endswith("the data do not show it yet: a setpoint of 0.7 m")
 
 
+def in_automatic(rig):
+    """Have the rig know that the block is in automatic with its settings."""
+    rig.session.order(rig.session.rig.loops[0], settings=PI, mode=AUTOMATIC, setpoint=0.75)
+    return rig
+
+
+JUMP = 100 * PI.gain * 0.06 / 1.5  # of a step from 0.75 to 0.81 m of 1.5 m: Kc de [%]
+
+
+def test_a_setpoint_shows_in_the_output_of_a_block_in_automatic(bench):
+    rig = in_automatic(bench(ALL, Script({}), writes={4: {FV: 55.1}, 6: {FV: 55.1 + JUMP}}))
+    taken, tick = rig.give(setpoint=0.81)
+    assert (tick, taken.evidence) == (7, "seen in the output")
+    assert rig.prompts[0].endswith("unless the output has shown it by then")
+
+
+@pytest.mark.parametrize("jump", [-JUMP, 0.4 * JUMP], ids=["wrong way", "too small"])
+def test_another_move_of_the_output_does_not_count_as_the_setpoint(bench, jump):
+    rig = in_automatic(bench(ALL, Script({20: ""}), writes={6: {FV: 55.0 + jump}}))
+    taken, tick = rig.give(setpoint=0.81)
+    assert (tick, taken.evidence) == (20, "confirmed")
+
+
+def test_where_the_output_is_restless_a_jump_shows_nothing(bench):
+    writes = {4: {FV: 55.0 - 0.3 * JUMP}, 6: {FV: 55.0 + JUMP}}
+    rig = in_automatic(bench(ALL, Script({20: ""}), writes=writes))
+    taken, _ = rig.give(setpoint=0.81)
+    assert taken.evidence == "confirmed"
+
+
 def test_a_manual_block_at_its_output_counts_only_where_it_says_that_it_is_in_manual(bench):
     _, tick = bench(ALL, Script({}), writes={0: {MODE: 0.0}}).give(
         mode=MANUAL, manual_output=0.55
