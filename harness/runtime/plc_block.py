@@ -292,6 +292,8 @@ def scan_once(
     value = program.measured.to_fraction(measured.value)
     bad = measured.quality is Quality.BAD or math.isnan(value)
     tick = readings[TICK_POINT].value
+    if math.isnan(tick):  # a rig that has just opened its link shows nothing yet
+        tick = state.tick
     frozen = _after(program, state, program.faults.freeze_after)
     if orders is None or frozen:
         return replace(state, scans=state.scans + 1, tick=tick)

@@ -414,6 +414,9 @@ class Session:
 
     def _take_news(self, news: LinkNews) -> None:
         taken: list[tuple[int, Exchange]] = []
+        first = [event for event in news.events if event.kind is LinkEventKind.CONNECTED]
+        for event in first:  # a peer is there before it writes, and in the record as well
+            self._link_event(event)
         for request in news.writes:
             for exchange in request:
                 taken.append((self.tick, exchange))
@@ -423,7 +426,8 @@ class Session:
             for watch in self.watches.values():
                 watch.active(activity)
         for event in news.events:
-            self._link_event(event)
+            if event.kind is not LinkEventKind.CONNECTED:
+                self._link_event(event)
         if taken and self._recorder is not None:
             self._recorder.exchanges(taken)
 

@@ -8,7 +8,14 @@ from harness.domain.run import EventKind
 from harness.domain.signals import Exchange
 from harness.engine.engine import Engine
 from harness.runtime.clock import HandClock
-from harness.runtime.news import NO_NEWS, Contact, LinkActivity, LinkNews
+from harness.runtime.news import (
+    NO_NEWS,
+    Contact,
+    LinkActivity,
+    LinkEvent,
+    LinkEventKind,
+    LinkNews,
+)
 from harness.runtime.requests import NothingToCompute
 from harness.runtime.session import Pacing, Session
 
@@ -107,3 +114,21 @@ def test_who_read_and_wrote_a_point_last_is_kept(rig):
     assert rig.session.last_writer["FV-1"].peer == "10.0.0.5:40001"
     assert rig.session.last_writer["FV-1"].link == "modbus"
     assert rig.links.published == [0, 1, 2]
+
+
+def test_a_peer_is_told_of_before_what_it_wrote_and_its_going_after(rig):
+    rig.write()
+    came, went = (
+        LinkEvent(
+            kind=kind, link="modbus", connection=1, peer="10.0.0.5:40001", text="", arrival_ns=0
+        )
+        for kind in (LinkEventKind.CONNECTED, LinkEventKind.GONE)
+    )
+    (written,) = rig.links.news
+    rig.links.news = [LinkNews(writes=written.writes, events=[came, went])]
+    rig.session.advance(1)
+    assert rig.kinds() == [
+        EventKind.PEER_CONNECTED,
+        EventKind.CONTROLLER_FOUND,
+        EventKind.PEER_GONE,
+    ]

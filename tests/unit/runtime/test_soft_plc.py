@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import asyncio
+import math
 
 import pytest
 
@@ -160,6 +161,20 @@ async def test_a_rig_that_began_anew_is_taken_over_anew(two_tanks):
     far_end, said, _ = await run(two_tanks, restarted, scans=5)
     assert [each["FV-1"] for each in far_end.writes] == pytest.approx([55.0, 55.0, 20.0, 20.0])
     assert any("the rig began anew, first scan at tick 1:" in line for line in said)
+
+
+async def test_a_rig_that_shows_nothing_yet_is_taken_over_once_it_does(two_tanks):
+    def restarted(far_end, scan):
+        if scan == 3:
+            raise LinkError("gone")
+        if scan == 4:
+            far_end.values["TICK"] = math.nan  # the link is open before the first tick
+        if scan == 5:
+            far_end.values |= {"TICK": 0.0, "FV-1": 20.0}
+
+    far_end, said, _ = await run(two_tanks, restarted, scans=5)
+    assert far_end.writes[-1]["FV-1"] == pytest.approx(20.0)
+    assert any("the rig began anew, first scan at tick 0:" in line for line in said)
 
 
 async def test_a_refused_write_is_told_once_and_the_scan_goes_on(two_tanks):
