@@ -1,4 +1,4 @@
-"""Ctrl-C, and the system's request to end, taken between two ticks."""
+"""Ctrl-C, a terminal that closes, and the system's request to end, taken between two ticks."""
 
 from __future__ import annotations
 
@@ -9,7 +9,7 @@ from typing import TYPE_CHECKING, Any, Self
 if TYPE_CHECKING:
     from collections.abc import Callable
 
-_SIGNALS = ("SIGINT", "SIGTERM", "SIGBREAK")  # the last on Windows only
+_SIGNALS = ("SIGINT", "SIGTERM", "SIGBREAK", "SIGHUP")  # the last two not on every system
 
 
 class StopRequest:
@@ -41,7 +41,7 @@ class StopRequest:
 
     def __enter__(self) -> Self:
         if threading.current_thread() is threading.main_thread():  # others may not ask for it
-            numbers = [getattr(signal, name) for name in _SIGNALS if hasattr(signal, name)]
+            numbers = [getattr(signal, name) for name in _SIGNALS if _is_open_to(name)]
             self._before = [(number, signal.signal(number, self._take)) for number in numbers]
         return self
 
@@ -55,3 +55,10 @@ class StopRequest:
             raise KeyboardInterrupt
         self._asked = True
         self._on_stop()
+
+
+def _is_open_to(name: str) -> bool:
+    """Return whether a signal is there; whoever started us with nohup(1) wants no end by SIGHUP."""
+    number = getattr(signal, name, None)
+    ignored = number is not None and signal.getsignal(number) is signal.SIG_IGN
+    return number is not None and not (ignored and name == "SIGHUP")

@@ -317,10 +317,14 @@ def _write_record(
 
 
 def _heed_only_the_parent() -> None:
-    """Ignore Ctrl-C meant for the group; end in order when the parent terminates the child."""
+    """Ignore what is meant for the group; end in order when the parent terminates the child."""
     signal.signal(signal.SIGINT, signal.SIG_IGN)
-    if hasattr(signal, "SIGBREAK"):
-        signal.signal(signal.SIGBREAK, signal.SIG_IGN)
+    for name in (
+        "SIGBREAK",
+        "SIGHUP",
+    ):  # Ctrl-Break on Windows; elsewhere a terminal that closes
+        if hasattr(signal, name):
+            signal.signal(getattr(signal, name), signal.SIG_IGN)
 
     def leave(*_: object) -> None:
         raise SystemExit(0)

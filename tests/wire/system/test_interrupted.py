@@ -21,10 +21,11 @@ pytestmark = [
 
 
 def test_ctrl_c_closes_the_record_and_leaves_nobody(bench):
-    trials = {name: bench.start_paced(name) for name in ("group", "alone")}
+    trials = {name: bench.start_paced(name) for name in ("group", "alone", "hung up")}
     folders = {name: bench.wait_for_phase(name) for name in trials}
     os.killpg(trials["group"].process.pid, signal.SIGINT)  # as a terminal does it
     trials["alone"].process.send_signal(signal.SIGINT)
+    os.killpg(trials["hung up"].process.pid, signal.SIGHUP)  # as a terminal that closes does it
     for name, trial in trials.items():
         assert trial.ended() == 130
         assert f"interrupted; what was recorded is kept in {folders[name]}" in trial.complained
