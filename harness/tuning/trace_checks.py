@@ -27,7 +27,8 @@ _AT_END = 1e-3  # of a range: a value this near to its end stands at it
 _LAW = (
     0.8  # share of the input's movement that a control law explains before it is taken for one
 )
-_ROWS_OF_LAW = 0.2  # share of rows in which a controller moves its output
+_LATE = 4  # rows by which an output may be recorded after its sample, less one
+_ROWS_OF_LAW = 0.05  # share of rows in which a controller moves its output
 _DRIFT = (
     0.1  # of the movement: a slope before the first step that adds up to more over the test
 )
@@ -216,28 +217,42 @@ def examine(
 
 def _closed_loop(inputs: Array, output: Array) -> Finding | None:
     """Tell an input that follows the output by a law: its moves are a sum of output moves and error."""
-    move, rise = np.diff(inputs), np.diff(output)
-    moving = np.flatnonzero(move)
-    if moving.size < _ROWS_OF_LAW * move.size or moving.size < 20:  # noqa: PLR2004  a regression of three
+    rows = np.flatnonzero(np.diff(inputs)) + 1
+    if rows.size < _ROWS_OF_LAW * inputs.size or rows.size < 20:  # noqa: PLR2004  a regression of three
         return None
-    # A step of setpoint or of the manual output is no move of the law.
-    ordinary = np.abs(move) <= np.quantile(np.abs(move[moving]), 0.95)
-    columns = np.column_stack([rise, output[1:], np.ones(rise.size)])[ordinary]
-    wanted = move[ordinary]
-    answer, *_ = np.linalg.lstsq(columns, wanted, rcond=None)
-    spread = float(((wanted - wanted.mean()) ** 2).sum())
-    left = float(((wanted - columns @ answer) ** 2).sum())
-    if spread == 0.0 or 1.0 - left / spread < _LAW:
+    # A record may show an output some rows after the sample that it was computed from.
+    share, gain = max(_law(inputs, output, rows[rows >= late], late) for late in range(_LATE))
+    if share < _LAW:
         return None
     return Finding(
         concern=Concern.CLOSED_LOOP,
         text=(
-            f"the input follows the output as a controller does ({100 * (1 - left / spread):.0f} % of "
-            f"its moves; a gain of about {-answer[0]:.3g}): the record is of a closed loop, in which "
-            "cause and effect cannot be told apart; step the output in manual"
+            f"the input follows the output as a controller does ({100 * share:.0f} % of its moves; a "
+            f"gain of about {gain:.3g}): the record is of a closed loop, in which cause and effect "
+            "cannot be told apart; step the output in manual, and cut the record to that"
         ),
         grave=True,
     )
+
+
+def _law(
+    inputs: Array, output: Array, rows: NDArray[np.int64], late: int
+) -> tuple[float, float]:
+    """Return how much of the input's moves a law explains, and its gain."""
+    # From one move to the next, for the controller may scan more slowly than the rows come; and
+    # the change of the moves, in which a setpoint shows at its steps alone.
+    move, rise = np.diff(inputs[rows]), np.diff(output[rows - late])
+    change = np.diff(move)
+    apart = np.diff(rows)
+    near = apart <= 3.0 * np.median(apart)  # without stretches in manual
+    ordinary = near[1:] & near[:-1]
+    ordinary &= np.abs(change) <= np.quantile(np.abs(change[ordinary]), 0.95)  # and those steps
+    columns = np.column_stack([np.diff(rise), rise[1:], np.ones(change.size)])[ordinary]
+    wanted = change[ordinary]
+    answer, *_ = np.linalg.lstsq(columns, wanted, rcond=None)
+    spread = float(((wanted - wanted.mean()) ** 2).sum())
+    left = float(((wanted - columns @ answer) ** 2).sum())
+    return (1.0 - left / spread if spread > 0.0 else 0.0), -float(answer[0])
 
 
 def _saturation(

@@ -162,7 +162,7 @@ def fit_trace(
     if not found:
         reasons = "\n".join(f"  {kind}: {reason}" for kind, reason in refused.items())
         raise DataError(f"fit: the record supports no model\n{reasons}")
-    worth = _worth(*min(found.values(), key=lambda item: item[2].cost))
+    worth = _by_means(*min(found.values(), key=lambda item: item[2].cost))
     models = [
         _model(kind, *item, confidence=confidence, worth=worth) for kind, item in found.items()
     ]

@@ -62,6 +62,9 @@ def test_a_closed_loop_is_told_from_an_open_one():
         inputs[k] = 2.0 * error + integral
         state += (1.2 * (inputs[max(k - 5, 0)] - 0.5) - state) / 60.0
     assert concerns(np.arange(1000.0), inputs, output)[Concern.CLOSED_LOOP] is True
+    slow = np.repeat(inputs[::4], 4)  # a scan of four rows
+    held = np.repeat(output[::4], 4)
+    assert concerns(np.arange(1000.0), slow, held)[Concern.CLOSED_LOOP] is True
     busy = np.repeat(generator.choice([0.4, 0.6], 250), 4) + 0.002 * generator.normal(size=rows)
     stamps = np.arange(1000.0)
     answer = unit_gain_response(
