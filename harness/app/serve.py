@@ -22,7 +22,7 @@ from harness.app.stopping import StopRequest
 from harness.app.trial import say_compiling, warm_up
 from harness.domain.points import points_of
 from harness.domain.run import Closing, EventKind, RunEnd, RunHeader
-from harness.domain.signals import Quality
+from harness.domain.signals import PointKind, Quality
 from harness.engine.engine import Engine
 from harness.errors import ExitCode, InvalidRunError, UsageError
 from harness.links.raw import RawView
@@ -48,6 +48,7 @@ if TYPE_CHECKING:
 
 _FRAME_NS = 500_000_000  # between two tables [ns]
 _NS_PER_S = 1e9
+_WHOLE = (PointKind.MODE, PointKind.HEARTBEAT, PointKind.TICK)  # shown without decimals
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -285,6 +286,7 @@ class _Table:
                 quality=Quality(int(quality)),
                 read_by=self._who(session.last_reader.get(name), now_ns),
                 written_by=self._who(session.last_writer.get(name), now_ns),
+                whole=point.kind in _WHOLE and math.isfinite(value),
             )
             for name, (point, value, current, quality) in session.image().items()
         ]

@@ -71,6 +71,8 @@ class TagLine:
         Quality.
     read_by, written_by : str
         Peer, or the letter that stands for it, and how long ago; empty for never.
+    whole : bool
+        Whether the value is a whole number, as of a counter.
     """
 
     name: str
@@ -80,6 +82,7 @@ class TagLine:
     quality: Quality
     read_by: str
     written_by: str
+    whole: bool = False
 
 
 def verdict_table(document: Mapping[str, object], *, full: bool = False) -> RenderableType:
@@ -152,7 +155,7 @@ def tag_table(
 def _tag_cells(line: TagLine) -> tuple[str, ...]:
     return (
         line.name,
-        figure(line.value, "none"),
+        f"{line.value:.0f}" if line.whole else figure(line.value, "none"),
         shown_unit(line.unit) if line.unit != "1" else "",
         line.quality.name.lower(),
         line.read_by or "never",

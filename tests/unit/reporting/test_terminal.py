@@ -284,6 +284,20 @@ def test_the_tags_of_a_live_session():
         assert words in text
 
 
+def test_a_counter_is_a_whole_number():
+    line = TagLine(
+        name="TICK",
+        value=12_345.0,
+        unit="",
+        raw="0000 3039 at 10",
+        quality=Quality.GOOD,
+        read_by="",
+        written_by="",
+        whole=True,
+    )
+    assert " 12345 " in drawn(tag_table([line]))
+
+
 def test_tags_keep_a_line_each_and_say_what_a_low_window_leaves_out():
     line = TagLine(
         name="LIC-102.MODE.RB",
