@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import argparse
 import json
-import sys
 from pathlib import Path
 from typing import TYPE_CHECKING
 
@@ -100,8 +99,10 @@ def run_fit(options: argparse.Namespace) -> int:
 
         draw_fit_file(options.plot, found, asked)
     if options.json:
+        from harness.app.output import write_output  # noqa: PLC0415  kept out of --help
+
         text = json.dumps(found.document, indent=2, ensure_ascii=False, allow_nan=False)
-        sys.stdout.write(text + "\n")
+        write_output(text + "\n")
         return ExitCode.PASS
     from harness.reporting.terminal import make_console  # noqa: PLC0415
     from harness.reporting.tuning_tables import fit_view  # noqa: PLC0415

@@ -5,7 +5,6 @@ from __future__ import annotations
 import argparse
 import json
 import math
-import sys
 from pathlib import Path
 from typing import TYPE_CHECKING
 
@@ -200,8 +199,10 @@ def run_tune(options: argparse.Namespace) -> int:
 
             write_file(options.sheet, render_sheet(tuning.document, tuning_element(tuning)))
     if options.json:
+        from harness.app.output import write_output  # noqa: PLC0415  kept out of --help
+
         text = json.dumps(tuning.document, indent=2, ensure_ascii=False, allow_nan=False)
-        sys.stdout.write(text + "\n")
+        write_output(text + "\n")
         return ExitCode.PASS
     from harness.reporting.terminal import make_console  # noqa: PLC0415
     from harness.reporting.tuning_tables import tuning_view  # noqa: PLC0415
