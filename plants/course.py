@@ -8,12 +8,12 @@ import numpy as np
 from numpy.typing import NDArray
 
 from plants import layout as at
-from plants.compile import kernel
+from plants.compile import inlined_kernel, kernel
 from plants.flow import series_coefficient
 from plants.valve import LINEAR, SEAT_TRAVEL, installed_flow, lagged_travel
 
 Floats = NDArray[np.float64]
-Integers = NDArray[np.int64]
+Table = NDArray[np.uint32]
 
 # A course is cut into pieces over which the flow is nearly a parabola. Of a lag, at most this
 # part of it: Simpson's rule is then within 0.25**4 / 2880 = 1.4e-6 of the change over a piece.
@@ -294,9 +294,9 @@ def valve_course(  # noqa: PLR0915  straight-line arithmetic; parts would pass o
     return start, middle, final, end, command, last
 
 
-@kernel
+@inlined_kernel
 def move_valves(
-    table: Integers, parameters: Floats, state: Floats, work: Floats, interval: float
+    table: Table, parameters: Floats, state: Floats, work: Floats, interval: float
 ) -> None:
     """Move every valve over an interval; write the parabolas of their flows.
 
@@ -304,7 +304,7 @@ def move_valves(
 
     Parameters
     ----------
-    table : ndarray of int64
+    table : ndarray of uint32
         Table of the rig.
     parameters : ndarray of float64
         Parameters of the rig.
@@ -320,7 +320,8 @@ def move_valves(
     travels = table[at.AT_TRAVEL]
     commands = table[at.AT_COMMAND]
     held_flows = table[at.AT_FLOW]
-    parabolas = table[at.AT_PARABOLAS]
+    stride = table[at.N_VESSELS] + n_valves
+    course = table[at.AT_COURSE] + table[at.N_VESSELS]
     before = table[at.AT_VALVES_BEFORE]
     whole = interval == parameters[at.TICK]
     for valve in range(n_valves):
@@ -357,18 +358,18 @@ def move_valves(
             state[ramps + valve] = position
             state[travels + valve] = travel
             state[held_flows + valve] = flow
-        work[parabolas + valve] = start
-        work[parabolas + n_valves + valve] = middle
-        work[parabolas + 2 * n_valves + valve] = end
+        work[course + valve] = start
+        work[course + stride + valve] = middle
+        work[course + 2 * stride + valve] = end
 
 
 @kernel
-def restore_valves(table: Integers, state: Floats, work: Floats) -> None:
+def restore_valves(table: Table, state: Floats, work: Floats) -> None:
     """Take back the last ``move_valves``.
 
     Parameters
     ----------
-    table : ndarray of int64
+    table : ndarray of uint32
         Table of the rig.
     state : ndarray of float64
         State of the rig; the valves' part is changed in place.

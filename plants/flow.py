@@ -14,7 +14,6 @@ WATER_REFERENCE_DENSITY = (
 _VALVE_CONSTANT = 1.0 / (3600.0 * math.sqrt(1e5))
 
 
-@kernel
 def orifice_coefficient(discharge_coefficient: float, area: float, gravity: float) -> float:
     """Return c in q = c sqrt(h), the free jet of a sharp-edged orifice (Torricelli).
 
@@ -56,7 +55,6 @@ def orifice_flow(coefficient: float, level: float) -> float:
     return coefficient * math.sqrt(level)
 
 
-@kernel
 def weir_coefficient(discharge_coefficient: float, width: float, gravity: float) -> float:
     """Return c in q = c x**1.5 of a rectangular sharp-crested weir (Poleni).
 
@@ -121,7 +119,6 @@ def series_coefficient(valve: float, line: float) -> float:
     return valve * line / math.sqrt(valve * valve + line * line)
 
 
-@kernel
 def liquid_flow(kv: float, pressure_drop: float, density: float) -> float:
     """Return the turbulent, non-choked liquid flow through a flow coefficient.
 

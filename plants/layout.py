@@ -1,7 +1,7 @@
 """Names of every place in the state, parameter and table arrays of a plant.
 
-One float64 array holds all that changes, one float64 array all that does not, one int64 array
-the connections. The first entries of the table are the counts and offsets that a kernel needs
+One float64 array holds all that changes, one float64 array all that does not, one uint32 array
+the connections (unsigned, so that the compiler need not provide for negative places). The first entries of the table are the counts and offsets that a kernel needs
 to find its way; the harness appends its own places behind the plant's.
 """
 
@@ -16,7 +16,8 @@ N_ORIFICES = 2
 N_OVERFLOWS = 3
 N_TRANSMITTERS = 4
 N_LOOPS = 5
-SEED = 6
+SEED_LOW = 6  # words of 32 bits
+SEED_HIGH = 7
 # Header of the table: offsets into the state.
 AT_TOTALS = 8
 AT_COMMAND = 9
@@ -45,7 +46,7 @@ AT_TRANSMITTER_LINKS = 31
 PLANT_TABLE = 32
 # Header of the table: offsets into the scratch array; its first places hold volumes and totals.
 AT_DRY = 33
-AT_PARABOLAS = 34
+AT_COURSE = 34
 AT_VALVES_BEFORE = 35
 AT_INFLOWS = 36
 AT_NORMALS = 37
@@ -104,7 +105,7 @@ WEIGHT_DECAY = 5  # weights for a whole tick, see transmitter.damping_weights [-
 WEIGHT_START = 6
 WEIGHT_MIDDLE = 7
 WEIGHT_END = 8
-INVERSE_SUBJECT_AREA = 9  # of the vessel it looks at; 0 for a valve's flow [1/m2]
+FACTOR = 9  # of the quantity: to a level [1/m2], or 1 for a valve's flow [-]
 SUBJECT_COEFFICIENT = 10  # of the outlet whose flow it measures, or 0 [m2.5/s]
 INVERSE_RESOLUTION = 11  # 0 for a transmitter without steps [1/fraction of span]
 TRANSMITTER_STRIDE = 12
@@ -120,21 +121,21 @@ VALVE_DESTINATION = 0
 VALVE_CHARACTERISTIC = 1
 VALVE_LINKS = 2
 ORIGIN = 0
-DESTINATION = 1  # -1 leaves the rig
+DESTINATION = 1
+OUTSIDE = 0xFFFFFFFF  # destination of what leaves the rig
 PATH_LINKS = 2
-KIND = 0
-SUBJECT = 1  # vessel for a level or an outlet's flow, valve for a valve's flow
+QUANTITY = 0  # place in the course of a step: a vessel's volume or a valve's flow
+PRESENT = 1  # place of the same in the state
 STREAM = 2
 TRANSMITTER_LINKS = 3
 
 # Scratch of a vessel: what flows in at the four stages of a step.
 STAGES = 4
-# Scratch of a transmitter: the number of a block of noise, and its four numbers.
-NORMALS = 5
-
-MEASURES_LEVEL = 0
-MEASURES_VALVE_FLOW = 1
-MEASURES_ORIFICE_FLOW = 2
+# Scratch of the course of a step: volumes of all vessels and flows of all valves at its start,
+# then at its middle, then at its end.
+COURSE = 3
+# Scratch of the noise: the number of a block, then the numbers of its ticks for each transmitter.
+NORMALS = 4
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -198,11 +199,11 @@ class Counts:
         """Return the entries of the table's header that point into the scratch array."""
         order = (
             (AT_DRY, 5 * (self.vessels + N_TOTALS)),
-            (AT_PARABOLAS, self.vessels),
-            (AT_VALVES_BEFORE, 3 * self.valves),
+            (AT_COURSE, self.vessels),
+            (AT_VALVES_BEFORE, COURSE * (self.vessels + self.valves)),
             (AT_INFLOWS, 3 * self.valves),
             (AT_NORMALS, STAGES * self.vessels),
-            (AT_KEPT, NORMALS * self.transmitters),
+            (AT_KEPT, 1 + NORMALS * self.transmitters),
             (WORK, self.state_offsets()[PLANT_STATE] + self.vessels),
         )
         return _running(order, 0)

@@ -11,16 +11,16 @@ from plants.flow import orifice_flow, weir_flow
 from plants.valve import installed_flow
 
 Floats = NDArray[np.float64]
-Integers = NDArray[np.int64]
+Table = NDArray[np.uint32]
 
 
 @kernel
-def valve_flow(table: Integers, parameters: Floats, valve: int, travel: float) -> float:
+def valve_flow(table: Table, parameters: Floats, valve: int, travel: float) -> float:
     """Return the flow through a control valve at a travel.
 
     Parameters
     ----------
-    table : ndarray of int64
+    table : ndarray of uint32
         Table of the rig, see ``plants.layout``.
     parameters : ndarray of float64
         Parameters of the rig.
@@ -48,91 +48,80 @@ def valve_flow(table: Integers, parameters: Floats, valve: int, travel: float) -
 
 @kernel
 def rates(
-    table: Integers,
-    parameters: Floats,
-    work: Floats,
-    volumes: int,
-    flows: int,
-    result: int,
+    table: Table, parameters: Floats, work: Floats, volumes: int, moment: int, result: int
 ) -> None:
     """Write the rates of change of all volumes and totals.
 
-    A vessel marked dry in ``work`` passes its inflow on.
+    A vessel marked dry in ``work`` passes its inflow on. The flows of the valves are those in
+    the course of the step, at its start, middle or end.
 
     Parameters
     ----------
-    table : ndarray of int64
+    table : ndarray of uint32
         Table of the rig.
     parameters : ndarray of float64
         Parameters of the rig.
     work : ndarray of float64
         Scratch array that holds inputs and result.
-    volumes, flows, result : int
-        Where in ``work`` the volumes [m3], the valves' flows [m3/s] and the result [m3/s]
-        stand [-].
+    volumes, result : int
+        Where in ``work`` the volumes [m3] and the result [m3/s] stand [-].
+    moment : int
+        0 for the start of the step, 1 for its middle, 2 for its end [-].
     """
-    totals = result + table[at.N_VESSELS]
-    links = table[at.AT_VALVE_LINKS] + at.VALVE_DESTINATION
-    outlets = table[at.AT_ORIFICE_LINKS]
-    dry = table[at.AT_DRY]
-    for place in range(result, totals + at.N_TOTALS):
+    n_vessels = table[at.N_VESSELS]
+    n_valves = table[at.N_VALVES]
+    flows = table[at.AT_COURSE] + n_vessels + moment * (n_vessels + n_valves)
+    into = out = spilled = 0.0
+    for place in range(result, result + n_vessels + at.N_TOTALS):
         work[place] = 0.0
-    into = 0.0
-    for valve in range(table[at.N_VALVES]):
+    for valve in range(n_valves):
+        link = table[at.AT_VALVE_LINKS] + valve * at.VALVE_LINKS
         flow = work[flows + valve]
-        work[result + table[links + valve * at.VALVE_LINKS]] += flow
+        work[result + table[link + at.VALVE_DESTINATION]] += flow
         into += flow
-    _weir_rates(table, parameters, work, volumes, result)
-    out = work[totals + at.TOTAL_OUT]
-    for path in range(table[at.N_ORIFICES]):
-        link = outlets + path * at.PATH_LINKS
+    for path in range(table[at.N_OVERFLOWS]):
+        link = table[at.AT_OVERFLOW_LINKS] + path * at.PATH_LINKS
+        p = table[at.AT_OVERFLOW_PARAMETERS] + path * at.OVERFLOW_STRIDE
         origin = table[link + at.ORIGIN]
         destination = table[link + at.DESTINATION]
-        if work[dry + origin] > 0.0:
+        head = level_in(table, parameters, work, volumes, origin) - parameters[p + at.CREST]
+        flow = weir_flow(parameters[p + at.WEIR_COEFFICIENT], head)
+        caught = flow * parameters[p + at.CAUGHT_FRACTION]
+        spilled += flow - caught
+        work[result + origin] -= flow
+        if destination != at.OUTSIDE:
+            work[result + destination] += caught
+        else:
+            out += caught
+    for path in range(table[at.N_ORIFICES]):
+        link = table[at.AT_ORIFICE_LINKS] + path * at.PATH_LINKS
+        origin = table[link + at.ORIGIN]
+        destination = table[link + at.DESTINATION]
+        if work[table[at.AT_DRY] + origin] > 0.0:
             flow = max(work[result + origin], 0.0)
         else:
             level = level_in(table, parameters, work, volumes, origin)
             flow = outlet_flow(table, parameters, path, level)
         work[result + origin] -= flow
-        if destination >= 0:
+        if destination != at.OUTSIDE:
             work[result + destination] += flow
         else:
             out += flow
+    totals = result + n_vessels
     work[totals + at.TOTAL_IN] = into
     work[totals + at.TOTAL_OUT] = out
-
-
-@kernel
-def _weir_rates(
-    table: Integers, parameters: Floats, work: Floats, volumes: int, result: int
-) -> None:
-    """Add the flow over every weir."""
-    totals = result + table[at.N_VESSELS]
-    for path in range(table[at.N_OVERFLOWS]):
-        link = table[at.AT_OVERFLOW_LINKS] + path * at.PATH_LINKS
-        origin = table[link + at.ORIGIN]
-        p = table[at.AT_OVERFLOW_PARAMETERS] + path * at.OVERFLOW_STRIDE
-        head = level_in(table, parameters, work, volumes, origin) - parameters[p + at.CREST]
-        flow = weir_flow(parameters[p + at.WEIR_COEFFICIENT], head)
-        caught = flow * parameters[p + at.CAUGHT_FRACTION]
-        work[result + origin] -= flow
-        destination = table[link + at.DESTINATION]
-        if destination >= 0:
-            work[result + destination] += caught
-        else:
-            work[totals + at.TOTAL_OUT] += caught
-        work[totals + at.TOTAL_SPILLED] += flow - caught
+    work[totals + at.TOTAL_SPILLED] = spilled
 
 
 @kernel
 def level_in(
-    table: Integers, parameters: Floats, volumes: Floats, first: int, vessel: int
+    table: Table, parameters: Floats, volumes: Floats, first: int, vessel: int
 ) -> float:
     """Return the level of a vessel whose volume stands in an array.
 
     Parameters
     ----------
-    table : ndarray of int64
+    table : ndarray of uint32
         Table of the rig.
     parameters : ndarray of float64
         Parameters of the rig.
@@ -152,12 +141,12 @@ def level_in(
 
 
 @kernel
-def outlet_flow(table: Integers, parameters: Floats, path: int, level: float) -> float:
+def outlet_flow(table: Table, parameters: Floats, path: int, level: float) -> float:
     """Return the flow of an outlet under a level.
 
     Parameters
     ----------
-    table : ndarray of int64
+    table : ndarray of uint32
         Table of the rig.
     parameters : ndarray of float64
         Parameters of the rig.

@@ -11,7 +11,7 @@ from plants import layout as at
 from plants.network import rates, valve_flow
 
 Floats = NDArray[np.float64]
-Integers = NDArray[np.int64]
+Table = NDArray[np.uint32]
 
 _NEWTON_STEPS = 200
 _BALANCE = 1e-15  # residual flow relative to the throughput at which the balance is closed [-]
@@ -20,13 +20,13 @@ _NEGLIGIBLE = 1e-9  # share of a mode in the gain below which it does not belong
 
 
 def flows_into(
-    table: Integers, parameters: Floats, volumes: Floats, valve_flows: Floats
+    table: Table, parameters: Floats, volumes: Floats, valve_flows: Floats
 ) -> Floats:
     """Return the rates of change of volumes and totals.
 
     Parameters
     ----------
-    table : ndarray of int64
+    table : ndarray of uint32
         Table of the rig.
     parameters : ndarray of float64
         Parameters of the rig.
@@ -44,20 +44,20 @@ def flows_into(
     n = n_vessels + at.N_TOTALS
     work = np.zeros(int(table[at.WORK]))
     work[:n_vessels] = volumes
-    flows = int(table[at.AT_PARABOLAS])
+    flows = int(table[at.AT_COURSE]) + n_vessels
     work[flows : flows + len(valve_flows)] = valve_flows
-    rates(table, parameters, work, 0, flows, n)
+    rates(table, parameters, work, 0, 0, n)
     return work[n : 2 * n]
 
 
-def steady_volumes(table: Integers, parameters: Floats, valve_flows: Floats) -> Floats | None:
+def steady_volumes(table: Table, parameters: Floats, valve_flows: Floats) -> Floats | None:
     """Return the volumes at which every vessel's inflow equals its outflow.
 
     Newton's method on the square roots of the volumes, in which free outlets are linear.
 
     Parameters
     ----------
-    table : ndarray of int64
+    table : ndarray of uint32
         Table of the rig.
     parameters : ndarray of float64
         Parameters of the rig.
@@ -98,7 +98,7 @@ def steady_volumes(table: Integers, parameters: Floats, valve_flows: Floats) -> 
     return None
 
 
-def _areas(table: Integers, parameters: Floats) -> Floats:
+def _areas(table: Table, parameters: Floats) -> Floats:
     start = int(table[at.AT_VESSEL_PARAMETERS])
     return np.array(
         [parameters[start + i * at.VESSEL_STRIDE] for i in range(int(table[at.N_VESSELS]))]
@@ -150,13 +150,13 @@ class Linearisation:
 
 
 def linearise(
-    table: Integers, parameters: Floats, volumes: Floats, travels: Floats
+    table: Table, parameters: Floats, volumes: Floats, travels: Floats
 ) -> Linearisation:
     """Return the linearisation of the volumes' balance around a steady state.
 
     Parameters
     ----------
-    table : ndarray of int64
+    table : ndarray of uint32
         Table of the rig.
     parameters : ndarray of float64
         Parameters of the rig.

@@ -17,13 +17,11 @@ import numpy as np
 from numpy.typing import NDArray
 
 from plants import layout as at
-from plants.careful import adapted_steps
-from plants.compile import kernel
+from plants.compile import inlined_kernel
 from plants.course import move_valves, restore_valves
-from plants.instruments import damp
 
 Floats = NDArray[np.float64]
-Integers = NDArray[np.int64]
+Table = NDArray[np.uint32]
 
 # A step that lets out more than this part of a vessel is adapted: an outlet's time constant is
 # 2 V/q, so that at the limit the local error of one Runge-Kutta step is about
@@ -31,17 +29,17 @@ Integers = NDArray[np.int64]
 _SMOOTH_SHARE = 0.06
 
 
-@kernel
+@inlined_kernel
 def _smooth_step(  # noqa: PLR0915  one pass, so that its numbers stay in registers
-    table: Integers, parameters: Floats, state: Floats, work: Floats, interval: float
+    table: Table, parameters: Floats, state: Floats, work: Floats, interval: float
 ) -> bool:
     """Step volumes and totals; where that needs care, change nothing and return False."""
     n_vessels = table[at.N_VESSELS]
     n_valves = table[at.N_VALVES]
-    n = n_vessels + at.N_TOTALS
-    starts, ends, middles = 0, n, 2 * n
+    starts = table[at.AT_COURSE]
+    middles = starts + n_vessels + n_valves
+    ends = middles + n_vessels + n_valves
     inflows = table[at.AT_INFLOWS]
-    parabolas = table[at.AT_PARABOLAS]
     links = table[at.AT_VALVE_LINKS] + at.VALVE_DESTINATION
     half = 0.5 * interval
     sixth = interval * (1.0 / 6.0)
@@ -50,9 +48,9 @@ def _smooth_step(  # noqa: PLR0915  one pass, so that its numbers stay in regist
         work[place] = 0.0
     for valve in range(n_valves):
         stage = inflows + at.STAGES * table[links + valve * at.VALVE_LINKS]
-        flow_1 = work[parabolas + valve]
-        flow_2 = work[parabolas + n_valves + valve]
-        flow_4 = work[parabolas + 2 * n_valves + valve]
+        flow_1 = work[starts + n_vessels + valve]
+        flow_2 = work[middles + n_vessels + valve]
+        flow_4 = work[ends + n_vessels + valve]
         work[stage] += flow_1
         work[stage + 1] += flow_2
         work[stage + 2] += flow_2
@@ -94,7 +92,7 @@ def _smooth_step(  # noqa: PLR0915  one pass, so that its numbers stay in regist
             share = parameters[
                 table[at.AT_ORIFICE_PARAMETERS] + path * at.ORIFICE_STRIDE + at.SHARE
             ]
-            if destination < 0:
+            if destination == at.OUTSIDE:
                 out += share * (out_1 + 2.0 * (out_2 + out_3) + out_4)
                 continue
             stage = inflows + at.STAGES * destination
@@ -111,13 +109,13 @@ def _smooth_step(  # noqa: PLR0915  one pass, so that its numbers stay in regist
     return True
 
 
-@kernel
-def plant_tick(table: Integers, parameters: Floats, state: Floats, work: Floats) -> None:
-    """Integrate the plant over one tick with its commands held.
+@inlined_kernel
+def smooth_tick(table: Table, parameters: Floats, state: Floats, work: Floats) -> bool:
+    """Integrate the plant over one tick with its commands held, if one step will do.
 
     Parameters
     ----------
-    table : ndarray of int64
+    table : ndarray of uint32
         Table of the rig.
     parameters : ndarray of float64
         Parameters of the rig.
@@ -125,12 +123,16 @@ def plant_tick(table: Integers, parameters: Floats, state: Floats, work: Floats)
         State of the rig; changed in place.
     work : ndarray of float64
         Scratch of the length in the table.
+
+    Returns
+    -------
+    bool
+        True when the tick is done, except that the instruments have still to follow its
+        course; False when nothing was done, and ``plants.careful.adapted_steps`` is called for.
     """
     interval = parameters[at.TICK]
     move_valves(table, parameters, state, work, interval)
-    if _smooth_step(table, parameters, state, work, interval):
-        n = table[at.N_VESSELS] + at.N_TOTALS
-        damp(table, parameters, state, work, interval, 0, 2 * n, n)
-    else:
+    smooth = _smooth_step(table, parameters, state, work, interval)
+    if not smooth:
         restore_valves(table, state, work)
-        adapted_steps(table, parameters, state, work, interval)
+    return smooth

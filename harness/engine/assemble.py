@@ -31,7 +31,7 @@ class Arrays:
 
     Parameters
     ----------
-    table : ndarray of int64
+    table : ndarray of uint32
         Connections and offsets, see ``plants.layout`` and ``harness.engine.places``.
     parameters : ndarray of float64
         Parameters.
@@ -39,7 +39,7 @@ class Arrays:
         Lengths of the state and of the scratch array [-].
     """
 
-    table: NDArray[np.int64]
+    table: NDArray[np.uint32]
     parameters: NDArray[np.float64]
     state_size: int
     work_size: int
@@ -105,7 +105,8 @@ def assemble(rig: Rig) -> Arrays:
         at.N_OVERFLOWS: counts.overflows,
         at.N_TRANSMITTERS: counts.transmitters,
         at.N_LOOPS: len(rig.loops),
-        at.SEED: rig.seed,
+        at.SEED_LOW: rig.seed % 2**32,
+        at.SEED_HIGH: rig.seed // 2**32,
     }
     longest_delay = max((loop.output_delay for loop in rig.loops), default=0)
     stride = place.DELAY_LINE + longest_delay + 1
@@ -121,10 +122,12 @@ def assemble(rig: Rig) -> Arrays:
     }
     vessels = upstream_first(rig)
     orifices = _outlets_of(rig, vessels)
-    table = np.zeros(header[at.PLANT_TABLE] + len(rig.loops) * place.LOOP_LINKS, dtype=np.int64)
+    table = np.zeros(
+        header[at.PLANT_TABLE] + len(rig.loops) * place.LOOP_LINKS, dtype=np.uint32
+    )
     for entry, value in header.items():
         table[entry] = value
-    table[at.HEADER :] = _vessel_links(rig, vessels) + _links(rig, orifices)
+    table[at.HEADER :] = _vessel_links(rig, vessels) + _links(rig, orifices, header[at.AT_FLOW])
     parameters = np.array(_parameters(rig, orifices), dtype=np.float64)
     return Arrays(
         table=table,
@@ -191,7 +194,7 @@ def _vessel_links(rig: Rig, vessels: tuple[Vessel, ...]) -> list[int]:
     return links
 
 
-def _links(rig: Rig, orifices: tuple[Orifice, ...]) -> list[int]:
+def _links(rig: Rig, orifices: tuple[Orifice, ...], flows: int) -> list[int]:
     vessels = {vessel.tag: i for i, vessel in enumerate(rig.vessels)}
     valves = {valve.tag: i for i, valve in enumerate(rig.valves)}
     transmitters = {transmitter.tag: i for i, transmitter in enumerate(rig.transmitters)}
@@ -200,18 +203,19 @@ def _links(rig: Rig, orifices: tuple[Orifice, ...]) -> list[int]:
         linear = valve.characteristic is Characteristic.LINEAR
         links += [vessels[valve.destination], LINEAR if linear else EQUAL_PERCENTAGE]
     for path in orifices:
-        links += [vessels[path.origin], vessels.get(path.destination, -1)]
+        links += [vessels[path.origin], vessels.get(path.destination, at.OUTSIDE)]
     for weir in rig.overflows:
-        links += [vessels[weir.origin], vessels.get(weir.destination, -1)]
+        links += [vessels[weir.origin], vessels.get(weir.destination, at.OUTSIDE)]
     for transmitter in rig.transmitters:
         if transmitter.measures is Measurement.LEVEL:
-            kind, subject = at.MEASURES_LEVEL, vessels[transmitter.subject]
+            quantity = present = vessels[transmitter.subject]
         elif transmitter.subject in valves:
-            kind, subject = at.MEASURES_VALVE_FLOW, valves[transmitter.subject]
+            quantity = len(vessels) + valves[transmitter.subject]
+            present = flows + valves[transmitter.subject]
         else:
             outlet = next(path for path in orifices if path.tag == transmitter.subject)
-            kind, subject = at.MEASURES_ORIFICE_FLOW, vessels[outlet.origin]
-        links += [kind, subject, stream_of(transmitter.tag)]
+            quantity = present = vessels[outlet.origin]
+        links += [quantity, present, stream_of(transmitter.tag)]
     for loop in rig.loops:
         links += [
             transmitters[loop.process_variable],
@@ -292,7 +296,7 @@ def _transmitter_parameters(rig: Rig, transmitter: Transmitter) -> list[float]:
         transmitter.noise,
         transmitter.resolution,
         *damping_weights(rig.tick, transmitter.damping),
-        inverse_areas.get(vessel, 0.0),
+        inverse_areas.get(vessel, 1.0),
         coefficient,
         1.0 / transmitter.resolution if transmitter.resolution > 0.0 else 0.0,
     ]

@@ -424,11 +424,11 @@ class Engine:
 
     def _start_instruments(self) -> None:
         """Let the damping of every transmitter stand at its true value, and take sample 0."""
-        sample(self.table, self.parameters, self.state, self._work, 0)
+        sample(self.table, self.parameters, self.state, self._work, 0, False)
         n = len(self.rig.transmitters)
         true, damped = int(self.table[at.AT_TRUE]), int(self.table[at.AT_DAMPED])
         self.state[damped : damped + n] = self.state[true : true + n]
-        sample(self.table, self.parameters, self.state, self._work, 0)
+        sample(self.table, self.parameters, self.state, self._work, 0, False)
 
     def _start_loop(self, tag: str) -> None:
         loop = self.rig.loop(tag)

@@ -8,18 +8,20 @@ from numpy.typing import NDArray
 from harness.controllers.block import block_scan
 from harness.engine import places as place
 from plants import layout as at
-from plants.compile import kernel
+from plants.careful import adapted_steps
+from plants.compile import inlined_kernel, kernel
 from plants.instruments import sample
-from plants.stepper import plant_tick
+from plants.stepper import smooth_tick
 from plants.transmitter import BAD, fraction_of_current
 
 Floats = NDArray[np.float64]
 Integers = NDArray[np.int64]
+Table = NDArray[np.uint32]
 
 
-@kernel
+@inlined_kernel
 def _scan_loops(
-    table: Integers, parameters: Floats, state: Floats, tick: int, stride: int
+    table: Table, parameters: Floats, state: Floats, tick: int, stride: int
 ) -> None:
     """Execute the built-in block of every loop whose scan it is, and apply delayed outputs."""
     for loop in range(table[at.N_LOOPS]):
@@ -58,13 +60,13 @@ def _scan_loops(
 
 @kernel
 def write_row(
-    table: Integers, parameters: Floats, state: Floats, row: Floats, stride: int
+    table: Table, parameters: Floats, state: Floats, row: Floats, stride: int
 ) -> None:
     """Write one row of the trace: the samples of a tick and the outputs held over it.
 
     Parameters
     ----------
-    table : ndarray of int64
+    table : ndarray of uint32
         Table of the rig.
     parameters, state : ndarray of float64
         Parameters and state of the rig.
@@ -112,7 +114,7 @@ def write_row(
 
 @kernel
 def advance(
-    table: Integers,
+    table: Table,
     parameters: Floats,
     state: Floats,
     counters: Integers,
@@ -126,7 +128,7 @@ def advance(
 
     Parameters
     ----------
-    table : ndarray of int64
+    table : ndarray of uint32
         Table of the rig.
     parameters, state : ndarray of float64
         Parameters, and state that is changed in place.
@@ -146,6 +148,8 @@ def advance(
         _scan_loops(table, parameters, state, tick, stride)
         if recording:
             write_row(table, parameters, state, rows[i], stride)
-        plant_tick(table, parameters, state, work)
+        smooth = smooth_tick(table, parameters, state, work)
+        if not smooth:
+            adapted_steps(table, parameters, state, work, parameters[at.TICK])
         counters[place.TICK] = tick + 1
-        sample(table, parameters, state, work, tick + 1)
+        sample(table, parameters, state, work, tick + 1, smooth)

@@ -9,11 +9,12 @@ from scipy import special, stats
 from plants.noise import (
     BLOCK_TICKS,
     normal_block,
-    normal_quantile,
+    normal_of_word,
     philox_4x32,
     standard_normal,
     stream_of,
 )
+from plants.quantile import FIRST_INTERVAL, INTERVAL_SHIFT, QUANTILE_TABLE, normal_quantile
 
 _ONES = 0xFFFFFFFF
 
@@ -40,14 +41,33 @@ def test_the_quantile_is_that_of_an_independent_library():
     probabilities = np.concatenate(
         [np.logspace(-300, -1, 200), np.linspace(0.05, 0.95, 181), 1 - np.logspace(-16, -1, 60)]
     )
-    found = [normal_quantile(float(p)) for p in probabilities]
     # AS 241 promises about one part in 1e16; the tails near 1 are as coarse as 1 - p itself
-    np.testing.assert_allclose(found, special.ndtri(probabilities), rtol=2e-15, atol=2e-16)
+    np.testing.assert_allclose(
+        normal_quantile(probabilities), special.ndtri(probabilities), rtol=2e-15, atol=2e-16
+    )
+
+
+def _words():
+    """Words at both ends of every interval of the table, between them, and their mirrors."""
+    first = np.arange(FIRST_INTERVAL, FIRST_INTERVAL + len(QUANTILE_TABLE), dtype=np.uint64)
+    starts = (first << np.uint64(INTERVAL_SHIFT)).view(np.float64)
+    inside = np.concatenate([starts + part * starts / 16 for part in np.linspace(0, 1, 9)])
+    low = np.unique(np.clip(np.round(inside - 0.5), 0, 2**31 - 1).astype(np.uint64))
+    return np.concatenate([low, np.uint64(2**32 - 1) - low])
+
+
+def test_every_word_has_its_quantile():
+    words = _words()
+    assert len(words) > 2_000
+    found = [normal_of_word(word) for word in words]
+    expected = special.ndtri((words.astype(np.float64) + 0.5) / 2**32)
+    np.testing.assert_allclose(found, expected, rtol=0, atol=1e-11)
+    assert max(found) == -min(found) == pytest.approx(6.3, abs=0.1)
 
 
 def test_a_tick_has_one_number_whichever_way_it_is_drawn():
     for tick in (0, 1, 6, 4_000_003, 2**33 + 1):
-        block = normal_block(7, 99, tick // BLOCK_TICKS)
+        block = normal_block(7, 0, 99, tick // BLOCK_TICKS)
         assert standard_normal(7, 99, tick) == block[tick % BLOCK_TICKS]
 
 
@@ -63,7 +83,7 @@ def test_every_argument_matters():
 def _series(tag, ticks, seed=11):
     stream = stream_of(tag)
     return np.array(
-        [x for block in range(ticks // 4) for x in normal_block(seed, stream, block)]
+        [x for block in range(ticks // 4) for x in normal_block(seed, 0, stream, block)]
     )
 
 
