@@ -194,14 +194,14 @@ def _add_trial(commands: argparse._SubParsersAction[argparse.ArgumentParser]) ->
     parser = commands.add_parser(
         "trial", help="run a trial, score it and write the report", epilog=_CAUTION
     )
-    parser.add_argument("rig", type=Path, metavar="RIG", help="rig file")
-    parser.add_argument("trial", type=Path, metavar="TRIAL", help="trial file")
+    parser.add_argument("rig", type=Path, nargs="?", metavar="RIG", help="rig file")
+    parser.add_argument("trial", type=Path, nargs="?", metavar="TRIAL", help="trial file")
     parser.add_argument(
         "--clock",
         choices=("virtual", "paced"),
         help="virtual for the built-in controller, paced for one outside, unless said otherwise",
     )
-    parser.add_argument("--controller", choices=("builtin", "external"), default="builtin")
+    parser.add_argument("--controller", choices=("builtin", "external"))
     parser.add_argument(
         "--controller-pace",
         type=_above_zero,
@@ -225,6 +225,19 @@ def _add_trial(commands: argparse._SubParsersAction[argparse.ArgumentParser]) ->
         type=_above_zero,
         metavar="SECONDS",
         help="how long to wait for an order by prompt (default as in the trial file)",
+    )
+    parser.add_argument(
+        "--models-from",
+        type=Path,
+        metavar="RUN",
+        help="take the models from an earlier run, whatever the trial file says",
+    )
+    parser.add_argument(
+        "--resume",
+        type=Path,
+        metavar="RUN",
+        help="take up an interrupted or invalid run after its last completed phase, in place of "
+        "RIG and TRIAL",
     )
     parser.add_argument(
         "--phases", type=_names, metavar="NAME[,NAME...]", help="run these phases only"
@@ -379,7 +392,7 @@ def _control(options: argparse.Namespace) -> int:
 def _trial(options: argparse.Namespace) -> int:
     from harness.app.trial import TrialOptions, run_trial  # noqa: PLC0415  kept out of --help
 
-    external = options.controller == "external"
+    external = options.controller == "external" or options.resume is not None
     _refuse_idle_options(options, external=external)
     # A pace means nothing in virtual time, so that asking for one asks for paced time.
     paced = external or options.pace is not None
@@ -390,7 +403,7 @@ def _trial(options: argparse.Namespace) -> int:
             trial=options.trial,
             clock=options.clock or ("paced" if paced else "virtual"),
             pace=options.pace or 1.0,
-            controller=options.controller,
+            controller=options.controller or "builtin",
             controller_pace=options.controller_pace or 1.0,
             phases=options.phases or (),
             out=options.out,
@@ -398,6 +411,8 @@ def _trial(options: argparse.Namespace) -> int:
             json=options.json,
             answers=options.answers,
             order_timeout=options.order_timeout,
+            models_from=options.models_from,
+            resume=options.resume,
             **waiting,
         )
     )
@@ -406,6 +421,14 @@ def _trial(options: argparse.Namespace) -> int:
 
 def _refuse_idle_options(options: argparse.Namespace, *, external: bool) -> None:
     """Raise where an option would be passed over without a word."""
+    if options.resume is not None:
+        for name in ("clock", "pace", "controller", "controller_pace", "phases", "models_from"):
+            if getattr(options, name) is not None:
+                raise UsageError(
+                    f"trial: --{name.replace('_', '-')} with --resume: a run is taken up as it was "
+                    "begun; leave the option out"
+                )
+        return
     if options.clock == "virtual" and options.pace is not None:
         raise UsageError(
             f"trial: --pace {options.pace:g} with --clock virtual: virtual time runs as fast as "

@@ -73,7 +73,7 @@ def forecast(rig: Rig, trial: Trial) -> Forecast:
     for phase in trial.phases:
         loop = rig.loop(phase.loop)
         if loop.tag not in models:
-            models[loop.tag] = trial.given or linearised_models(engine, loop)
+            models[loop.tag] = trial.models_of(loop.tag) or linearised_models(engine, loop)
         if phase.mode is Mode.AUTOMATIC and loop.tag not in settings:
             settings[loop.tag] = _settings(trial, models[loop.tag])
             transfers += 1

@@ -57,13 +57,33 @@ def read_rig(path: Path, links: LinkChoice | None = None) -> tuple[Rig, str]:
         When a link is asked for that the rig does not have.
     """
     rig, text = load_rig(path)
+    return with_links(rig, links, str(path)), text
+
+
+def with_links(rig: Rig, links: LinkChoice | None, name: str) -> Rig:
+    """Return a rig with the command line's changes of its links.
+
+    Parameters
+    ----------
+    rig : Rig
+        The rig.
+    links : LinkChoice or None
+        The changes; None for none.
+    name : str
+        Where the rig is from, for a message.
+
+    Raises
+    ------
+    UsageError
+        When a link is asked for that the rig does not have.
+    """
     if links is None:
-        return rig, text
+        return rig
     chosen = [_changed(link, links) for link in rig.links if _is_chosen(link, links.only)]
     if links.only is not None and not chosen:
         names = ", ".join(link.name for link in rig.links) or "none"
-        raise UsageError(f'{path}: no link "{links.only}" in this rig; it has {names}')
-    return dataclasses.replace(rig, links=tuple(chosen)), text
+        raise UsageError(f'{name}: no link "{links.only}" in this rig; it has {names}')
+    return dataclasses.replace(rig, links=tuple(chosen))
 
 
 def read_trial(path: Path, rig: Rig, phases: tuple[str, ...] = ()) -> tuple[Trial, str]:

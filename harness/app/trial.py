@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import dataclasses
 import sys
 from contextlib import ExitStack
 from dataclasses import dataclass, field
@@ -12,10 +11,11 @@ from typing import TYPE_CHECKING
 from harness.app.answering import answers_for
 from harness.app.compute import ProcessComputer
 from harness.app.forecast import Forecast, forecast
-from harness.app.loading import LinkChoice, read_rig, read_trial
-from harness.app.run_files import RunResult, make_run_folder, phases_extra, score_folder
+from harness.app.loading import LinkChoice
+from harness.app.run_files import RunResult, make_run_folder, score_folder
 from harness.app.stamps import new_run_id, utc_now, versions
 from harness.app.stopping import StopRequest
+from harness.app.trial_parts import read_parts
 from harness.app.trial_view import DirectView, TrialView, ViewProcess
 from harness.domain.points import points_of
 from harness.domain.run import Closing, EventKind, RunEnd, RunHeader
@@ -34,6 +34,7 @@ from harness.runtime.trial_script import WAIT_FOR_CONTROLLER, trial_script
 from plants.compile import is_compiled
 
 if TYPE_CHECKING:
+    from harness.app.trial_parts import TrialParts
     from harness.app.trial_view import ViewPort
     from harness.domain.rig import Rig
     from harness.domain.trial import Trial
@@ -52,8 +53,8 @@ class TrialOptions:
 
     Parameters
     ----------
-    rig, trial : Path
-        The files.
+    rig, trial : Path or None
+        The files; None for a run that is taken up.
     clock : str
         ``"virtual"`` or ``"paced"``.
     pace : float
@@ -76,10 +77,14 @@ class TrialOptions:
         File to which answers to prompts are appended; None takes them from the terminal.
     order_timeout : float or None
         Longest wait for an order by prompt or callable; None as the trial says [wall s].
+    models_from : Path or None
+        Folder of an earlier run whose models the trial goes by; None as the trial says.
+    resume : Path or None
+        Folder of an earlier run to take up after its last completed phase; None to begin anew.
     """
 
-    rig: Path
-    trial: Path
+    rig: Path | None
+    trial: Path | None
     clock: str
     pace: float
     controller: str
@@ -91,6 +96,8 @@ class TrialOptions:
     wait: float = WAIT_FOR_CONTROLLER
     answers: Path | None = None
     order_timeout: float | None = None
+    models_from: Path | None = None
+    resume: Path | None = None
 
 
 def run_trial(options: TrialOptions) -> RunResult:
@@ -120,22 +127,22 @@ def run_trial(options: TrialOptions) -> RunResult:
         When the record cannot be written; what was committed until then is kept.
     """
     _check(options)
-    rig, rig_text = read_rig(options.rig, options.links)
-    trial, trial_text = read_trial(options.trial, rig, options.phases)
-    external = options.controller == "external"
+    parts = read_parts(options)
+    rig = parts.rig
+    external = parts.options.controller == "external"
     if external and not rig.links:
         raise UsageError(
-            f"{options.rig}: an external controller needs a link, and this rig has none"
+            f"{rig.name}: an external controller needs a link, and this rig has none"
         )
-    if options.order_timeout is not None:
-        trial = dataclasses.replace(trial, order_timeout=options.order_timeout)
-    answers = answers_for(rig, trial, options.answers) if external else AnyAnswers(())
+    answers = answers_for(rig, parts.trial, options.answers) if external else AnyAnswers(())
     say_compiling()
-    expected = forecast(rig, trial)
+    expected = forecast(rig, parts.trial)
     engine = Engine(rig, built_in=not external)
     warm_up(engine)
-    header = _header(options, rig, rig_text, trial, trial_text, engine)
-    folder, interrupted = _carry_out(options, trial, engine, header, expected, answers)
+    if parts.earlier is not None:
+        parts.earlier.put_back(engine)
+    header = _header(parts, engine)
+    folder, interrupted = _carry_out(parts, engine, header, expected, answers)
     if interrupted:
         print(  # noqa: T201
             f"interrupted; what was recorded is kept in {folder}, and "
@@ -188,14 +195,8 @@ def warm_up(engine: Engine) -> None:
     engine.restore(saved)
 
 
-def _header(
-    options: TrialOptions,
-    rig: Rig,
-    rig_text: str,
-    trial: Trial,
-    trial_text: str,
-    engine: Engine,
-) -> RunHeader:
+def _header(parts: TrialParts, engine: Engine) -> RunHeader:
+    options, rig = parts.options, parts.rig
     controller = options.controller
     if controller == "external":
         controller += " over " + ", ".join(link.name for link in rig.links)
@@ -204,9 +205,9 @@ def _header(
         run=new_run_id(),
         started_utc=utc_now(),
         rig_name=rig.name,
-        trial_name=trial.name,
-        rig_text=rig_text,
-        trial_text=trial_text,
+        trial_name=parts.trial.name,
+        rig_text=parts.rig_text,
+        trial_text=parts.trial_text,
         versions=versions(),
         seed=rig.seed,
         tick=rig.tick,
@@ -214,21 +215,19 @@ def _header(
         pace=options.pace if paced else 0.0,
         controller=controller,
         columns=engine.columns,
-        extra=phases_extra(
-            tuple(phase.name for phase in trial.phases) if options.phases else ()
-        ),
+        extra=parts.extra,
     )
 
 
 def _carry_out(
-    options: TrialOptions,
-    trial: Trial,
+    parts: TrialParts,
     engine: Engine,
     header: RunHeader,
     expected: Forecast,
     answers: Answers,
 ) -> tuple[Path, bool]:
     """Run the script to its end, however that comes; return folder, and whether interrupted."""
+    options, trial, earlier = parts.options, parts.trial, parts.earlier
     external = options.controller == "external"
     with ExitStack() as stack:
         stop = stack.enter_context(StopRequest())
@@ -255,9 +254,14 @@ def _carry_out(
             stop_asked=stop.asked,
         )
         stop.defer(clock.stop)
-        end = _run_script(
-            session, trial_script(session, trial, options.wait, answers), recorder
-        )
+        if earlier is not None:
+            earlier.write(recorder)
+            session.rows_taken = earlier.tick
+            for event in earlier.events:
+                view.take_event(event)
+        progress = earlier.progress if earlier is not None else None
+        script = trial_script(session, trial, options.wait, answers, progress)
+        end = _run_script(session, script, recorder)
         view.look(session)
     return folder, end is RunEnd.INTERRUPTED or stop.asked()
 

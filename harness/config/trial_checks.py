@@ -5,6 +5,7 @@ from __future__ import annotations
 from typing import TYPE_CHECKING
 
 from harness.config.findings import not_one_of, show
+from harness.config.trial_tables import RunTable
 from harness.domain.rig import Action
 
 if TYPE_CHECKING:
@@ -131,6 +132,8 @@ def _models(draft: TrialDraft, rig: Rig) -> None:
         return
     if models not in {None, "given"}:
         draft.given.problem("", f'is not used with models = "{models}"; take it out')
+    elif isinstance(draft.trial.get("models"), RunTable):
+        draft.given.problem("", "is not used with the models of a run; take it out")
     for name in ("output", "load"):
         model = draft.given.get(name)
         if model is None:

@@ -12,6 +12,7 @@ from harness.config.trial_tables import (
     GivenTable,
     ModelTable,
     PhaseTable,
+    RunTable,
     SteadyTable,
     TolerancesTable,
     TrialTable,
@@ -120,12 +121,16 @@ def build_trial(draft: TrialDraft) -> Trial:
     table = parsed(draft.trial, TrialTable)
     steady = parsed(draft.steady, SteadyTable)
     tolerances = parsed(draft.tolerances, TolerancesTable)
+    if isinstance(table.models, RunTable):
+        models, run = ModelSource.RUN, table.models.run
+    else:
+        models, run = ModelSource(table.models), ""
     return Trial(
         name=table.name,
         description=table.description.strip(),
         law=ControlLaw(table.law),
         closed_loop_time=table.closed_loop_time,
-        models=ModelSource(table.models),
+        models=models,
         given=_models(parsed(draft.given, GivenTable)) if draft.given else None,
         settings=SettingsSource(table.settings),
         as_found=_settings(parsed(draft.as_found, AsFoundTable)) if draft.as_found else None,
@@ -142,6 +147,7 @@ def build_trial(draft: TrialDraft) -> Trial:
             offset=tolerances.offset,
         ),
         order_timeout=table.order_timeout,
+        models_run=run,
     )
 
 

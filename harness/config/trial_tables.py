@@ -4,12 +4,28 @@ from __future__ import annotations
 
 from typing import Annotated, Literal
 
-from pydantic import Field
+from pydantic import BeforeValidator, Field
 
 from harness.config.quantities import Change, NonNegativeTime, OpenPercentage, PositiveTime
 from harness.config.rig_tables import Table, Tag
 
 _Part = Annotated[float, Field(gt=0.0, lt=1.0)]
+
+
+class RunTable(Table):
+    """``models = { run = "folder" }``."""
+
+    run: Annotated[str, Field(min_length=1)]
+
+
+_SOURCES = ("identified", "linearised", "given")
+
+
+def _models(value: object) -> object:
+    """Pass a source of models by name, or a run as a table."""
+    if isinstance(value, (dict, RunTable)) or value in _SOURCES:
+        return value
+    raise ValueError('must be "identified", "linearised", "given" or { run = "folder" }')
 
 
 class TrialTable(Table):
@@ -19,7 +35,7 @@ class TrialTable(Table):
     description: str = ""
     law: Literal["P", "PI"]
     closed_loop_time: PositiveTime
-    models: Literal["identified", "linearised", "given"]
+    models: Annotated[str | RunTable, BeforeValidator(_models)]
     settings: Literal["computed", "as found"]
     order_timeout: PositiveTime = 300.0
 

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from enum import StrEnum
 
 from harness.domain.models import ControlLaw, ControllerSettings, LoopModels
@@ -30,6 +30,7 @@ class ModelSource(StrEnum):
     IDENTIFIED = "identified"
     LINEARISED = "linearised"
     GIVEN = "given"
+    RUN = "run"  # an earlier one
 
 
 class SettingsSource(StrEnum):
@@ -137,6 +138,11 @@ class Trial:
         Allowed distance from the prediction.
     order_timeout : float
         Longest wait for an order by prompt or callable to be carried out [wall s].
+    models_run : str
+        The earlier run that the models come from: its folder as the trial file says it, or its
+        id once they are read; empty for none.
+    run_models : dict of str to LoopModels
+        The models of that run by tag of the loop, once they are read.
     """
 
     name: str
@@ -151,3 +157,15 @@ class Trial:
     steady: SteadyRule
     tolerances: Tolerances
     order_timeout: float = 300.0
+    models_run: str = ""
+    run_models: dict[str, LoopModels] = field(default_factory=dict)
+
+    def models_of(self, loop_tag: str) -> LoopModels | None:
+        """Return the models that a loop is given, or None where it has none.
+
+        Parameters
+        ----------
+        loop_tag : str
+            Tag of the loop.
+        """
+        return self.run_models.get(loop_tag) or self.given

@@ -22,11 +22,12 @@ from harness.domain.points import (
     shown_range,
 )
 from harness.domain.run import EventKind
-from harness.domain.trial import Mode, ModelSource, PhaseKind, SettingsSource
+from harness.domain.trial import Mode, ModelSource, Phase, PhaseKind, SettingsSource
 from harness.errors import InvalidRunError
 from harness.runtime.answers import AnyAnswers, PointAnswers
 from harness.runtime.order_words import Order
 from harness.runtime.orders import OrderDesk, Taken
+from harness.runtime.progress import Progress
 from harness.runtime.requests import Advance, Compute
 from harness.runtime.session import require_controllers
 from harness.runtime.trial_words import (
@@ -47,7 +48,7 @@ if TYPE_CHECKING:
     from harness.analysis.plan import PhasePlan
     from harness.domain.models import ControllerSettings
     from harness.domain.rig import Loop
-    from harness.domain.trial import Phase, Trial
+    from harness.domain.trial import Trial
     from harness.runtime.answers import Answers
     from harness.runtime.requests import Request, Script
     from harness.runtime.session import Session
@@ -79,6 +80,7 @@ def trial_script(
     trial: Trial,
     wait: float = WAIT_FOR_CONTROLLER,
     answers: Answers | None = None,
+    progress: Progress | None = None,
 ) -> Script:
     """Return the script of a trial.
 
@@ -92,21 +94,32 @@ def trial_script(
         Longest wait for an external controller to be there, and to take an order [wall s].
     answers : Answers or None
         Where the answers to prompts come from; None for none but the data.
+    progress : Progress or None
+        What an earlier run had got done, and need not be done again; None to begin anew. The
+        session then stands at the end of the last phase done.
 
     Yields
     ------
     Request
         Time to pass, and computations.
     """
-    runner = _TrialRunner(session, trial, wait, answers or AnyAnswers(()))
+    runner = _TrialRunner(session, trial, wait, answers or AnyAnswers(()), progress)
     yield from runner.run()
 
 
 class _TrialRunner:
-    def __init__(self, session: Session, trial: Trial, wait: float, answers: Answers) -> None:
+    def __init__(
+        self,
+        session: Session,
+        trial: Trial,
+        wait: float,
+        answers: Answers,
+        progress: Progress | None,
+    ) -> None:
         self._session = session
         self._trial = trial
         self._wait = wait
+        self._progress = progress or Progress(run="")
         points = [
             PointAnswers(session, acknowledge_point(loop.tag)) for loop in session.rig.loops
         ]
@@ -117,9 +130,16 @@ class _TrialRunner:
         self._works: dict[str, _LoopWork] = {}
 
     def run(self) -> Script:
+        done = self._progress.phases
+        if done:
+            self._recall()
         yield from self._find_controllers()
         for index, phase in enumerate(self._trial.phases):
             work = self._work(phase.loop)
+            if phase.name in done:
+                continue
+            if done and not work.begun:
+                yield from self._take_up(phase, work)
             if phase.mode is Mode.AUTOMATIC and not work.automatic:
                 yield from self._go_automatic(work)
             elif phase.mode is Mode.MANUAL and (work.automatic or not work.begun):
@@ -134,10 +154,49 @@ class _TrialRunner:
         if tag not in self._works:
             loop = self._session.rig.loop(tag)
             linearised = linearised_models(self._session.engine, loop)
-            given = self._trial.given
-            models = given if given is not None else linearised
+            models = self._trial.models_of(tag) or linearised
             self._works[tag] = _LoopWork(loop=loop, linearised=linearised, models=models)
         return self._works[tag]
+
+    # What an earlier run had done.
+
+    def _recall(self) -> None:
+        """Know what the earlier run knew, and have every controller hold its output."""
+        session, progress = self._session, self._progress
+        for phase in self._trial.phases:
+            work = self._work(phase.loop)
+            done = progress.phases.get(phase.name)
+            if done is not None:
+                self._keep(phase, work, done.lead_in, [done.rows], done.end)
+        for tag, work in self._works.items():
+            work.models = progress.models.get(tag, work.models)
+            work.identified = tag in progress.models
+            work.settings = progress.settings.get(tag)
+            # At once, for a controller that reads it here: it must not act on an old order.
+            session.order(
+                work.loop,
+                mode=MANUAL,
+                manual_output=session.engine.output(work.loop.output),
+                settings=work.settings,
+            )
+        names = ", ".join(progress.phases)
+        text = f"taken up again: {names} done in run {progress.run}"
+        session.event(EventKind.NOTE, "run", text, {"run": progress.run})
+
+    def _take_up(self, phase: Phase, work: _LoopWork) -> Generator[Request, Any, None]:
+        """Have a controller that did something else meanwhile hold the output, and wait for rest."""
+        work.begun = True
+        yield from self._go_manual(work)
+        settle = Phase(
+            name=f"before {phase.name}",
+            loop=phase.loop,
+            kind=PhaseKind.SETTLE,
+            mode=Mode.MANUAL,
+            change=0.0,
+            time_limit=max(each.time_limit for each in self._trial.phases),
+        )
+        rows = yield from self._until_steady(settle, work, self._plan(settle, work))
+        work.recent = [np.concatenate(rows)]
 
     # The controller at the other end.
 
@@ -193,7 +252,8 @@ class _TrialRunner:
         if trial.models is ModelSource.IDENTIFIED and not work.identified:
             yield from self._identify(work)
         elif not work.identified:
-            self._tell_models(work, {}, trial.models.value)
+            run = {"run": trial.models_run} if trial.models is ModelSource.RUN else {}
+            self._tell_models(work, {}, trial.models.value, run)
             work.identified = True
         yield from self._settle_settings(work)
         setpoint = self._process_variable_now(work)
@@ -270,9 +330,15 @@ class _TrialRunner:
         source = "identified" if len(fits) == len(PATHS) else "identified in part"
         self._tell_models(work, fits, source if fits else ModelSource.LINEARISED.value)
 
-    def _tell_models(self, work: _LoopWork, fits: dict[str, FittedModel], source: str) -> None:
+    def _tell_models(
+        self,
+        work: _LoopWork,
+        fits: dict[str, FittedModel],
+        source: str,
+        more: dict[str, str] | None = None,
+    ) -> None:
         text, data = models_told(work.models, work.linearised, fits, source)
-        self._session.event(EventKind.MODELS, work.loop.tag, text, data)
+        self._session.event(EventKind.MODELS, work.loop.tag, text, data | (more or {}))
 
     # Phases.
 
@@ -306,7 +372,7 @@ class _TrialRunner:
         )
         rows = taken.rows
         rows += yield from self._until_steady(phase, work, plan)
-        self._keep(phase, work, lead_in, rows)
+        self._keep(phase, work, lead_in, rows, session.tick)
 
     def _plan(self, phase: Phase, work: _LoopWork) -> PhasePlan:
         loop, tick = work.loop, self._session.rig.tick
@@ -384,7 +450,12 @@ class _TrialRunner:
         return rows
 
     def _keep(
-        self, phase: Phase, work: _LoopWork, lead_in: Floats | None, rows: list[Floats]
+        self,
+        phase: Phase,
+        work: _LoopWork,
+        lead_in: Floats | None,
+        rows: list[Floats],
+        end: int,
     ) -> None:
         """Keep what a fit needs: steps in manual with a moment before each."""
         work.recent = [np.concatenate(rows)] if rows else work.recent
@@ -401,7 +472,7 @@ class _TrialRunner:
         kept = np.concatenate((lead_in, *rows))
         value = kept[:, self._columns.index(f"{work.loop.process_variable}.value")]
         record.add(
-            self._session.tick,
+            end,
             kept[:, self._columns.index(f"{valve}.command")],
             (value - span.lower) / span.span,
             len(lead_in),

@@ -64,7 +64,7 @@ CASES = (
         "models unknown",
         'models = "identified"',
         'models = "guessed"',
-        ('6: trial.models: "guessed" must be "identified", "linearised" or "given"',),
+        ('6: trial.models: "guessed" must be "identified", "linearised", "given" or { run = "folder" }',),
     ),
     Case(
         "given models missing",

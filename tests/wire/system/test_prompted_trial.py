@@ -41,7 +41,9 @@ class Operator:
         self.panel, self.answers = bench.folder / "panel.txt", bench.folder / "answers.txt"
         self.panel.touch()
         self.confirms = confirms
+        self.refuses = None  # how many prompts come before the one that is not carried out
         self.asked = []
+        self.port = None
 
     @property
     def prompt(self):
@@ -59,7 +61,10 @@ class Operator:
                 ask = None
             if ask and ask["number"] not in [each["number"] for each in self.asked]:
                 self.asked.append(ask)
-                self.do(ask["order"])
+                if len(self.asked) - 1 == self.refuses:
+                    append(self.answers, "no, typed 8.5")
+                else:
+                    self.do(ask["order"])
             clock.wait_until(clock.now_ns() + 20_000_000)
 
     def do(self, order):
@@ -90,7 +95,7 @@ def append(path, *lines):
 
 
 def start(bench, operator, *arguments):
-    port = bench.free_port()
+    operator.port = port = bench.free_port()
     bench.start_soft_plc("plc", port, "--orders", "none", "--panel", operator.panel)
     answers = ("--answers", operator.answers)
     return bench.start_external("runs", port, "--json", *answers, *arguments)
@@ -146,3 +151,66 @@ def test_an_order_that_nobody_carries_out_makes_the_run_invalid(bench):
     assert "put the block in manual, then set its output to 55.0 %" in reason
     assert "nobody said that it was done, within 1 s" in reason
     assert not operator.prompt.exists()
+
+
+TWO_STEPS = """
+[[phase]]
+name = "setpoint down"
+loop = "LIC-102"
+kind = "setpoint_step"
+mode = "automatic"
+change = "-5 %"
+time_limit = "120 s"
+"""
+
+
+def test_a_run_ended_by_a_wrong_key_is_taken_up_after_its_last_completed_phase(bench):
+    prompted_rig(bench, read_backs=False)
+    bench.trial.write_text(
+        bench.trial.read_text(encoding="utf-8") + TWO_STEPS, encoding="utf-8"
+    )
+    operator = Operator(bench, confirms=True)
+    operator.refuses = 4  # the second setpoint
+    trial = start(bench, operator)
+    operator.serve(trial)
+    assert trial.process.returncode == 3, trial.said + trial.complained
+    first = json.loads(trial.said)
+    assert "answered 'no, typed 8.5'" in first["reasons"][0]
+    first_run = RunFolder.open(bench.run_folder("runs"))
+
+    operator.refuses, operator.asked = None, []
+    again = bench.start(
+        "again", "trial", "--resume", first_run.path, "--out", bench.folder / "again",
+        "--link", "modbus", "--modbus-port", operator.port, "--json",
+        "--answers", operator.answers,
+    )  # fmt: skip
+    operator.serve(again)
+    assert again.process.returncode == 0, again.said + again.complained
+    verdict = json.loads(again.said)
+    assert [phase["verdict"] for phase in verdict["phases"]] == ["pass", "pass"]
+
+    # Put in manual where the plant stands, tuned, transferred, and the step that was missing.
+    asked = [list(ask["order"]) for ask in operator.asked]
+    assert asked == [
+        ["mode", "manual_output"],
+        ["settings"],
+        ["setpoint", "mode"],
+        ["setpoint"],
+    ]
+
+    second_run = RunFolder.open(bench.run_folder("again"))
+    taken_up = int(second_run.header.extra["resumed_at"])
+    assert second_run.header.extra["resumed"] == first_run.header.run
+    old, new = first_run.trace(), second_run.trace()
+    assert new["tick"].tolist() == list(range(len(new["tick"])))  # one record without a gap
+    for column in ("LT-102.true", "FV-101.command", "LIC-102.setpoint"):
+        assert new[column][:taken_up].tolist() == old[column][:taken_up].tolist()
+    # The plant goes on from where it was.
+    level = new["LT-102.true"]
+    assert abs(level[taken_up] - level[taken_up - 1]) < 1e-3
+    up, down = verdict["phases"]
+    for name, metric in up["metrics"].items():
+        before = first["phases"][0]["metrics"][name]
+        assert metric["measured"] == before["measured"]
+        assert metric["predicted_nonlinear"] == before["predicted_nonlinear"]
+    assert down["start"] > taken_up * second_run.header.tick
