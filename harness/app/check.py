@@ -5,9 +5,11 @@ from __future__ import annotations
 import dataclasses
 from typing import TYPE_CHECKING
 
+from harness.app.earlier import with_models_of
 from harness.app.forecast import Forecast, forecast
 from harness.app.loading import read_rig, read_trial
 from harness.app.trial import say_compiling
+from harness.app.trial_parts import run_named
 from harness.domain.points import points_of
 from harness.domain.rig import ModbusServerLink
 from harness.errors import ConfigurationError
@@ -56,6 +58,9 @@ def check(rig_path: Path, trial_path: Path | None, pace: float) -> dict[str, obj
     if trial_path is None:
         return document
     trial, _ = read_trial(trial_path, rig)
+    folder = run_named(trial, trial_path)
+    if folder is not None:
+        trial = with_models_of(trial, rig, folder)
     say_compiling()
     return document | _trial(trial, forecast(rig, trial), pace)
 

@@ -201,13 +201,14 @@ class Earlier:
         for loop in engine.rig.loops:
             setpoint = self.rows[-1, columns.index(f"{loop.tag}.setpoint")]
             engine.set_setpoint(loop.tag, float(setpoint))
-        plant = [i for i, name in enumerate(columns) if name.endswith((".true", ".value"))]
+        # What was transmitted may have been forced in between, for a check before the trial.
+        plant = [i for i, name in enumerate(columns) if name.endswith(".true")]
         off = np.nanmax(np.abs(again[:, plant] - self.rows[:, plant]))
         if not off <= _SAME:
             raise UsageError(
                 f"run {self.data.header.run}: with its own outputs the plant comes {off:.3g} away "
-                "from what was recorded; it was made by another version of this program or with "
-                "forced signals, and cannot be taken up. Start the trial anew"
+                "from what was recorded; it was made by another version of this program, and "
+                "cannot be taken up. Start the trial anew"
             )
 
 
