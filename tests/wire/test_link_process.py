@@ -73,6 +73,7 @@ class Side:
             writes=[request for news in self.news for request in news.writes],
             activity=[each for news in self.news for each in news.activity],
             events=[event for news in self.news for event in news.events],
+            readers={name: who for news in self.news for name, who in news.readers.items()},
         )
 
 
@@ -130,6 +131,25 @@ def test_writes_come_up_stamped_with_peer_value_and_the_image_that_was_read(side
     assert sum(each.requests for each in news.activity) == 2
     assert news.activity[-1].image_tick == 41
     client.close()
+
+
+def test_who_read_a_point_last_comes_up_with_link_and_time(side):
+    first, second = connect(side), connect(side)
+    side.publish(1, LT_2=0.75)
+    read_float(first, LEVEL)
+    read_float(first, COMMAND)
+    before_ns = time.perf_counter_ns()
+    read_float(second, LEVEL)
+    peers = ["{}:{}".format(*client.socket.getsockname()) for client in (first, second)]
+    news = side.drain_until(
+        lambda news: "LT-2" in news.readers and news.readers["LT-2"].peer == peers[1]
+    )
+    assert news.readers["LT-2"].arrival_ns > before_ns
+    assert news.readers["LT-2"].link == "modbus"
+    assert news.readers["FV-1"].peer == peers[0]
+    assert "TICK" not in news.readers
+    first.close()
+    second.close()
 
 
 def test_the_activity_of_a_write_is_never_behind_it(side):
