@@ -123,7 +123,7 @@ def trial_from_text(text: str, name: str, rig: Rig) -> Trial:
     draft = read_trial(text, name)
     check_trial(draft, rig)
     draft.findings.raise_any()
-    return build_trial(draft)
+    return build_trial(draft, rig)
 
 
 def _read(path: Path, what: str) -> str:

@@ -6,6 +6,7 @@ from typing import TYPE_CHECKING
 
 from harness.config.findings import not_one_of, show
 from harness.config.trial_tables import RunTable
+from harness.domain.points import GAIN
 from harness.domain.rig import Action
 
 if TYPE_CHECKING:
@@ -41,7 +42,7 @@ def check_trial(draft: TrialDraft, rig: Rig) -> None:
         _excursions(phases, loop, rig)
         _identification(phases, draft)
     _models(draft, rig)
-    _settings(draft)
+    _settings(draft, rig)
 
 
 def _names(draft: TrialDraft) -> None:
@@ -168,7 +169,7 @@ def _sign(action: Action) -> float:
     return 1.0 if action is Action.REVERSE else -1.0
 
 
-def _settings(draft: TrialDraft) -> None:
+def _settings(draft: TrialDraft, rig: Rig) -> None:
     settings, law = draft.trial.text("settings"), draft.trial.text("law")
     if settings == "as found" and draft.as_found is None:
         draft.trial.problem("settings", '"as found" wants the settings in [as_found]')
@@ -176,7 +177,28 @@ def _settings(draft: TrialDraft) -> None:
         return
     if settings == "computed":
         draft.as_found.problem("", 'is not used with settings = "computed"; take it out')
-    if law == "P" and "integral_time" in draft.as_found.raw:
-        draft.as_found.problem("integral_time", 'has no place with law = "P"; take it out')
-    if law == "PI" and "integral_time" not in draft.as_found.raw:
-        draft.as_found.problem("integral_time", 'is missing; law = "PI" wants one')
+    block = draft.as_found.text("units") == "block"
+    key, other = ("integral", "integral_time") if block else ("integral_time", "integral")
+    if other in draft.as_found.raw:
+        where = "the block's own units" if block else "units of %/% and seconds"
+        draft.as_found.problem(other, f"has no place with {where}; write {key}")
+        return
+    if law == "P" and key in draft.as_found.raw:
+        draft.as_found.problem(key, 'has no place with law = "P"; take it out')
+    if law == "PI" and key not in draft.as_found.raw:
+        draft.as_found.problem(key, 'is missing; law = "PI" wants one')
+    gain = draft.as_found.number("gain")
+    if not block and gain is not None and gain > GAIN.upper:
+        draft.as_found.problem(
+            "gain", f"{draft.as_found.shown('gain')} must be at most {GAIN.upper:g}"
+        )
+    if block and len({rig.loop(tag).block for tag in _tested(draft, rig)}) > 1:
+        draft.as_found.problem(
+            "units", "the loops of this trial have blocks in different units; write them in %/%"
+        )
+
+
+def _tested(draft: TrialDraft, rig: Rig) -> list[str]:
+    """Return the loops that a trial has phases of."""
+    named = {phase.text("loop") for phase in draft.phases}
+    return [loop.tag for loop in rig.loops if loop.tag in named]

@@ -18,7 +18,8 @@ from harness.config.trial_tables import (
     TrialTable,
 )
 from harness.domain.models import ControlLaw, ControllerSettings, LagModel, LoopModels
-from harness.domain.rig import Action
+from harness.domain.points import shown_range
+from harness.domain.rig import Action, Rig
 from harness.domain.trial import (
     Mode,
     ModelSource,
@@ -29,6 +30,7 @@ from harness.domain.trial import (
     Tolerances,
     Trial,
 )
+from harness.tuning.block_units import block_settings
 
 _KEYS = ("format", "trial", "given", "as_found", "phase", "steady", "tolerances")
 
@@ -105,13 +107,15 @@ def read_trial(text: str, name: str) -> TrialDraft:
     )
 
 
-def build_trial(draft: TrialDraft) -> Trial:
+def build_trial(draft: TrialDraft, rig: Rig) -> Trial:
     """Return the trial of a file that has no problem.
 
     Parameters
     ----------
     draft : TrialDraft
         The file, checked.
+    rig : Rig
+        The rig that it is for.
 
     Returns
     -------
@@ -133,7 +137,9 @@ def build_trial(draft: TrialDraft) -> Trial:
         models=models,
         given=_models(parsed(draft.given, GivenTable)) if draft.given else None,
         settings=SettingsSource(table.settings),
-        as_found=_settings(parsed(draft.as_found, AsFoundTable)) if draft.as_found else None,
+        as_found=_settings(parsed(draft.as_found, AsFoundTable), draft, rig)
+        if draft.as_found
+        else None,
         phases=tuple(_phase(parsed(each, PhaseTable)) for each in draft.phases),
         steady=SteadyRule(
             dwell=steady.dwell,
@@ -163,10 +169,15 @@ def _model(table: ModelTable) -> LagModel:
     )
 
 
-def _settings(table: AsFoundTable) -> ControllerSettings:
-    return ControllerSettings(
-        gain=table.gain, integral_time=table.integral_time, action=Action(table.action)
-    )
+def _settings(table: AsFoundTable, draft: TrialDraft, rig: Rig) -> ControllerSettings:
+    action = Action(table.action)
+    if table.units != "block":
+        return ControllerSettings(
+            gain=table.gain, integral_time=table.integral_time, action=action
+        )
+    loop = rig.loop(parsed(draft.phases[0], PhaseTable).loop)
+    measured = shown_range(rig.transmitter(loop.process_variable))
+    return block_settings(table.gain, table.integral, action, loop.block, measured)
 
 
 def _phase(table: PhaseTable) -> Phase:

@@ -56,10 +56,20 @@ class GivenTable(Table):
 
 
 class AsFoundTable(Table):
-    """``[as_found]``."""
+    """``[as_found]``.
 
-    gain: Annotated[float, Field(gt=0.0, le=1000.0)]
+    Parameters
+    ----------
+    gain : float
+        As ``units`` says; in %/% at most 1000 [%/%, or unit of the block].
+    integral : float or None
+        Integral action as the block shows it; None where it is off [unit of the block].
+    """
+
+    units: Literal["%/%", "block"] = "%/%"
+    gain: Annotated[float, Field(gt=0.0, le=1e6)]
     integral_time: PositiveTime | None = None
+    integral: Annotated[float, Field(gt=0.0, le=1e6)] | None = None
     action: Literal["direct", "reverse"]
 
 

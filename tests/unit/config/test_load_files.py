@@ -12,7 +12,14 @@ from hypothesis import strategies as st
 
 from harness.config.load import load_rig, load_trial, rig_from_text, trial_from_text
 from harness.domain.models import ControlLaw, ControllerSettings, LagModel, LoopModels
-from harness.domain.orders import LoopOrders
+from harness.domain.orders import (
+    BlockForm,
+    BlockUnits,
+    GainUnit,
+    LoopOrders,
+    OrderBy,
+    OrderKind,
+)
 from harness.domain.rig import (
     Action,
     Characteristic,
@@ -233,6 +240,56 @@ dead_time = "0 s"
         output=LagModel(gain=1.5, time_constants=(118.0, 90.0), dead_time=3.0),
         load=LagModel(gain=0.7, time_constants=(118.0,), dead_time=0.0),
     )
+
+
+def test_settings_as_found_in_the_blocks_own_units():
+    rig_text = RIG_TEXT.replace(
+        'watchdog = "10 s"',
+        'watchdog = "10 s"\nblock = { gain_unit = "proportional band", time_unit = "repeats per minute" }',
+    )
+    rig = rig_from_text(rig_text, "rig.toml")
+    text = TRIAL_TEXT.replace('"computed"', '"as found"')
+    text += """
+[as_found]
+units = "block"
+gain = 80
+integral = 0.4
+action = "reverse"
+"""
+    found = trial_from_text(text, "trial.toml", rig).as_found
+    # 100 / 80 % and 60 / 0.4 per minute
+    assert found == ControllerSettings(gain=1.25, integral_time=150.0, action=Action.REVERSE)
+
+
+def test_models_of_an_earlier_run():
+    text = TRIAL_TEXT.replace('"identified"', '{ run = "runs/of-last-week" }')
+    trial = trial_from_text(text, "trial.toml", RIG)
+    assert trial.models is ModelSource.RUN
+    assert trial.models_run == "runs/of-last-week"
+    assert trial.models_of("LIC-102") is None  # until that run is read
+
+
+def test_orders_and_block_in_their_long_forms():
+    text = RIG_TEXT.replace(
+        'watchdog = "10 s"',
+        'watchdog = "10 s"\norders = { setpoint = "prompt", settings = "callable", function = "bench.tools:take" }\n'
+        'block = { form = "parallel", gain_unit = "counts", output_counts = 4095, setpoint_resolution = "5 mm" }',
+    )
+    loop = rig_from_text(text, "rig.toml").loops[0]
+    assert loop.orders == LoopOrders(
+        setpoint=OrderBy.PROMPT, settings=OrderBy.CALLABLE, function="bench.tools:take"
+    )
+    assert loop.block == BlockUnits(
+        form=BlockForm.PARALLEL,
+        gain_unit=GainUnit.COUNTS,
+        output_counts=4095,
+        setpoint_resolution=0.005,
+    )
+    short = rig_from_text(
+        RIG_TEXT.replace('watchdog = "10 s"', 'watchdog = "10 s"\norders = "prompt"'),
+        "rig.toml",
+    )
+    assert {short.loops[0].orders.way(kind) for kind in OrderKind} == {OrderBy.PROMPT}
 
 
 def test_missing_file(tmp_path):

@@ -64,7 +64,9 @@ CASES = (
         "models unknown",
         'models = "identified"',
         'models = "guessed"',
-        ('6: trial.models: "guessed" must be "identified", "linearised", "given" or { run = "folder" }',),
+        (
+            '6: trial.models: "guessed" must be "identified", "linearised", "given" or { run = "folder" }',
+        ),
     ),
     Case(
         "given models missing",
@@ -138,6 +140,28 @@ CASES = (
         'settings = "computed"',
         'settings = "as found"\n[as_found]\ngain = 0\nintegral_time = "120 s"\naction = "reverse"',
         ("9: as_found.gain: 0 must be above 0.0",),
+    ),
+    Case(
+        "gain as found too large",
+        'settings = "computed"',
+        'settings = "as found"\n[as_found]\ngain = 2000\nintegral_time = "120 s"\naction = "reverse"',
+        ("9: as_found.gain: 2000 must be at most 1000",),
+    ),
+    Case(
+        "integral time in the block's units",
+        'settings = "computed"',
+        'settings = "as found"\n[as_found]\nunits = "block"\ngain = 80\nintegral_time = "120 s"\naction = "reverse"',
+        (
+            "11: as_found.integral_time: has no place with the block's own units; write integral",
+        ),
+    ),
+    Case(
+        "integral without the block's units",
+        'settings = "computed"',
+        'settings = "as found"\n[as_found]\ngain = 80\nintegral = 2.0\naction = "reverse"',
+        (
+            "10: as_found.integral: has no place with units of %/% and seconds; write integral_time",
+        ),
     ),
     Case(
         "no phases",
