@@ -48,6 +48,16 @@ class Panel:
         The loop, for the block's form, units and resolution.
     measured : Range
         Range of the process variable in the unit shown.
+    mode : int
+        MANUAL or AUTOMATIC [-].
+    setpoint : float
+        Setpoint; not a number until it has begun [unit].
+    output : float
+        Output in manual; not a number until it has begun [%].
+    gain : float
+        Gain as the block shows it [unit of the block].
+    integral : float or None
+        Integral action as the block shows it; None for off [unit of the block].
     """
 
     loop: Loop
