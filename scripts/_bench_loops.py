@@ -26,7 +26,7 @@ if TYPE_CHECKING:
 
 HOUR = 36_000  # [ticks]
 _ROWS_A_BLOCK = 1_000  # of the record [ticks]
-_LOOP, _LEVEL, _VALVE = "LIC-902", "LT-902", "FV-901"
+_LOOP, _VALVE = "LIC-902", "FV-901"
 
 
 def engine_builtin(rig: Rig, ticks: int) -> LoopRun:
@@ -57,16 +57,21 @@ def engine_builtin(rig: Rig, ticks: int) -> LoopRun:
 
 
 class _PythonController:
-    """A PI block as somebody would write it in Python, on the transmitted value."""
+    """A PI block as somebody would write it in Python, behind the engine's port."""
 
     def __init__(self, rig: Rig) -> None:
-        self._span = rig.transmitter(_LEVEL).range.span
-        self._setpoint = (rig.loop(_LOOP).initial_setpoint or 0.0) / self._span
         self._integral: float | None = None
         self._output = rig.valve(_VALVE).initial_output
 
-    def __call__(self, level: float) -> float:
-        error = self._setpoint - level / self._span
+    def scan(
+        self,
+        process_variable: float,
+        setpoint: float,
+        mode: int,
+        manual_output: float,
+        bad: bool,
+    ) -> float:
+        error = setpoint - process_variable
         if self._integral is None:  # the first scan is in manual
             self._integral = self._output - GAIN * error
             return self._output
@@ -81,14 +86,13 @@ class _PythonController:
 
 def engine_python(rig: Rig, ticks: int) -> LoopRun:
     """Run the loop in the engine, closed by a PI block in Python, without a record."""
+    from harness.engine.drive import Drive  # noqa: PLC0415
     from harness.engine.engine import Engine  # noqa: PLC0415
 
-    engine = Engine(rig, built_in=False)
-    controller = _PythonController(rig)
+    engine = Engine(rig)
+    drive = Drive(engine, _LOOP, _PythonController(rig))
     start = time.perf_counter()
-    for _ in range(ticks):
-        engine.set_output(_VALVE, controller(engine.measured(_LEVEL)))
-        engine.advance(1)
+    drive.advance(ticks)
     wall_time = time.perf_counter() - start
     upper, lower = engine.levels().tolist()
     return LoopRun(
@@ -101,14 +105,13 @@ def engine_python(rig: Rig, ticks: int) -> LoopRun:
 
 def engine_python_recorded(rig: Rig, ticks: int) -> LoopRun:
     """Run the loop as in ``engine_python``, with every tick written to a record on disk."""
-    import numpy as np  # noqa: PLC0415
-
     from harness.domain.run import Closing, RunEnd, RunHeader  # noqa: PLC0415
+    from harness.engine.drive import Drive  # noqa: PLC0415
     from harness.engine.engine import Engine  # noqa: PLC0415
     from harness.recording.writer import Recorder  # noqa: PLC0415
 
-    engine = Engine(rig, built_in=False)
-    controller = _PythonController(rig)
+    engine = Engine(rig)
+    drive = Drive(engine, _LOOP, _PythonController(rig))
     header = RunHeader(
         run="benchmark", started_utc="", rig_name=rig.name, trial_name="", rig_text="",
         trial_text="", versions={}, seed=rig.seed, tick=rig.tick, clock="virtual", pace=0.0,
@@ -118,12 +121,7 @@ def engine_python_recorded(rig: Rig, ticks: int) -> LoopRun:
         start = time.perf_counter()
         writer = Recorder.create(Path(folder), header, time.perf_counter_ns)
         for first in range(0, ticks, _ROWS_A_BLOCK):
-            rows = np.empty((min(_ROWS_A_BLOCK, ticks - first), len(engine.columns)))
-            for i in range(rows.shape[0]):
-                engine.set_output(_VALVE, controller(engine.measured(_LEVEL)))
-                rows[i] = engine.row()
-                engine.advance(1)
-            writer.rows(0, first, rows, None)
+            writer.rows(0, first, drive.record(min(_ROWS_A_BLOCK, ticks - first)), None)
         writer.close(Closing(end=RunEnd.COMPLETE, reason="", last_tick=ticks - 1, rows=ticks))
         wall_time = time.perf_counter() - start
     upper, lower = engine.levels().tolist()

@@ -68,7 +68,7 @@ class Engine:
         self.parameters = arrays.parameters
         self.state = np.zeros(arrays.state_size)
         self.counters = np.zeros(place.N_COUNTERS, dtype=np.int64)
-        self._work = np.zeros(arrays.work_size)
+        self.work = np.zeros(arrays.work_size)
         self._no_rows = np.empty((0, len(self.columns)))
         self._stride = int(self.table[place.LOOP_STATE_STRIDE])
         self._valves = {valve.tag: i for i, valve in enumerate(rig.valves)}
@@ -96,7 +96,7 @@ class Engine:
             self.parameters,
             self.state,
             self.counters,
-            self._work,
+            self.work,
             self._no_rows,
             ticks,
         )
@@ -120,7 +120,7 @@ class Engine:
             self.parameters,
             self.state,
             self.counters,
-            self._work,
+            self.work,
             rows,
             ticks,
         )
@@ -424,11 +424,11 @@ class Engine:
 
     def _start_instruments(self) -> None:
         """Let the damping of every transmitter stand at its true value, and take sample 0."""
-        sample(self.table, self.parameters, self.state, self._work, 0, False)
+        sample(self.table, self.parameters, self.state, self.work, 0, False)
         n = len(self.rig.transmitters)
         true, damped = int(self.table[at.AT_TRUE]), int(self.table[at.AT_DAMPED])
         self.state[damped : damped + n] = self.state[true : true + n]
-        sample(self.table, self.parameters, self.state, self._work, 0, False)
+        sample(self.table, self.parameters, self.state, self.work, 0, False)
 
     def _start_loop(self, tag: str) -> None:
         loop = self.rig.loop(tag)

@@ -20,9 +20,7 @@ Table = NDArray[np.uint32]
 
 
 @inlined_kernel
-def _scan_loops(
-    table: Table, parameters: Floats, state: Floats, tick: int, stride: int
-) -> None:
+def scan_loops(table: Table, parameters: Floats, state: Floats, tick: int, stride: int) -> None:
     """Execute the built-in block of every loop whose scan it is, and apply delayed outputs."""
     for loop in range(table[at.N_LOOPS]):
         link = table[place.AT_LOOP_LINKS] + loop * place.LOOP_LINKS
@@ -145,7 +143,7 @@ def advance(
     recording = rows.shape[0] > 0
     for i in range(ticks):
         tick = counters[place.TICK]
-        _scan_loops(table, parameters, state, tick, stride)
+        scan_loops(table, parameters, state, tick, stride)
         if recording:
             write_row(table, parameters, state, rows[i], stride)
         smooth = smooth_tick(table, parameters, state, work)
