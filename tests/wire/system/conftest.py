@@ -55,14 +55,14 @@ def slow_bench_rig():
 class Program:
     """A run of the command, its output in files; its group is its own, as from a shell."""
 
-    def __init__(self, folder, name, *arguments, before="", stdout=None):
+    def __init__(self, folder, name, *arguments, before="", stdout=None, stdin=None):
         self.out, self.err = folder / f"{name}.out", folder / f"{name}.err"
         code = f"import sys\n{before}\nfrom harness.cli import main\nsys.exit(main())"
         with self.out.open("wb") as out, self.err.open("wb") as err:
             self.process = subprocess.Popen(
                 [sys.executable, "-c", code, *map(str, arguments)],
                 cwd=folder,
-                stdin=subprocess.DEVNULL,
+                stdin=subprocess.DEVNULL if stdin is None else stdin,
                 stdout=stdout or out,
                 stderr=err,
                 start_new_session=True,

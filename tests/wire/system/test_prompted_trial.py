@@ -7,7 +7,9 @@ reads the prompts, types at the panel, and answers in a file.
 from __future__ import annotations
 
 import json
+import os
 import re
+import sys
 
 import pytest
 
@@ -151,6 +153,41 @@ def test_an_order_that_nobody_carries_out_makes_the_run_invalid(bench):
     assert "put the block in manual, then set its output to 55.0 %" in reason
     assert "nobody said that it was done, within 1 s" in reason
     assert not operator.prompt.exists()
+
+
+@pytest.mark.skipif(sys.platform == "win32", reason="Windows has no pseudo-terminals in Python")
+def test_enter_in_a_terminal_answers(bench):
+    import pty  # noqa: PLC0415  not there on Windows
+
+    prompted_rig(bench, read_backs=False)
+    panel = bench.folder / "panel.txt"
+    panel.touch()
+    port = bench.free_port()
+    bench.start_soft_plc("plc", port, "--orders", "none", "--panel", panel)
+    keyboard, terminal = pty.openpty()
+    paces = ("--pace", "20", "--controller-pace", "20")
+    trial = bench.start_trial(
+        "runs", "--controller", "external", *paces, "--link", "modbus", "--modbus-port", port,
+        stdin=terminal,
+    )  # fmt: skip
+    for prompt, typed in (
+        ("put the block in manual, then set its output to 55.0 %;", ("MAN", "OUT 55")),
+        ("set proportional band ", ("GAIN {}", "INT {}")),
+        ("then put the block in automatic;", ("SP {}", "AUTO")),
+        ("set the setpoint to 0.266 m", ("SP 0.266",)),
+    ):
+        trial.wait_for(prompt)
+        (line,) = (line for line in trial.said.splitlines() if prompt in line)
+        assert "press Enter here when it is done" in line
+        numbers = iter(re.findall(r"(?:band|time|setpoint to) ([\d.]+)", line))
+        append(
+            panel, *(each.format(next(numbers, "")) if "{" in each else each for each in typed)
+        )
+        bench.pause(0.15)  # until a scan has taken it
+        os.write(keyboard, b"\n")
+    assert trial.ended() == 0, trial.said + trial.complained
+    os.close(keyboard)
+    os.close(terminal)
 
 
 TWO_STEPS = """
