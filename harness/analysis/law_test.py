@@ -18,6 +18,10 @@ from harness.domain.verdict import Outcome
 if TYPE_CHECKING:
     from collections.abc import Sequence
 
+    from numpy.typing import NDArray
+
+    Floats = NDArray[np.float64]
+
 _FEWEST_SCANS = 4  # after the step: a jump and a slope [-]
 _ROOM = (
     0.2  # relative; an integral that starts a scan earlier or later is 0.1 at a tenth of Ti [-]
@@ -25,6 +29,7 @@ _ROOM = (
 _LEAST = 0.05  # of the jump expected, below which nothing moved [-]
 _SECONDS_PER_MINUTE = 60.0
 _WHOLE = 100.0
+_SLOWEST = 100.0  # times the integral time ordered [-]
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -85,19 +90,32 @@ def law_found(step: LawStep) -> LawFound | None:
     step : LawStep
         The step.
     """
-    if len(step.outputs) < _FEWEST_SCANS:
+    times, outputs = _from_the_jump(step)
+    if len(outputs) < _FEWEST_SCANS:
         return None
-    outputs = np.asarray(step.outputs, dtype=np.float64)
     if step.limited:
         return LawFound(gain=float(outputs[0] / step.error), integral_time=math.nan)
-    slope, start = np.polyfit(np.asarray(step.times, dtype=np.float64), outputs, 1)
+    slope, start = (float(each) for each in np.polyfit(times, outputs, 1))
     # The integral of the first scan is in its output already (backward Euler).
-    gain = float((start - slope * step.scan) / step.error)
-    rate = float(slope / step.error)
-    still = abs(slope) * step.times[-1] < _LEAST * abs(start) * step.scan / max(
-        step.integral_time, step.scan
-    )
-    return LawFound(gain=gain, integral_time=math.inf if still else gain / rate)
+    jump = start - slope * step.scan
+    # Slower than a hundred times the time ordered is not told from none.
+    slowest = _SLOWEST * step.integral_time
+    still = abs(slope) * slowest < abs(jump) or not math.isfinite(step.integral_time)
+    return LawFound(gain=jump / step.error, integral_time=math.inf if still else jump / slope)
+
+
+def _from_the_jump(step: LawStep) -> tuple[Floats, Floats]:
+    """Return the scans from the first that moved, in time since that one.
+
+    A controller that reads in several requests may have read its input a tick before the image
+    that it read last.
+    """
+    times = np.asarray(step.times, dtype=np.float64)
+    outputs = np.asarray(step.outputs, dtype=np.float64)
+    moved = np.flatnonzero(np.abs(outputs) > _LEAST * step.gain * abs(step.error))
+    first = int(moved[0]) if len(moved) else len(outputs)
+    times, outputs = times[first:], outputs[first:]
+    return times - (times[0] if len(times) else 0.0), outputs
 
 
 def check_law(tag: str, step: LawStep, *, units: bool) -> TagCheck:
@@ -137,17 +155,17 @@ def check_law(tag: str, step: LawStep, *, units: bool) -> TagCheck:
             f"by {_WHOLE * step.outputs[0]:+.3g} %, away from where it had to go",
             look_at="direct and reverse action of the block, against what valve and plant do",
         )
-    cause = _wrong_unit(found, step) if units else None
-    if cause is None:
+    names = (_wrong_gain(found, step) or _wrong_time(found, step)) if units else []
+    if not names:
         return TagCheck(tag=tag, outcome=Outcome.PASS, evidence=f"acts as it should: {facts}")
-    name, look = cause
     return TagCheck(
         tag=tag,
         outcome=Outcome.FAIL,
-        mistake=name,
+        mistake=names[0],
         evidence=f"{tag} was ordered a gain of {step.gain:.4g} %/% and an integral time of "
-        f"{step.integral_time:.4g} s; it acts with {facts}",
-        look_at=look,
+        f"{step.integral_time:.4g} s; it acts with {'at least ' if step.limited else ''}{facts}",
+        look_at="the unit of that setting in the controller, and how it is converted",
+        others=tuple(dict.fromkeys(names[1:])),
     )
 
 
@@ -160,23 +178,29 @@ def _facts(found: LawFound) -> str:
     return f"a gain of {found.gain:.4g} %/% and {time}"
 
 
-def _wrong_unit(found: LawFound, step: LawStep) -> tuple[str, str] | None:
-    """Return the name of a wrong unit of gain or time, and where to look."""
-    look = "the unit of that setting in the controller, and how it is converted"
-    if not _near(found.gain, step.gain):
-        gains = (
-            ("gain taken for a proportional band", _WHOLE / step.gain),
-            (
-                "gain taken for percent of output per engineering unit",
-                step.gain * step.span / _WHOLE,
-            ),
-            ("gain taken for output per engineering unit", step.gain * step.span),
-            ("gain per engineering unit, not per percent of span", step.gain / step.span),
-            ("gain in percent", step.gain / _WHOLE),
-            ("gain in percent", step.gain * _WHOLE),
-        )
-        called = next((name for name, gain in gains if _near(found.gain, gain)), "wrong gain")
-        return called, look
+def _wrong_gain(found: LawFound, step: LawStep) -> list[str]:
+    """Return the names of the mistakes that explain a gain, the likeliest first."""
+    gains = (
+        ("gain taken for a proportional band", _WHOLE / step.gain),
+        ("gain taken for percent of output per unit", step.gain * step.span / _WHOLE),
+        ("gain taken for output per unit", step.gain * step.span),
+        ("gain per unit, not per percent of span", step.gain / step.span),
+        ("gain divided by a hundred", step.gain / _WHOLE),
+        ("gain times a hundred", step.gain * _WHOLE),
+    )
+    if step.limited:  # the output went as far as it could: the gain is at least this
+        if step.gain >= (1.0 - _ROOM) * found.gain:
+            return []
+        return [name for name, gain in gains if gain >= found.gain] or ["wrong gain"]
+    if _near(found.gain, step.gain):
+        return []
+    return [name for name, gain in gains if _near(found.gain, gain)] or ["wrong gain"]
+
+
+def _wrong_time(found: LawFound, step: LawStep) -> list[str]:
+    """Return the names of the mistakes that explain an integral time, the likeliest first."""
+    if math.isnan(found.integral_time) or _near(found.integral_time, step.integral_time):
+        return []
     times = (
         ("integral time in minutes for seconds", step.integral_time * _SECONDS_PER_MINUTE),
         ("integral time in seconds for minutes", step.integral_time / _SECONDS_PER_MINUTE),
@@ -187,10 +211,8 @@ def _wrong_unit(found: LawFound, step: LawStep) -> tuple[str, str] | None:
         ("integral time taken for repeats per second", 1.0 / step.integral_time),
         ("no integral action", math.inf),
     )
-    if math.isnan(found.integral_time) or _near(found.integral_time, step.integral_time):
-        return None
-    name = next((name for name, time in times if _near(found.integral_time, time)), None)
-    return name or "wrong integral time", look
+    names = [name for name, time in times if _near(found.integral_time, time)]
+    return names or ["wrong integral time"]
 
 
 def _near(found: float, wanted: float) -> bool:

@@ -390,6 +390,7 @@ def _other_range(case: TransmitterCase) -> Iterator[Hypothesis]:
 
 MISTAKES: tuple[Callable[[TransmitterCase], Iterator[Hypothesis]], ...] = (
     _word_order,
+    _swapped,
     _address_base,
     _signedness,
     _half_value,
@@ -400,7 +401,6 @@ MISTAKES: tuple[Callable[[TransmitterCase], Iterator[Hypothesis]], ...] = (
     _inverted,
     _units,
     _decimals,
-    _swapped,
     _clamped,
     _stale,
     _lagging,

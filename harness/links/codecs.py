@@ -170,7 +170,8 @@ class ItemCodec:
         Returns
         -------
         float
-            Value within the point's range [unit].
+            Value within the point's range; a read-back may also be not a number, which says
+            that the controller has no value [unit].
 
         Raises
         ------
@@ -179,6 +180,8 @@ class ItemCodec:
         """
         value = self._value_of(self._raw(data))
         limits = self._point.range
+        if self._point.kind is PointKind.READ_BACK and math.isnan(value):
+            return value  # the controller says that it has no value
         if not self._accept_low <= value <= self._accept_high:  # NaN is not either
             raise ValueRefusedError(
                 f"{self._point.name} = {value:g} {limits.unit}".rstrip()

@@ -38,6 +38,7 @@ if TYPE_CHECKING:
     from harness.links.client import FieldClient
 
 _SECONDS_PER_MINUTE = 60.0
+_LEAST, _MOST = -0.1, 1.1  # beyond what any current of a transmitter shows [fraction of span]
 _STUCK = 7.0  # counts of a heartbeat that stands still [-]
 
 
@@ -157,10 +158,10 @@ def _swapped(setup: Setup) -> Setup:
 
 
 def _wrong_range(setup: Setup) -> Setup:
-    """Scale the counts of the process variable onto twice its range."""
+    """Scale the counts of the process variable onto more than its range."""
     setup = _item(None, Scaling.COUNTS)(setup)
     limits = setup.range
-    wide = replace(limits, upper=limits.lower + 2.0 * limits.span)
+    wide = replace(limits, upper=limits.lower + 1.6 * limits.span)
     return replace(
         setup,
         points=tuple(
@@ -396,7 +397,7 @@ MISTAKES = (
     ),
     Mistake(
         name="gain-per-unit",
-        found_as="gain taken for output per engineering unit",
+        found_as="gain taken for output per unit",
         apply=_gain_per_unit,
     ),
     Mistake(
@@ -449,11 +450,28 @@ class MistakenClient:
 
     async def read(self, names: Sequence[str]) -> dict[str, Reading]:
         """Return the named points, garbled."""
-        readings = await self._client.read(names)
+        readings = {
+            name: self._believed(name, reading)
+            for name, reading in (await self._client.read(names)).items()
+        }
         for name, change in self._setup.reading.items():
             if name in readings:
                 readings[name] = change(readings[name])
         return readings
+
+    def _believed(self, name: str, reading: Reading) -> Reading:
+        """Return a reading as a program has it that knows nothing of a current's bands.
+
+        What lies far outside every current is no failed transmitter, but a number taken wrong;
+        most blocks go on with it.
+        """
+        limits = next(point.range for point in self._setup.points if point.name == name)
+        far = (
+            not _LEAST <= limits.to_fraction(reading.value) <= _MOST
+        )  # not a number is not far
+        if reading.quality is Quality.BAD and far and math.isfinite(reading.value):
+            return Reading(value=reading.value, quality=Quality.GOOD)
+        return reading
 
     async def write(self, values: Mapping[str, float]) -> None:
         """Write values, garbled."""

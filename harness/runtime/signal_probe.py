@@ -7,9 +7,12 @@ images of the last ticks, and compares what was said with the registers of that 
 from __future__ import annotations
 
 import math
+import time
 from collections import deque
 from dataclasses import dataclass, field
 from typing import TYPE_CHECKING, Any
+
+import numpy as np
 
 from harness.analysis.signal_case import Said, TransmitterCase
 from harness.domain.points import heartbeat_point, read_back_point
@@ -18,6 +21,7 @@ from harness.domain.signals import PointKind
 from harness.links.codecs import register_count
 from harness.links.port import Snapshot
 from harness.links.registers import RegisterBank
+from harness.runtime.clock import NS_PER_S
 from harness.runtime.requests import Advance
 
 if TYPE_CHECKING:
@@ -30,12 +34,11 @@ if TYPE_CHECKING:
 
     Wait = Generator[Request, Any, None]
 
-import numpy as np
-
 _IMAGES_KEPT = (
     2000  # of the last ticks: the slowest controller reads more often than that [ticks]
 )
 _SCANS_KEPT = 400  # of the controller, for its period and delay [-]
+_WALL_SHARE = 0.9  # of a span, for ticks that are not quite regular [-]
 _FEWEST_SCANS = 3  # for a period [-]
 _REFUSALS_KEPT = 20  # different texts [-]
 
@@ -102,6 +105,38 @@ class _Image:
 
 
 @dataclass(slots=True)
+class Span:
+    """A span of plant time that is over no sooner than it should be on the wall.
+
+    A session that was held up catches up with its ticks; its controller cannot.
+
+    Parameters
+    ----------
+    session : Session
+        The session.
+    ticks : int
+        Length [ticks].
+    """
+
+    session: Session
+    ticks: int
+    _first: int = field(init=False)
+    _start_ns: int = field(init=False)
+
+    def __post_init__(self) -> None:
+        self._first = self.session.tick
+        self._start_ns = time.perf_counter_ns()
+
+    @property
+    def over(self) -> bool:
+        """Return whether it is over."""
+        if self.session.tick - self._first < self.ticks:
+            return False
+        wall = self.ticks * self.session.rig.tick / max(self.session.pace, 1e-9)
+        return (time.perf_counter_ns() - self._start_ns) / NS_PER_S >= _WALL_SHARE * wall
+
+
+@dataclass(slots=True)
 class SignalProbe:
     """Forces, waits and listens, for one loop's controller.
 
@@ -152,8 +187,19 @@ class SignalProbe:
         ticks : int
             How many [ticks].
         """
-        for _ in range(ticks):
+        span = self.span(ticks)
+        while not span.over:
             yield from self.step()
+
+    def span(self, ticks: int) -> Span:
+        """Return a span of time that begins now.
+
+        Parameters
+        ----------
+        ticks : int
+            Its length [ticks].
+        """
+        return Span(session=self.session, ticks=ticks)
 
     def until_read(self, tick: int, patience: int) -> Generator[Request, Any, bool]:
         """Wait until the controller has acted on an image, or the patience is out.
@@ -170,9 +216,8 @@ class SignalProbe:
         bool
             Whether it has.
         """
-        for _ in range(patience):
-            if self.read_tick >= tick:
-                return True
+        span = self.span(patience)
+        while self.read_tick < tick and not span.over:
             yield from self.step()
         return self.read_tick >= tick
 
@@ -224,8 +269,8 @@ class SignalProbe:
 
     # What the controller says.
 
-    def mapped(self, name: str) -> bool:
-        """Return whether the controller has ever read a point back, or could over its link.
+    def heard_of(self, name: str) -> bool:
+        """Return whether the controller has ever read a point back.
 
         Parameters
         ----------

@@ -264,3 +264,17 @@ def test_full_scale_of_an_unsigned_type_is_no_mark():
 def test_a_command_is_good_whatever_its_value():
     codec = make(Encoding.FLOAT32, PERCENT, PointKind.COMMAND)
     assert codec.decode_reading(struct.pack(">f", -10.0)) == (-10.0, Quality.GOOD)
+
+
+def test_a_read_back_may_say_that_there_is_no_value():
+    point = Point(
+        name="LT-2.RB",
+        kind=PointKind.READ_BACK,
+        range=Range(lower=-3.4e38, upper=3.4e38, unit="m"),
+        writable=True,
+        description="",
+    )
+    codec = ItemCodec(point, RegisterItem(point="LT-2.RB", address=0, encoding=Encoding.FLOAT32))
+    assert math.isnan(codec.decode_written(struct.pack(">f", math.nan)))
+    with pytest.raises(ValueRefusedError):
+        codec.decode_written(struct.pack(">f", math.inf))
