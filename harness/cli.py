@@ -209,6 +209,11 @@ def _add_trial(commands: argparse._SubParsersAction[argparse.ArgumentParser]) ->
         help="pace at which an external controller's own clock is scaled; it must be the rig's",
     )
     parser.add_argument(
+        "--no-preflight",
+        action="store_true",
+        help="begin without trying an external controller first",
+    )
+    parser.add_argument(
         "--wait",
         type=_above_zero,
         metavar="SECONDS",
@@ -413,6 +418,7 @@ def _trial(options: argparse.Namespace) -> int:
             order_timeout=options.order_timeout,
             models_from=options.models_from,
             resume=options.resume,
+            preflight=not options.no_preflight,
             **waiting,
         )
     )
@@ -436,6 +442,11 @@ def _refuse_idle_options(options: argparse.Namespace, *, external: bool) -> None
         )
     if external:
         return
+    if options.no_preflight:
+        raise UsageError(
+            "trial: --no-preflight with --controller builtin: the built-in controller is never "
+            "tried first; leave the option out, or take --controller external"
+        )
     for name in (
         "link", "host", "modbus_port", "opcua_port", "controller_pace", "wait", "answers",
         "order_timeout",

@@ -73,6 +73,8 @@ class TrialOptions:
         Whether standard output is kept for the document.
     wait : float
         Longest wait for an external controller to be there, and to take an order [wall s].
+    preflight : bool
+        Whether an external controller is tried before the first phase.
     answers : Path or None
         File to which answers to prompts are appended; None takes them from the terminal.
     order_timeout : float or None
@@ -94,6 +96,7 @@ class TrialOptions:
     links: LinkChoice = field(default_factory=LinkChoice)
     json: bool = False
     wait: float = WAIT_FOR_CONTROLLER
+    preflight: bool = True
     answers: Path | None = None
     order_timeout: float | None = None
     models_from: Path | None = None
@@ -260,7 +263,9 @@ def _carry_out(
             for event in earlier.events:
                 view.take_event(event)
         progress = earlier.progress if earlier is not None else None
-        script = trial_script(session, trial, options.wait, answers, progress)
+        script = trial_script(
+            session, trial, options.wait, answers, progress, preflight=options.preflight
+        )
         end = _run_script(session, script, recorder)
         view.look(session)
     return folder, end is RunEnd.INTERRUPTED or stop.asked()

@@ -111,6 +111,7 @@ class _Preflight:
         self.loop = loop
         self._steps = ControllerChecks(session=session, probe=self.probe, desk=desk)
         # Now, while nothing waits for a tick: it takes a moment.
+        self._before: ControllerSettings | None = None
         self._plant_gain = linearised_models(session.engine, loop).output.gain
 
     def run(self) -> Checks:
@@ -135,6 +136,8 @@ class _Preflight:
             )
         checks += steps.heartbeat()
         yield from steps.restore()
+        if self._before is not None:
+            self.session.order(self.loop, settings=self._before)
         return checks
 
     # What it reads.
@@ -212,6 +215,7 @@ class _Preflight:
         time = _INTEGRAL_SCANS * scan
         units = self._takes_settings()
         if units:
+            self._before = self._settings()
             settings = ControllerSettings(gain=_GAIN, integral_time=time, action=loop.action)
             session.order(loop, settings=settings)
         middle = LIVE_ZERO_MA + SPAN_MA * _MIDDLE
@@ -281,6 +285,19 @@ class _Preflight:
             if len(found) == _LAW_SCANS:
                 break
         return found
+
+    def _settings(self) -> ControllerSettings | None:
+        """Return the settings ordered before; None where there were none."""
+        image = self.session.image()
+        gain, time = (
+            image[name][1]
+            for name in (gain_point(self.loop.tag), integral_time_point(self.loop.tag))
+        )
+        if not gain > 0.0:
+            return None
+        return ControllerSettings(
+            gain=gain, integral_time=time or None, action=self.loop.action
+        )
 
     def _takes_settings(self) -> bool:
         """Return whether gain and integral time go over the link that the controller uses."""

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -12,6 +12,7 @@ from harness.analysis.loop_models import linearised_models
 from harness.analysis.plan import plan_phase
 from harness.analysis.steady import SteadyDetector
 from harness.analysis.step_record import LEAD_IN, StepRecord
+from harness.analysis.valve_check import refusal_cause
 from harness.controllers.block import AUTOMATIC, MANUAL
 from harness.domain.models import FittedModel, LoopModels
 from harness.domain.orders import OrderBy
@@ -25,8 +26,10 @@ from harness.domain.run import EventKind
 from harness.domain.trial import Mode, ModelSource, Phase, PhaseKind, SettingsSource
 from harness.errors import InvalidRunError
 from harness.runtime.answers import AnyAnswers, PointAnswers
+from harness.runtime.controller_checks import sentence
 from harness.runtime.order_words import Order
 from harness.runtime.orders import OrderDesk, Taken
+from harness.runtime.preflight import preflight as preflight_of
 from harness.runtime.progress import Progress
 from harness.runtime.requests import Advance, Compute
 from harness.runtime.session import require_controllers
@@ -81,6 +84,8 @@ def trial_script(
     wait: float = WAIT_FOR_CONTROLLER,
     answers: Answers | None = None,
     progress: Progress | None = None,
+    *,
+    preflight: bool = False,
 ) -> Script:
     """Return the script of a trial.
 
@@ -97,6 +102,8 @@ def trial_script(
     progress : Progress or None
         What an earlier run had got done, and need not be done again; None to begin anew. The
         session then stands at the end of the last phase done.
+    preflight : bool
+        Whether an external controller is tried first.
 
     Yields
     ------
@@ -104,6 +111,7 @@ def trial_script(
         Time to pass, and computations.
     """
     runner = _TrialRunner(session, trial, wait, answers or AnyAnswers(()), progress)
+    runner.preflight = preflight and session.external
     yield from runner.run()
 
 
@@ -128,12 +136,16 @@ class _TrialRunner:
         )
         self._columns = [column.name for column in session.engine.columns]
         self._works: dict[str, _LoopWork] = {}
+        self.preflight = False
+        self._held: set[str] = set()  # in manual since the pre-flight
 
     def run(self) -> Script:
         done = self._progress.phases
         if done:
             self._recall()
         yield from self._find_controllers()
+        if self.preflight:
+            yield from self._try_controllers()
         for index, phase in enumerate(self._trial.phases):
             work = self._work(phase.loop)
             if phase.name in done:
@@ -218,8 +230,17 @@ class _TrialRunner:
                 yield Advance(ticks=1)
                 waited += 1
 
+    def _try_controllers(self) -> Generator[Request, Any, None]:
+        """See before anything is timed whether each controller reads, writes and acts as it should."""
+        for tag in dict.fromkeys(phase.loop for phase in self._trial.phases):
+            yield from preflight_of(self._session, self._session.rig.loop(tag), self._desk)
+            self._held.add(tag)
+
     def _nobody(self, tag: str, output: str) -> str:
         session = self._session
+        cause = refusal_cause((session.last_refusal,))
+        if cause is not None:
+            return f"loop {sentence(replace(cause, tag=tag))}. Nobody wrote {output} otherwise"
         links = ", ".join(link.name for link in session.rig.links)
         seen = "nobody is connected"
         if session.connected:
@@ -238,6 +259,7 @@ class _TrialRunner:
         """Order manual at the output that stands now; at the start only to who is not shown it."""
         orders = work.loop.orders
         shown = orders.mode is OrderBy.LINK and orders.manual_output is OrderBy.LINK
+        shown = shown or work.loop.tag in self._held
         if work.begun or (self._session.external and not shown):
             output = self._session.engine.output(work.loop.output)
             order = Order(loop=work.loop.tag, mode=MANUAL, manual_output=output)
