@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass, field, replace
+from dataclasses import dataclass, field
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -26,7 +26,6 @@ from harness.domain.run import EventKind
 from harness.domain.trial import Mode, ModelSource, Phase, PhaseKind, SettingsSource
 from harness.errors import InvalidRunError
 from harness.runtime.answers import AnyAnswers, PointAnswers
-from harness.runtime.controller_checks import sentence
 from harness.runtime.order_words import Order
 from harness.runtime.orders import OrderDesk, Taken
 from harness.runtime.preflight import preflight as preflight_of
@@ -238,15 +237,15 @@ class _TrialRunner:
 
     def _nobody(self, tag: str, output: str) -> str:
         session = self._session
-        cause = refusal_cause((session.last_refusal,))
-        if cause is not None:
-            return f"loop {sentence(replace(cause, tag=tag))}. Nobody wrote {output} otherwise"
         links = ", ".join(link.name for link in session.rig.links)
         seen = "nobody is connected"
         if session.connected:
             seen = f"connected: {', '.join(session.connected.values())}"
         if session.last_refusal:
             seen += f"; last refused: {session.last_refusal}"
+            cause = refusal_cause((session.last_refusal,))
+            if cause is not None:
+                seen += f" ({cause.mistake}: look at {cause.look_at})"
         return (
             f"loop {tag}: no controller wrote {output} over {links} within {self._wait:g} s; {seen}. "
             "Start the controller, check host, port, unit and the address that it writes to, or "

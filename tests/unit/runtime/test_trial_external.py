@@ -158,8 +158,9 @@ def test_a_controller_that_never_writes_is_told_with_what_was_seen_of_it(case):
     assert 120 <= case.session.tick <= 122  # 3 s of the wall
     assert str(caught.value) == (
         "loop LIC-2: no controller wrote FV-1 over modbus within 3 s; connected: 10.0.0.5:4711; "
-        "last refused: 10.0.0.5:4711: address 140 is not in the map. Start the controller, check "
-        "host, port, unit and the address that it writes to, or give it longer with --wait"
+        "last refused: 10.0.0.5:4711: address 140 is not in the map (address base or wrong "
+        "address: look at whether the controller counts registers from 0 or from 1, and the length "
+        "of its block). Start the controller, check host, port, unit and the address that it writes to, or give it longer with --wait"
     )
 
 
