@@ -165,3 +165,38 @@ def _step(kind: OrderKind, order: Order, loop: Loop, measured: Range) -> str:
         case OrderKind.SETTINGS:
             words = order.typed.words if order.typed else ""
             return f"set {words} ({loop.block.form.value} form, {loop.action.value} action)"
+
+
+def ordered(order: Order) -> dict[str, Any]:
+    """Return what is ordered, by the names that a session knows.
+
+    Parameters
+    ----------
+    order : Order
+        The order.
+    """
+    return {kind.value: getattr(order, kind.value) for kind in order.kinds}
+
+
+def order_facts(order: Order) -> dict[str, object]:
+    """Return an order as JSON-able facts, with the numbers to type for settings.
+
+    Parameters
+    ----------
+    order : Order
+        The order.
+    """
+    facts: dict[str, object] = {
+        kind.value: getattr(order, kind.value)
+        for kind in order.kinds
+        if kind is not OrderKind.SETTINGS
+    }
+    typed = order.typed
+    if typed is not None:
+        facts["settings"] = {
+            "gain": typed.gain,
+            "gain_unit": typed.gain_unit,
+            "integral": typed.integral,
+            "integral_unit": typed.integral_unit,
+        }
+    return facts
