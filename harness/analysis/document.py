@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
+from harness.analysis.bench_quality import bench_quality, exchange_summary
 from harness.domain.points import shown_range
 from harness.domain.run import EventKind
 from harness.tuning.forms import gain_engineering, proportional_band, repeats_per_minute
@@ -76,6 +77,16 @@ def verdict_document(run: RunScore) -> dict[str, object]:
         "loops": {tag: _loop(run, tag) for tag in _loops_told(data)},
         "phases": [_phase(data, verdict) for verdict in run.verdicts],
         "lateness": _lateness(data),
+        "preflight": _preflight(data),
+        "exchanges": exchange_summary(data.exchanges, data.rig.tick),
+    }
+
+
+def _preflight(data: RunData) -> dict[str, object]:
+    """Return what was found out about each loop's controller before the first phase."""
+    return {
+        event.subject: {"tick": event.tick, "text": event.text} | event.data
+        for event in data.events_of(EventKind.PREFLIGHT)
     }
 
 
@@ -124,9 +135,14 @@ def _loop(run: RunScore, tag: str) -> dict[str, object]:
     }
     if tag in run.loops:
         score = run.loops[tag]
+        quality = bench_quality(
+            score.log.read.tolist(), score.log.acted.tolist(), data.rig.tick
+        )
         document["controller"] = {
             "period": _number(score.log.period * data.rig.tick),
+            "jitter_p95": _number(quality.jitter),
             "delay": _number(score.log.delay * data.rig.tick),
+            "missed_scans": quality.missed,
             "scans": len(score.log.read),
             "longest_hold": score.log.longest_hold * data.rig.tick,
         }

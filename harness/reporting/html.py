@@ -7,6 +7,7 @@ from importlib.resources import files
 from typing import TYPE_CHECKING
 
 from harness.reporting.markup import Markup, element, escaped, joined, table
+from harness.reporting.report_bench import bench
 from harness.reporting.report_facts import conditions, loop_sections
 from harness.reporting.report_front import head_block, summary, tested, title_block
 from harness.reporting.report_phases import phase_sections
@@ -51,6 +52,7 @@ def render_report(
         _section("Conditions", conditions(document, header)),
         _section("Models and tuning", loop_sections(document)),
         _section("Timing", timing(document)),
+        *_bench(document),
         _section("Phases", phase_sections(document, curves)),
         _section("Events", event_table(events, header.tick)),
         _section("Cautions", _cautions()),
@@ -62,6 +64,12 @@ def render_report(
         f"<title>{escaped(title)}</title>\n<style>\n{style}{_page_foot(header)}</style>\n</head>\n"
         f"<body>\n<main>\n{joined(body)}</main>\n</body>\n</html>\n"
     )
+
+
+def _bench(document: dict[str, object]) -> list[Markup]:
+    """Return the section on the bench, where there was one."""
+    told = bench(document)
+    return [_section("Bench", told)] if told else []
 
 
 def _section(title: str, content: Markup, css: str = "") -> Markup:

@@ -84,6 +84,10 @@ def _scan(loop: Mapping[str, object]) -> Iterator[tuple[str, str]]:
     yield "Period, mean", _seconds(number(measured, "period"))
     if asked is not None:
         yield "Period as the rig file has it", f"{asked:g} s"
+    if "jitter_p95" in measured:
+        yield "Jitter, 95 of 100 within", _seconds(number(measured, "jitter_p95"))
+    if "missed_scans" in measured:
+        yield "Scans missed", f"{number(measured, 'missed_scans') or 0:.0f}"
     yield "Sample to output, median", _seconds(number(measured, "delay"))
     yield "Longest time without a new output", _seconds(number(measured, "longest_hold"))
     yield "Scans with an effect", f"{number(measured, 'scans') or 0:.0f}"

@@ -14,6 +14,7 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
+from harness.analysis.bench_quality import BenchQuality, bench_quality
 from harness.analysis.signal_case import Said, TransmitterCase
 from harness.domain.points import heartbeat_point, read_back_point
 from harness.domain.rig import Encoding, ModbusServerLink
@@ -39,63 +40,7 @@ _IMAGES_KEPT = (
 )
 _SCANS_KEPT = 400  # of the controller, for its period and delay [-]
 _WALL_SHARE = 0.9  # of a span, for ticks that are not quite regular [-]
-_FEWEST_SCANS = 3  # for a period [-]
 _REFUSALS_KEPT = 20  # different texts [-]
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class BenchQuality:
-    """How a controller scans, as its exchanges show it.
-
-    Parameters
-    ----------
-    period : float
-        Median time from scan to scan; not a number for less than three scans [s].
-    jitter : float
-        95th percentile of the distance of a period from the median [s].
-    delay : float
-        Median time from the image that a scan read to its output [s].
-    missed : int
-        Scans that were left out: periods of twice the median and more, counted by scans [-].
-    scans : int
-        Scans seen [-].
-    """
-
-    period: float
-    jitter: float
-    delay: float
-    missed: int
-    scans: int
-
-
-def bench_quality(read: list[int], acted: list[int], tick: float) -> BenchQuality:
-    """Return how a controller scans.
-
-    Parameters
-    ----------
-    read, acted : list of int
-        Tick of the image that each scan read, and from which its output acted [ticks].
-    tick : float
-        Step of the rig [s].
-
-    Returns
-    -------
-    BenchQuality
-        Period, jitter, delay and missed scans.
-    """
-    if len(read) < _FEWEST_SCANS:
-        nan = math.nan
-        return BenchQuality(period=nan, jitter=nan, delay=nan, missed=0, scans=len(read))
-    gaps = np.diff(np.array(read, dtype=np.float64))
-    median = float(np.median(gaps))
-    missed = int(np.sum(np.maximum(np.round(gaps / max(median, 1.0)) - 1.0, 0.0)))
-    return BenchQuality(
-        period=median * tick,
-        jitter=float(np.percentile(np.abs(gaps - median), 95.0)) * tick,
-        delay=float(np.median(np.array(acted) - np.array(read))) * tick,
-        missed=missed,
-        scans=len(read),
-    )
 
 
 @dataclass(slots=True)
