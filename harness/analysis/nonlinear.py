@@ -286,7 +286,7 @@ def _root_within(rising: Callable[[float], float], low: float, high: float) -> f
 
 
 def settings_of(data: RunData, loop: Loop) -> dict[int, ControllerSettings]:
-    """Return the settings ordered in a run, by tick.
+    """Return the settings ordered in a run, by the tick of their order.
 
     Parameters
     ----------
@@ -300,7 +300,8 @@ def settings_of(data: RunData, loop: Loop) -> dict[int, ControllerSettings]:
         if event.subject == loop.tag:
             ordered = event.data
             integral_time = ordered.get("integral_time")
-            found[event.tick] = ControllerSettings(
+            since = int(str(ordered.get("since", event.tick)))
+            found[since] = ControllerSettings(
                 gain=float(str(ordered["gain"])),
                 integral_time=None if integral_time is None else float(str(integral_time)),
                 action=Action(str(ordered["action"])),

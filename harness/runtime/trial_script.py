@@ -315,6 +315,8 @@ class _TrialRunner:
             "integral_time": settings.integral_time,
             "action": settings.action.value,
             "by": taken.by.value,
+            # The block had them before it was known to, and its last scan in manual used them.
+            "since": taken.asked,
         }
         ti = settings.integral_time
         text = f"gain {settings.gain:.4g} %/%, " + (f"Ti {ti:.4g} s" if ti else "no integral")
