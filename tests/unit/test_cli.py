@@ -39,7 +39,7 @@ def outcome(arguments):
     [
         ([], "required: COMMAND"),
         (["nonsense"], "invalid choice: 'nonsense'"),
-        (["trial", RIG], "required: TRIAL"),
+        (["trial", RIG], "it wants a rig file and a trial file"),
         (["control", RIG], "required: --link"),
         (["trial", RIG, TRIAL, "--pace", "0"], '--pace: "0" is not a finite number above 0'),
         (["trial", RIG, TRIAL, "--pace", "inf"], '"inf" is not a finite number'),
