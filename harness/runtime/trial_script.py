@@ -308,7 +308,8 @@ class _TrialRunner:
                 "reduced": model_document(synthesis.reduced),
             }
         taken = yield from self._desk.give(Order(loop=work.loop.tag, settings=settings))
-        work.recent += taken.rows
+        if taken.by is not OrderBy.LINK:
+            work.recent += taken.rows  # minutes may have passed, and the level drifted
         work.settings = settings = taken.order.settings or settings
         data |= {
             "gain": settings.gain,
