@@ -71,6 +71,7 @@ class _LoopWork:
     settings: ControllerSettings | None = None
     automatic: bool = False
     begun: bool = False
+    hold: float | None = None  # output of a run that is taken up, until it is ordered
     identified: bool = False
     recent: list[Floats] = field(default_factory=list)
     output_record: StepRecord = field(default_factory=StepRecord)
@@ -143,7 +144,7 @@ class _TrialRunner:
         if done:
             self._recall()
         yield from self._find_controllers()
-        if self.preflight:
+        if self.preflight and not done:  # phases were completed with this controller
             yield from self._try_controllers()
         for index, phase in enumerate(self._trial.phases):
             work = self._work(phase.loop)
@@ -183,12 +184,11 @@ class _TrialRunner:
             work.models = progress.models.get(tag, work.models)
             work.identified = tag in progress.models
             work.settings = progress.settings.get(tag)
-            # At once, for a controller that reads it here: it must not act on an old order.
+            # At once, for a controller that reads it here: it must not act on an old order. Where
+            # the output is when the controller is found may be its own idea by then.
+            work.hold = session.engine.output(work.loop.output)
             session.order(
-                work.loop,
-                mode=MANUAL,
-                manual_output=session.engine.output(work.loop.output),
-                settings=work.settings,
+                work.loop, mode=MANUAL, manual_output=work.hold, settings=work.settings
             )
         names = ", ".join(progress.phases)
         text = f"taken up again: {names} done in run {progress.run}"
@@ -261,6 +261,7 @@ class _TrialRunner:
         shown = shown or work.loop.tag in self._held
         if work.begun or (self._session.external and not shown):
             output = self._session.engine.output(work.loop.output)
+            output, work.hold = output if work.hold is None else work.hold, None
             order = Order(loop=work.loop.tag, mode=MANUAL, manual_output=output)
             yield from self._desk.give(order)
         work.automatic = False
