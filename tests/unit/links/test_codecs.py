@@ -274,7 +274,9 @@ def test_a_read_back_may_say_that_there_is_no_value():
         writable=True,
         description="",
     )
-    codec = ItemCodec(point, RegisterItem(point="LT-2.RB", address=0, encoding=Encoding.FLOAT32))
+    codec = ItemCodec(
+        point, RegisterItem(point="LT-2.RB", address=0, encoding=Encoding.FLOAT32)
+    )
     assert math.isnan(codec.decode_written(struct.pack(">f", math.nan)))
     with pytest.raises(ValueRefusedError):
         codec.decode_written(struct.pack(">f", math.inf))
