@@ -91,6 +91,7 @@ def build_parser() -> argparse.ArgumentParser:
     _add_model(commands)
     _add_serve(commands)
     _add_control(commands)
+    _add_signals(commands)
     _add_trial(commands)
     _add_score(commands)
     add_fit(commands)
@@ -188,6 +189,31 @@ def _add_faults(parser: argparse.ArgumentParser) -> None:
         parser.add_argument(name, type=kind, default=default, help=argparse.SUPPRESS)
     parser.add_argument("--fault-reversed", action="store_true", help=argparse.SUPPRESS)
     parser.add_argument("--mistake", metavar="NAME", help=argparse.SUPPRESS)
+
+
+def _add_signals(commands: argparse._SubParsersAction[argparse.ArgumentParser]) -> None:
+    parser = commands.add_parser(
+        "signals", help="check every signal between rig and controller", epilog=_CAUTION
+    )
+    parser.add_argument("rig", type=Path, metavar="RIG", help="rig file")
+    parser.add_argument("--out", type=Path, default=Path("runs"), metavar="FOLDER")
+    parser.add_argument(
+        "--wait",
+        type=_above_zero,
+        default=30.0,
+        metavar="SECONDS",
+        help="how long to wait for the controller (default 30)",
+    )
+    parser.add_argument(
+        "--answers",
+        type=Path,
+        metavar="FILE",
+        help="take what the controller shows from lines appended to this file",
+    )
+    _add_pace(parser, 1.0)
+    _add_links(parser)
+    _add_json(parser)
+    parser.set_defaults(run=_signals)
 
 
 def _add_trial(commands: argparse._SubParsersAction[argparse.ArgumentParser]) -> None:
@@ -385,6 +411,12 @@ def _serve(options: argparse.Namespace) -> int:
             json=options.json,
         )
     )
+
+
+def _signals(options: argparse.Namespace) -> int:
+    from harness.app.signals import signals_command  # noqa: PLC0415  kept out of --help
+
+    return signals_command(options, _link_choice(options))
 
 
 def _control(options: argparse.Namespace) -> int:

@@ -84,7 +84,7 @@ def exchange_summary(
     Parameters
     ----------
     exchanges : sequence of (int, Exchange)
-        Writes, each with the tick at which it was latched.
+        Writes, each with the tick at which it was latched [ticks].
     tick : float
         Step of the rig [s].
 

@@ -73,7 +73,7 @@ def check_transmitter(case: TransmitterCase) -> TagCheck:
         if all(_matches(reading, said, case) for said in spoken)
     ]
     if readings:
-        return _failures(case, readings)
+        return _clipped(case, readings, spoken) or _failures(case, readings)
     fits = _fits(case, spoken)
     if not fits:
         return TagCheck(
@@ -96,6 +96,37 @@ def check_transmitter(case: TransmitterCase) -> TagCheck:
         evidence=f"the controller {best.text}: {_heard(case, spoken)}",
         look_at=best.look_at,
         others=tuple(rivals)[:_MOST_OTHERS],
+    )
+
+
+def _clipped(
+    case: TransmitterCase, readings: Sequence[Hypothesis], spoken: Sequence[Said]
+) -> TagCheck | None:
+    """Return the finding that the ends are cut off though the map shows them; else None."""
+    limits = case.point.range
+    whole = next(right_readings(case))
+    if all(_matches(whole, said, case) for said in spoken):
+        return None
+    shows_all = any(
+        all(
+            abs(reading.predict(said) - limits.from_fraction(said.fraction))
+            <= case.tolerance * limits.span
+            for said in spoken
+        )
+        for reading in right_readings(case)
+        if reading.exact
+    )
+    if not shows_all:
+        return None
+    cut = readings[0]
+    return TagCheck(
+        tag=case.point.name,
+        outcome=Outcome.FAIL,
+        mistake=_CLAMPED,
+        evidence=f"the controller stops at the ends of the range: {_heard(case, spoken)}",
+        look_at="the limits of the input's scaling, or the register that it reads: a measurement "
+        "reaches from -1.25 to 103.125 % (NAMUR NE 43)",
+        others=(f"{cut.text}, whose type ends there",),
     )
 
 
@@ -138,7 +169,9 @@ def _failures(case: TransmitterCase, readings: Sequence[Hypothesis]) -> TagCheck
     tag, limits = case.point.name, case.point.range
     notes: list[str] = []
     wrong: list[str] = []
+    last = math.nan  # said at the last point that was no failure
     for said in case.points:
+        last = last if said.band.failed else said.number
         told = f"{said.number:.4g} {limits.unit}" if math.isfinite(said.number) else "no value"
         where = f"at {said.current_ma:g} mA"
         if said.band.undefined:
@@ -149,6 +182,8 @@ def _failures(case: TransmitterCase, readings: Sequence[Hypothesis]) -> TagCheck
             continue
         if any(_hides(reading, said, case) for reading in readings):
             notes.append(f"{where} the register's type cannot show that the transmitter failed")
+        elif said.number == last:
+            notes.append(f"{where} it holds the value that it had before")
         else:
             wrong.append(f"{told} ({100 * limits.to_fraction(said.number):.4g} %) {where}")
     if wrong:

@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING
 from harness.app.earlier import with_models_of
 from harness.app.forecast import Forecast, forecast
 from harness.app.loading import read_rig, read_trial
+from harness.app.loop_facts import loop_facts
 from harness.app.trial import say_compiling
 from harness.app.trial_parts import run_named
 from harness.domain.points import points_of
@@ -53,6 +54,7 @@ def check(rig_path: Path, trial_path: Path | None, pace: float) -> dict[str, obj
         "rig": rig.name,
         "tick": rig.tick,
         "loops": [loop.tag for loop in rig.loops],
+        "loop_facts": loop_facts(rig),
         "links": [_link(link, rig) for link in rig.links],
     }
     if trial_path is None:

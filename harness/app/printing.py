@@ -6,7 +6,8 @@ from typing import TYPE_CHECKING
 
 from rich.text import Text
 
-from harness.reporting.document import named_parts, number, numbers, part, parts, text
+from harness.reporting.document import named_parts, number, numbers, part, parts, text, texts
+from harness.reporting.signals_report import loop_words, scan_words, signals_table
 from harness.reporting.tables import plain_table, verdict_table
 from harness.reporting.terminal import make_console
 from harness.reporting.words import duration, figure, shown_unit
@@ -51,6 +52,8 @@ def print_check(document: dict[str, object]) -> None:
         _say(console, f"link {text(link, 'name')}: {at}")
         if parts(link, "map"):
             console.print(_register_map(parts(link, "map")))
+    for tag, loop in named_parts(document, "loop_facts").items():
+        _say(console, f"loop {tag}: {loop_words(loop)}")
     phases = parts(document, "phases")
     if not phases:
         return
@@ -62,6 +65,32 @@ def print_check(document: dict[str, object]) -> None:
     words = f"about {duration(total)} of plant time"
     words += "" if pace == 1.0 else f", {duration(total / pace)} at pace {pace:g}"
     _say(console, f"{words}; seconds in virtual time")
+
+
+def print_signals(document: dict[str, object]) -> None:
+    """Print what a check of signals found.
+
+    Parameters
+    ----------
+    document : dict
+        From ``harness.app.signals.signals``.
+    """
+    console = make_console()
+    _print_loops(console, document)
+    console.print(signals_table(document))
+    for reason in texts(document, "reasons"):
+        _say(console, reason)
+    _say(console, f"{text(document, 'verdict').upper()}  {text(document, 'rig')}, signals")
+    _say(console, f"report: {text(document, 'folder')}/report.html")
+
+
+def _print_loops(console: Console, document: dict[str, object]) -> None:
+    """Print what is to be known of each loop, and how its controller was seen to scan."""
+    for tag, loop in named_parts(document, "loops").items():
+        _say(console, f"loop {tag}: {loop_words(loop)}")
+        measured = scan_words(part(part(document, "controllers"), tag))
+        if measured:
+            _say(console, f"loop {tag}: {measured}")
 
 
 def print_model(document: dict[str, object]) -> None:

@@ -39,7 +39,7 @@ def render_junit(document: Mapping[str, object]) -> str:
         The verdict document.
     """
     root = ET.Element(
-        "testsuites", name=_clean(f"{text(document, 'rig')} {text(document, 'trial')}")
+        "testsuites", name=clean(f"{text(document, 'rig')} {text(document, 'trial')}")
     )
     _add_run(root, document)
     for phase in parts(document, "phases"):
@@ -66,28 +66,28 @@ def _add_run(root: ET.Element, document: Mapping[str, object]) -> None:
 def _add_phase(root: ET.Element, phase: Mapping[str, object]) -> None:
     start, end = number(phase, "start"), number(phase, "end")
     name = text(phase, "name")
-    suite = ET.SubElement(root, "testsuite", name=_clean(name))
+    suite = ET.SubElement(root, "testsuite", name=clean(name))
     if start is not None and end is not None:
         suite.set("time", f"{end - start:.3f}")
-    place = _clean(f"{text(phase, 'loop')}.{name}")
+    place = clean(f"{text(phase, 'loop')}.{name}")
     metrics = named_parts(phase, "metrics")
     for title, metric in metrics.items():
-        case = ET.SubElement(suite, "testcase", name=_clean(title), classname=place)
+        case = ET.SubElement(suite, "testcase", name=clean(title), classname=place)
         _add_outcome(case, outcome_of(text(metric, "verdict")), _metric_words(metric))
     if not metrics:
-        case = ET.SubElement(suite, "testcase", name=_clean(name), classname=place)
+        case = ET.SubElement(suite, "testcase", name=clean(name), classname=place)
         outcome = outcome_of(text(phase, "verdict") or "shown")
         _add_outcome(case, outcome, "; ".join(texts(phase, "findings")) or str(outcome))
     findings = texts(phase, "findings")
     if findings:
-        ET.SubElement(suite, "system-out").text = _clean("\n".join(findings))
+        ET.SubElement(suite, "system-out").text = clean("\n".join(findings))
     _count(suite)
 
 
 def _add_outcome(case: ET.Element, outcome: Outcome, words: str) -> None:
     element = ELEMENTS.get(outcome)
     if element is not None:
-        ET.SubElement(case, element, message=_clean(words), type=str(outcome))
+        ET.SubElement(case, element, message=clean(words), type=str(outcome))
 
 
 def _metric_words(metric: Mapping[str, object]) -> str:
@@ -113,5 +113,12 @@ def _count(suite: ET.Element) -> None:
         suite.set(kind, str(sum(case.find(element) is not None for case in cases)))
 
 
-def _clean(words: str) -> str:
+def clean(words: str) -> str:
+    """Return a text with nothing in it that XML does not allow.
+
+    Parameters
+    ----------
+    words : str
+        The text.
+    """
     return NOT_XML.sub("\N{REPLACEMENT CHARACTER}", words)

@@ -74,7 +74,7 @@ def found_words(check: Mapping[str, object]) -> str:
             words += f". The same points are explained by: {', '.join(others)}"
         words += f". Look at {text(check, 'look_at')}"
     notes = texts(check, "notes")
-    return ". ".join((words, *notes)) + "."
+    return ". ".join((words, *(note[:1].upper() + note[1:] for note in notes))) + "."
 
 
 def _disturbance(moved: Mapping[str, object]) -> str:

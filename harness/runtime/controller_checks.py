@@ -6,7 +6,7 @@ import math
 from dataclasses import asdict, dataclass, field, replace
 from typing import TYPE_CHECKING, Any
 
-from harness.analysis.signal_case import TagCheck, ValvePoint
+from harness.analysis.signal_case import TagCheck, ValvePoint, band_of
 from harness.analysis.signal_check import check_transmitter
 from harness.analysis.valve_check import refusal_cause
 from harness.controllers.block import MANUAL
@@ -119,6 +119,9 @@ class ControllerChecks:
         """
         probe = self.probe
         yield from probe.until_read(since + SETTLE * probe.scan, PATIENCE * probe.scan)
+        if all(band_of(ma).failed or band_of(ma).undefined for ma in currents.values()):
+            yield from probe.wait(SETTLE * probe.scan)  # there is no right value to wait for
+            return {name: probe.said(name, since, ma) for name, ma in currents.items()}
         for _ in range(PATIENCE):
             heard = {name: probe.said(name, since, ma) for name, ma in currents.items()}
             cases = (

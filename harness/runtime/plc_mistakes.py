@@ -474,7 +474,7 @@ class MistakenClient:
         return reading
 
     async def write(self, values: Mapping[str, float]) -> None:
-        """Write values, garbled."""
+        """Write values, garbled; see `FieldClient.write` [unit]."""
         garbled = dict(values)
         for name, change in self._setup.writing.items():
             if name in garbled:

@@ -91,6 +91,10 @@ class SignalProbe:
         Who carries it out.
     loop : Loop
         The loop whose controller is asked.
+    refused : deque of str
+        What the rig has refused since this was last emptied, each text once.
+    heartbeats : set of float
+        Every count of the heartbeat that was seen [-].
     """
 
     session: Session

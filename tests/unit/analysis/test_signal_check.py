@@ -209,6 +209,34 @@ def test_a_register_that_cannot_show_a_failure_is_no_fault_of_the_controller():
     assert "cannot show" in check.notes[0]
 
 
+def test_ends_cut_off_are_told_where_another_register_shows_them():
+    """The map shows the tag in float32 too, so that nothing need be lost."""
+    points = []
+    for current in CURRENTS:
+        registers = registers_of(current, WIDE) | registers_of(current, FLOAT)
+        said = scaled(registers_at(registers, 20, Encoding.UINT16), WIDE, METRES)
+        points.append(Said(current_ma=current, said=said, registers=registers))
+    case = TransmitterCase(
+        point=LEVEL, items=(FLOAT, WIDE), neighbours=(), points=tuple(points)
+    )
+    check = check_transmitter(case)
+    assert check.mistake == "clamped ends"
+    assert "uint16 at 20" in check.others[0]
+    assert check_transmitter(replace(case, items=(WIDE,))).outcome is Outcome.PASS
+
+
+def test_a_controller_that_holds_its_last_value_on_failure_is_noted():
+    held = 1.5 * (20.75 - 4) / 16
+    case = case_of(
+        FLOAT,
+        lambda _, i: value(i) if 3.6 < i < 21 else held,
+        currents=(*CURRENTS, 20.75, *FAILURES),
+    )
+    check = check_transmitter(case)
+    assert check.outcome is Outcome.PASS
+    assert "holds the value" in check.notes[-1]
+
+
 def test_bands_of_namur_ne_43():
     """NAMUR NE 43: measurement 3.8 to 20.5 mA, failure at most 3.6 or at least 21.0 mA."""
     told = {
