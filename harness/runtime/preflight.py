@@ -41,7 +41,7 @@ from harness.runtime.controller_checks import (
     controller_facts,
     require_passed,
 )
-from harness.runtime.signal_probe import SignalProbe
+from harness.runtime.signal_probe import LEAST_PATIENCE, SignalProbe
 
 if TYPE_CHECKING:
     from collections.abc import Generator
@@ -226,8 +226,11 @@ class _Preflight:
         yield from probe.until_read(order + SETTLE * probe.scan, PATIENCE * probe.scan)
         checks = []
         if probe.heard_of(mode_point(loop.tag)):
-            said = probe.said(mode_point(loop.tag), order, LIVE_ZERO_MA + SPAN_MA)
-            checks.append(check_transmitter(probe.case(mode_point(loop.tag), [said])))
+            heard = yield from self._steps.listen(
+                {mode_point(loop.tag): LIVE_ZERO_MA + SPAN_MA}, order
+            )
+            case = probe.case(mode_point(loop.tag), list(heard.values()))
+            checks.append(check_transmitter(case))
         sign = 1.0 if loop.action is Action.REVERSE else -1.0
         before = session.engine.output(loop.output)
         since = probe.force(loop.process_variable, middle - sign * SPAN_MA * _ERROR)
@@ -272,7 +275,7 @@ class _Preflight:
         found: list[tuple[float, float]] = []
         last = -1
         first = 0
-        span = probe.span((_LAW_SCANS + PATIENCE) * probe.scan)
+        span = probe.span((_LAW_SCANS + PATIENCE) * probe.scan, least=LEAST_PATIENCE)
         while not span.over:
             yield from probe.step()
             read = session.watches[loop.tag].read_tick

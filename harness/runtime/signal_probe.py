@@ -39,6 +39,7 @@ _IMAGES_KEPT = (
     2000  # of the last ticks: the slowest controller reads more often than that [ticks]
 )
 _SCANS_KEPT = 400  # of the controller, for its period and delay [-]
+LEAST_PATIENCE = 0.5  # a busy machine holds up a controller for a tenth of that [wall s]
 _WALL_SHARE = 0.9  # of a span, for ticks that are not quite regular [-]
 _REFUSALS_KEPT = 20  # different texts [-]
 
@@ -61,10 +62,13 @@ class Span:
         The session.
     ticks : int
         Length [ticks].
+    least : float
+        Least length, whatever the pace [wall s].
     """
 
     session: Session
     ticks: int
+    least: float = 0.0
     _first: int = field(init=False)
     _start_ns: int = field(init=False)
 
@@ -78,7 +82,8 @@ class Span:
         if self.session.tick - self._first < self.ticks:
             return False
         wall = self.ticks * self.session.rig.tick / max(self.session.pace, 1e-9)
-        return (time.perf_counter_ns() - self._start_ns) / NS_PER_S >= _WALL_SHARE * wall
+        wall = max(_WALL_SHARE * wall, self.least)
+        return (time.perf_counter_ns() - self._start_ns) / NS_PER_S >= wall
 
 
 @dataclass(slots=True)
@@ -140,15 +145,17 @@ class SignalProbe:
         while not span.over:
             yield from self.step()
 
-    def span(self, ticks: int) -> Span:
+    def span(self, ticks: int, least: float = 0.0) -> Span:
         """Return a span of time that begins now.
 
         Parameters
         ----------
         ticks : int
             Its length [ticks].
+        least : float
+            Least length, whatever the pace [wall s].
         """
-        return Span(session=self.session, ticks=ticks)
+        return Span(session=self.session, ticks=ticks, least=least)
 
     def until_read(self, tick: int, patience: int) -> Generator[Request, Any, bool]:
         """Wait until the controller has acted on an image, or the patience is out.
@@ -165,7 +172,7 @@ class SignalProbe:
         bool
             Whether it has.
         """
-        span = self.span(patience)
+        span = self.span(patience, least=LEAST_PATIENCE)
         while self.read_tick < tick and not span.over:
             yield from self.step()
         return self.read_tick >= tick
